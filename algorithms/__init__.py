@@ -1,0 +1,1 @@
+"""One module per Processing algorithm: parameters, help text, and read, compute, write."""

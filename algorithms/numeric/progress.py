@@ -1,0 +1,30 @@
+"""Progress and cancellation as one small callable.
+
+A progress callable takes the share of the work that is done (0 to 1) and raises
+``CancelledError`` when the user asked to stop. Long loops call it at least every 0.2 s.
+"""
+
+
+def silent(share):
+    """Report nothing and never cancel."""
+
+
+def part(progress, start, stop):
+    """Return a progress callable whose 0 to 1 is the stretch start to stop of another.
+
+    Parameters
+    ----------
+    progress : callable
+        The progress callable of the whole work.
+    start, stop : float
+        The stretch of the whole, 0 to 1, that the part covers.
+
+    Returns
+    -------
+    callable
+    """
+
+    def report(share):
+        progress(start + (stop - start) * share)
+
+    return report
