@@ -1,0 +1,29 @@
+"""What differs between versions of the host application, in one place."""
+
+from qgis.core import Qgis, QgsProcessing, QgsProcessingFeatureSource, QgsUnitTypes
+from qgis.PyQt.QtCore import QVariant
+
+# Field types: the short names serve both Qt 5 and Qt 6.
+INTEGER, BIG_INTEGER, REAL, TEXT = QVariant.Int, QVariant.LongLong, QVariant.Double, QVariant.String
+
+if Qgis.QGIS_VERSION_INT >= 33000:
+    METRES = Qgis.DistanceUnit.Meters
+else:
+    METRES = QgsUnitTypes.DistanceUnit.DistanceMeters
+
+if Qgis.QGIS_VERSION_INT >= 33600:
+    ANY_VECTOR = Qgis.ProcessingSourceType.Vector
+    POINTS = Qgis.ProcessingSourceType.VectorPoint
+    LINES = Qgis.ProcessingSourceType.VectorLine
+    POLYGONS = Qgis.ProcessingSourceType.VectorPolygon
+    RASTERS = Qgis.ProcessingSourceType.Raster
+    MAP_LAYERS = Qgis.ProcessingSourceType.MapLayer
+    SKIP_VALIDITY_CHECKS = Qgis.ProcessingFeatureSourceFlag.SkipGeometryValidityChecks
+else:
+    ANY_VECTOR = QgsProcessing.SourceType.TypeVectorAnyGeometry
+    POINTS = QgsProcessing.SourceType.TypeVectorPoint
+    LINES = QgsProcessing.SourceType.TypeVectorLine
+    POLYGONS = QgsProcessing.SourceType.TypeVectorPolygon
+    RASTERS = QgsProcessing.SourceType.TypeRaster
+    MAP_LAYERS = QgsProcessing.SourceType.TypeMapLayer
+    SKIP_VALIDITY_CHECKS = QgsProcessingFeatureSource.Flag.FlagSkipGeometryValidityChecks

@@ -1,0 +1,257 @@
+"""Default renderers of the outputs: legible without a click, units in the legend.
+
+A look is a callable that takes a loaded layer and sets its renderer.
+"""
+
+import os
+
+from qgis.core import (
+    QgsCategorizedSymbolRenderer,
+    QgsColorRampShader,
+    QgsFillSymbol,
+    QgsGraduatedSymbolRenderer,
+    QgsLineSymbol,
+    QgsMapLayer,
+    QgsMarkerSymbol,
+    QgsPalettedRasterRenderer,
+    QgsProcessingLayerPostProcessorInterface,
+    QgsProcessingUtils,
+    QgsRasterLayer,
+    QgsRasterShader,
+    QgsRendererCategory,
+    QgsRendererRange,
+    QgsSingleBandPseudoColorRenderer,
+    QgsSingleSymbolRenderer,
+    QgsVectorLayer,
+    QgsWkbTypes,
+)
+from qgis.PyQt.QtGui import QColor
+
+from .text import number, tr
+
+# From paper to dark; lightness falls evenly, so the order survives grey print.
+SEQUENCE = ("#f7f1e1", "#d9d2a6", "#a3b98a", "#5f9a84", "#2e7179", "#1d4763", "#141f3d")
+# Below, none, above: the two ends differ in hue and the middle is the lightest.
+DIVERGING = ("#1f4e79", "#6c9bc0", "#c9d9e3", "#f6f2e8", "#e8c79c", "#c07d3c", "#7a3d10")
+# Dark, light, middle grey when printed without colour.
+VERDICTS = {1: "#6b1f3f", 0: "#efe9da", -1: "#7fa6bd"}
+OUTLINE = "#3b3f46"
+
+_kept = {}
+
+
+def verdict_words():
+    """The three verdicts in words, by code."""
+    return {
+        1: tr("holds above the threshold under any cut"),
+        0: tr("depends on the cut"),
+        -1: tr("holds below the threshold under any cut"),
+    }
+
+
+def spread(colours, minimum, maximum):
+    """Pairs (value, colour) at equal steps between two values."""
+    step = (maximum - minimum) / (len(colours) - 1)
+    return [(minimum + index * step, colour) for index, colour in enumerate(colours)]
+
+
+def ramp(band, stops, unit, clear_below=None):
+    """Look: one band in a continuous ramp.
+
+    Parameters
+    ----------
+    band : int
+        From 1.
+    stops : sequence of (float, str)
+        Rising values and their colours.
+    unit : str
+        Written behind each value in the legend.
+    clear_below : float or None
+        Values up to this one are see-through.
+    """
+
+    def look(layer):
+        items = []
+        if clear_below is not None:
+            items.append(QgsColorRampShader.ColorRampItem(clear_below, QColor(0, 0, 0, 0), ""))
+        for value, colour in stops:
+            label = f"{number(value)} {unit}".strip()
+            items.append(QgsColorRampShader.ColorRampItem(value, QColor(colour), label))
+        shading = QgsColorRampShader(stops[0][0], stops[-1][0])
+        shading.setColorRampType(QgsColorRampShader.Type.Interpolated)
+        shading.setColorRampItemList(items)
+        shader = QgsRasterShader()
+        shader.setRasterShaderFunction(shading)
+        renderer = QgsSingleBandPseudoColorRenderer(layer.dataProvider(), band, shader)
+        renderer.setClassificationMin(stops[0][0])
+        renderer.setClassificationMax(stops[-1][0])
+        layer.setRenderer(renderer)
+
+    return look
+
+
+def raster_classes(band, classes):
+    """Look: codes of one band as plain classes.
+
+    Parameters
+    ----------
+    band : int
+    classes : sequence of (float, str, str)
+        Code, colour, words.
+    """
+
+    def look(layer):
+        entries = [
+            QgsPalettedRasterRenderer.Class(code, QColor(colour), words)
+            for code, colour, words in classes
+        ]
+        layer.setRenderer(QgsPalettedRasterRenderer(layer.dataProvider(), band, entries))
+
+    return look
+
+
+def raster_verdicts(band):
+    """Look: the three verdicts of a band."""
+    words = verdict_words()
+    return raster_classes(band, [(code, colour, words[code]) for code, colour in VERDICTS.items()])
+
+
+def _symbol(layer, colour, outline=OUTLINE, width=0.1):
+    kind = QgsWkbTypes.geometryType(layer.wkbType())
+    if kind == QgsWkbTypes.GeometryType.PolygonGeometry:
+        return QgsFillSymbol.createSimple(
+            {"color": colour, "outline_color": outline, "outline_width": str(width)}
+        )
+    if kind == QgsWkbTypes.GeometryType.LineGeometry:
+        return QgsLineSymbol.createSimple({"color": colour, "width": str(max(width, 0.5))})
+    return QgsMarkerSymbol.createSimple(
+        {"color": colour, "outline_color": outline, "outline_width": "0.1", "size": "2"}
+    )
+
+
+def single(colour, outline=OUTLINE, width=0.3):
+    """Look: every feature alike; the colour ``transparent`` leaves an outline only."""
+
+    def look(layer):
+        fill = "0,0,0,0" if colour == "transparent" else colour
+        layer.setRenderer(QgsSingleSymbolRenderer(_symbol(layer, fill, outline, width)))
+
+    return look
+
+
+def categories(field, classes, width=0.1):
+    """Look: classes of a field.
+
+    Parameters
+    ----------
+    field : str
+    classes : sequence of (value, str, str)
+        Value, colour, words; the value None stands for null.
+    """
+
+    def look(layer):
+        entries = []
+        for value, colour, words in classes:
+            key = "" if value is None else value
+            entries.append(QgsRendererCategory(key, _symbol(layer, colour, width=width), words))
+        layer.setRenderer(QgsCategorizedSymbolRenderer(field, entries))
+
+    return look
+
+
+def verdicts(field="verdict"):
+    """Look: the three verdicts of a field."""
+    words = verdict_words()
+    return categories(field, [(code, colour, words[code]) for code, colour in VERDICTS.items()])
+
+
+def steps(field, breaks, colours=SEQUENCE, unit="", width=0.1):
+    """Look: a number of a field in steps.
+
+    Parameters
+    ----------
+    field : str
+        A field or an expression.
+    breaks : sequence of float
+        Rising limits, one more than there are steps.
+    colours : sequence of str
+        At least as many as steps; taken evenly.
+    unit : str
+    """
+
+    def look(layer):
+        many = len(breaks) - 1
+        ranges = []
+        for index in range(many):
+            place = index * (len(colours) - 1) / max(many - 1, 1)
+            words = f"{number(breaks[index])} – {number(breaks[index + 1])} {unit}".strip()
+            symbol = _symbol(layer, colours[round(place)], width=width)
+            ranges.append(QgsRendererRange(breaks[index], breaks[index + 1], symbol, words))
+        layer.setRenderer(QgsGraduatedSymbolRenderer(field, ranges))
+
+    return look
+
+
+class _Styler(QgsProcessingLayerPostProcessorInterface):
+    """Styles a layer when the host has loaded it."""
+
+    def __init__(self, target, apply):
+        super().__init__()
+        self._target = target
+        self._apply = apply
+
+    def postProcessLayer(self, layer, context, feedback):
+        self._apply(layer)
+        layer.triggerRepaint()
+        _kept.pop(self._target, None)
+
+
+def style_output(target, kind, look, aliases, context):
+    """Make an output open with its look and field aliases, whichever way it is opened.
+
+    A file of one layer gets a style file beside it, which the host reads by itself; a layer that
+    the host loads when the run ends is styled then.
+
+    Parameters
+    ----------
+    target : str
+        Path or id of the output.
+    kind : str
+        ``raster`` or ``vector``.
+    look : callable or None
+    aliases : dict of str to str
+    context : QgsProcessingContext
+    """
+    if look is None and not aliases:
+        return
+
+    def apply(layer):
+        for name, alias in aliases.items():
+            index = layer.fields().indexFromName(name)
+            if index >= 0:
+                layer.setFieldAlias(index, alias)
+        if look is not None:
+            look(layer)
+
+    if os.path.isfile(target):
+        raster = kind == "raster"
+        layer = (QgsRasterLayer if raster else QgsVectorLayer)(
+            target, "output", "gdal" if raster else "ogr"
+        )
+        if layer.isValid():
+            apply(layer)
+            part = QgsMapLayer.StyleCategory
+            kinds = QgsMapLayer.StyleCategories(part.Symbology)
+            if aliases:
+                kinds |= part.Fields
+            layer.saveNamedStyle(os.path.splitext(target)[0] + ".qml", kinds)
+        del layer
+        # opening a raster made the host note statistics of its values beside the file
+        if os.path.exists(target + ".aux.xml"):
+            os.remove(target + ".aux.xml")
+    elif QgsProcessingUtils.mapLayerFromString(target, context) is None:
+        return
+    if context.willLoadLayerOnCompletion(target):
+        # the host keeps no reference of its own
+        _kept[target] = _Styler(target, apply)
+        context.layerToLoadOnCompletionDetails(target).setPostProcessor(_kept[target])

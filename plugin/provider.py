@@ -1,0 +1,39 @@
+"""The one provider; the list of algorithms stands here and nowhere else."""
+
+from importlib import import_module
+from pathlib import Path
+
+from qgis.core import QgsProcessingProvider
+from qgis.PyQt.QtGui import QIcon
+
+from .text import tr
+
+ICON = Path(__file__).resolve().parent.parent / "icons" / "steadfield.svg"
+
+ALGORITHMS = {
+    # module in algorithms: class
+}
+
+
+class Provider(QgsProcessingProvider):
+    """Offers the algorithms to the host."""
+
+    def id(self):
+        return "steadfield"
+
+    def name(self):
+        return "Steadfield"
+
+    def longName(self):
+        return tr("Steadfield: maps of confidential records")
+
+    def icon(self):
+        return QIcon(str(ICON))
+
+    def svgIconPath(self):
+        return str(ICON)
+
+    def loadAlgorithms(self):
+        for module, name in ALGORITHMS.items():
+            algorithm = getattr(import_module(f"...algorithms.{module}", __name__), name)
+            self.addAlgorithm(algorithm())

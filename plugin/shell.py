@@ -1,0 +1,43 @@
+"""Loads the provider into the host and takes it out again."""
+
+from qgis.core import Qgis, QgsApplication, QgsMessageLog
+
+from .packages import missing_packages
+
+
+class Shell:
+    """The plugin as the host sees it.
+
+    Parameters
+    ----------
+    iface : QgisInterface or None
+        None when the host runs without a window.
+    """
+
+    def __init__(self, iface):
+        self.iface = iface
+        self.provider = None
+
+    def initProcessing(self):
+        """Register the provider, or say which package is missing."""
+        problems = missing_packages()
+        for sentence in problems:
+            QgsMessageLog.logMessage(sentence, "Steadfield", Qgis.MessageLevel.Warning)
+            if self.iface is not None:
+                self.iface.messageBar().pushMessage(
+                    "Steadfield", sentence, Qgis.MessageLevel.Warning, 0
+                )
+        if problems:
+            return
+        from .provider import Provider
+
+        self.provider = Provider()
+        QgsApplication.processingRegistry().addProvider(self.provider)
+
+    def initGui(self):
+        self.initProcessing()
+
+    def unload(self):
+        if self.provider is not None:
+            QgsApplication.processingRegistry().removeProvider(self.provider)
+            self.provider = None

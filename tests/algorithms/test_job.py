@@ -1,0 +1,163 @@
+"""The shared run of an algorithm, on a small algorithm made for the purpose."""
+
+from pathlib import Path
+
+import numpy as np
+import pytest
+import shapely
+from osgeo import gdal
+from qgis.core import (
+    QgsApplication,
+    QgsProcessingException,
+    QgsProcessingParameterFeatureSink,
+    QgsProcessingProvider,
+    QgsRasterLayer,
+    QgsVectorLayer,
+)
+from steadfield.algorithms.base import SteadfieldAlgorithm
+from steadfield.algorithms.numeric.grid import covering
+from steadfield.plugin.looks import SEQUENCE, ramp, single, spread
+from steadfield.plugin.outputs import Column
+from steadfield.plugin.rasters import Band, read_raster
+from steadfield.plugin.report import Report
+
+
+class Counting(SteadfieldAlgorithm):
+    ID = "counting"
+    NAME = "Counting"
+    GROUP = "records"
+    QUESTION = "real"
+    HELP = "Counts records in pixels."
+
+    def define(self):
+        self.add_points("RECORDS", "Records", "Points.")
+        self.add_field("WEIGHT", "Weight", "RECORDS", "Weights.")
+        self.add_boundary()
+        self.add_length("CELL_SIZE", "Cell size", "Side of a pixel.", default=10.0)
+        self.add_seed()
+        self.add_working_crs()
+        self.add_raster("COUNTS", "Counts")
+        self.add(QgsProcessingParameterFeatureSink("PLACES", "Places", optional=True))
+        self.add_report()
+        self.add_numbers(TOTAL="Total")
+
+    def work(self, job):
+        records = job.records("RECORDS", "WEIGHT")
+        job.boundary()
+        for step in range(50):
+            job.progress(step / 100)
+        cell = job.length("CELL_SIZE")
+        bounds = records.x.min(), records.y.min(), records.x.max(), records.y.max()
+        grid = covering(bounds, cell, margin=cell)
+        rows, columns, _ = grid.pixels(records.x, records.y)
+        counts = np.full(grid.shape, np.nan)
+        counts[rows, columns] = 1.0
+        job.seed()
+        look = ramp(1, spread(SEQUENCE, 0, 1), "records")
+        job.write_raster("COUNTS", grid, [Band("records", counts, "records")], look)
+        places = shapely.points(records.x, records.y)
+        weights = Column("weight", "float", records.weight, "Weight (records)")
+        job.write_layer("PLACES", [weights], places, "point", single("#2e7179"))
+        report = Report("Counting", "How many?", f"There are {len(records)}.")
+        report.plot("Plot", lambda figure: figure.add_subplot().plot([1, 2]), "A line.")
+        job.write_report(report, ["Counted."], ["None."])
+        job.give("TOTAL", float(records.weight.sum()))
+
+
+class Probe(QgsProcessingProvider):
+    def id(self):
+        return "probe"
+
+    def name(self):
+        return "Probe"
+
+    def loadAlgorithms(self):
+        self.addAlgorithm(Counting())
+
+
+@pytest.fixture(scope="module")
+def probe(provider):
+    registry = QgsApplication.processingRegistry()
+    registry.addProvider(Probe())
+    yield
+    registry.removeProvider("probe")
+
+
+@pytest.fixture
+def count(probe, point_layer, watch, tmp_path):
+    import processing
+
+    def run(cancel_at=None, **parameters):
+        watcher = watch(cancel_at)
+        if cancel_at == 0:
+            watcher.cancel()
+        chosen = {
+            "RECORDS": point_layer([5, 25, 45], [5, 5, 25], weight=[1.0, 2.0, -1.0]),
+            "COUNTS": str(tmp_path / "counts.tif"),
+            "PLACES": str(tmp_path / "places.gpkg"),
+            "REPORT": str(tmp_path / "report.html"),
+            **parameters,
+        }
+        chosen = {key: value for key, value in chosen.items() if value is not None}
+        return processing.run("probe:counting", chosen, feedback=watcher), watcher
+
+    return run
+
+
+def test_outputs_are_whole_and_open_styled(count, tmp_path):
+    results, watcher = count(WEIGHT="weight", SEED=7)
+    assert results["TOTAL"] == 3
+    assert results["SEED_USED"] == 7
+    assert any("1 features with a negative weight" in words for words in watcher.warnings)
+    values, grid, unit = read_raster(results["COUNTS"])
+    assert np.nansum(values) == 2
+    assert (grid.cell, unit) == (10, "records")
+    raster = QgsRasterLayer(results["COUNTS"], "counts")
+    assert raster.renderer().type() == "singlebandpseudocolor"
+    ramp_items = raster.renderer().shader().rasterShaderFunction().colorRampItemList()
+    assert all("records" in item.label for item in ramp_items)
+    vector = QgsVectorLayer(results["PLACES"], "places", "ogr")
+    assert vector.attributeAlias(vector.fields().indexFromName("weight")) == "Weight (records)"
+    page = Path(results["REPORT"]).read_text(encoding="utf-8")
+    assert "There are 2." in page and "data:image/png" in page and str(tmp_path) not in page
+    endings = {"counts.tif", "counts.qml", "places.gpkg", "places.qml", "report.html"}
+    assert {file.name for file in tmp_path.iterdir()} - endings <= {"counts.tif.aux.xml"}
+
+
+@pytest.mark.parametrize("share", [0, 0.2])
+def test_cancelling_leaves_nothing(count, tmp_path, share):
+    with pytest.raises(QgsProcessingException, match="Cancelled"):
+        count(cancel_at=share)
+    assert list(tmp_path.iterdir()) == []
+
+
+def test_a_failure_takes_back_what_was_written(count, tmp_path):
+    with pytest.raises(QgsProcessingException, match="REPORT"):
+        count(REPORT=str(tmp_path / "no such folder" / "deeper" / "report.html"))
+    assert not [file for file in tmp_path.iterdir() if file.is_file()]
+
+
+def test_an_earlier_result_survives_a_cancelled_run(count, tmp_path):
+    count(PLACES=None, REPORT=None)
+    before = (tmp_path / "counts.tif").read_bytes()
+    with pytest.raises(QgsProcessingException, match="Cancelled"):
+        count(cancel_at=0.2, PLACES=None, REPORT=None)
+    assert (tmp_path / "counts.tif").read_bytes() == before
+
+
+def test_a_geographic_layer_is_worked_on_in_metres(count, point_layer):
+    layer = point_layer([8.0, 8.001, 8.002], [50.0, 50.0, 50.001], "EPSG:4326")
+    results, watcher = count(RECORDS=layer)
+    info = gdal.Info(results["COUNTS"], format="json")
+    assert "Azimuthal" in info["coordinateSystem"]["wkt"]
+    assert any("equal-area" in words for words in watcher.informed)
+
+
+def test_an_empty_layer_is_refused_by_name(count, point_layer):
+    with pytest.raises(QgsProcessingException, match=r"Records \(RECORDS\).*no features"):
+        count(RECORDS=point_layer([], []))
+
+
+def test_memory_outputs_are_loaded_styled(count):
+    results, _ = count(PLACES="memory:")
+    assert results["PLACES"].featureCount() == 3
