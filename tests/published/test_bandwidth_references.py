@@ -5,7 +5,7 @@ import math
 import numpy as np
 import pytest
 from scipy import integrate
-from steadfield.algorithms.numeric import bandwidth
+from steadfield.algorithms.numeric import bandwidth, crossvalidation
 
 
 def laplacian_roughness(density, dimensions, reach):
@@ -37,7 +37,7 @@ def best_constant(roughness, dimensions):
 
 
 def test_normal_scale_constants_are_those_in_print():
-    # Silverman (1986): 1.06 in section 3.4.2; A(K) = 0.96 and 1 for d = 2 in table 4.1
+    # Silverman (1986), equation 3.28: 1.06; for d = 2 the factor is 1 (Scott 1992, section 6.3)
     assert round(bandwidth.normal_scale_constant(1), 2) == 1.06
     assert bandwidth.normal_scale_constant(2) == 1.0
 
@@ -95,3 +95,50 @@ def test_normal_scale_equals_scott_factor_of_scipy():
     assert factor == pytest.approx(estimate.scotts_factor(), rel=1e-12)
     trace = np.trace(estimate._data_covariance)
     assert bandwidth.standard_spread(x, y, weights) == pytest.approx(np.sqrt(trace / 2), rel=1e-12)
+
+
+@pytest.fixture(scope="module")
+def two_groups():
+    generator = np.random.default_rng(12)
+    first = generator.normal((0, 0), 1.0, (70, 2))
+    return np.vstack([first, generator.normal((6, 2), 0.5, (50, 2))])
+
+
+def test_least_squares_score_equals_that_of_statsmodels(two_groups):
+    # statsmodels.nonparametric: KDEMultivariate.imse is the least-squares criterion
+    nonparametric = pytest.importorskip("statsmodels.nonparametric.kernel_density")
+    bandwidths = np.array([0.15, 0.4, 0.8, 1.6])
+    estimate = nonparametric.KDEMultivariate(two_groups, "cc", bw=[1.0, 1.0])
+    expected = [estimate.imse(np.array([value, value])) for value in bandwidths]
+    found = crossvalidation.least_squares_scores(*two_groups.T, bandwidths)
+    np.testing.assert_allclose(found, expected, rtol=1e-6)
+
+
+def test_leave_one_out_likelihood_equals_that_of_scikit_learn(two_groups):
+    neighbors = pytest.importorskip("sklearn.neighbors")
+    bandwidths = np.array([0.15, 0.4, 0.8, 1.6])
+    expected = [
+        np.mean(
+            [
+                neighbors.KernelDensity(bandwidth=value, rtol=1e-10)
+                .fit(np.delete(two_groups, left_out, axis=0))
+                .score(two_groups[left_out : left_out + 1])
+                for left_out in range(len(two_groups))
+            ]
+        )
+        for value in bandwidths
+    ]
+    found = crossvalidation.likelihood_scores(*two_groups.T, bandwidths)
+    np.testing.assert_allclose(found, expected, rtol=1e-6)
+
+
+def test_likelihood_choice_equals_the_grid_search_of_scikit_learn(two_groups):
+    neighbors = pytest.importorskip("sklearn.neighbors")
+    selection = pytest.importorskip("sklearn.model_selection")
+    few = two_groups[::3]
+    bandwidths = np.geomspace(0.2, 2.0, 9)
+    search = selection.GridSearchCV(
+        neighbors.KernelDensity(), {"bandwidth": bandwidths}, cv=selection.LeaveOneOut()
+    ).fit(few)
+    found = crossvalidation.likelihood_scores(*few.T, bandwidths)
+    assert bandwidths[np.argmax(found)] == search.best_params_["bandwidth"]
