@@ -8,6 +8,7 @@ import secrets
 from qgis.core import QgsProcessingUtils, QgsProperty, QgsVectorLayer
 
 from ..plugin import layers, outputs, rasters, reference_system
+from ..plugin.host import field_names
 from ..plugin.looks import style_output
 from ..plugin.report import versions
 from ..plugin.text import number, tr
@@ -198,7 +199,7 @@ class Job:
         """Name of a chosen field, None where none is chosen."""
         if not self.given(name):
             return None
-        chosen = self.algorithm.parameterAsFields(self.parameters, name, self.context)
+        chosen = field_names(self.algorithm, self.parameters, name, self.context)
         return chosen[0] if chosen else None
 
     def records(self, name, weight=None, fields=()):
@@ -376,8 +377,7 @@ class Job:
             crs = self.algorithm.parameterAsCrs(self.parameters, name, self.context)
             return crs.userFriendlyIdentifier()
         if kind == "field":
-            fields = self.algorithm.parameterAsFields(self.parameters, name, self.context)
-            return ", ".join(fields)
+            return ", ".join(field_names(self.algorithm, self.parameters, name, self.context))
         if kind == "distance":
             return f"{self.real(name):g} m"
         if isinstance(value, QgsProperty):

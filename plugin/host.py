@@ -1,10 +1,14 @@
 """What differs between versions of the host application, in one place."""
 
 from qgis.core import Qgis, QgsProcessing, QgsProcessingFeatureSource, QgsUnitTypes
-from qgis.PyQt.QtCore import QVariant
+from qgis.PyQt.QtCore import QMetaType, QVariant
 
-# Field types: the short names serve both Qt 5 and Qt 6.
-INTEGER, BIG_INTEGER, REAL, TEXT = QVariant.Int, QVariant.LongLong, QVariant.Double, QVariant.String
+if Qgis.QGIS_VERSION_INT >= 33800:
+    INTEGER, BIG_INTEGER = QMetaType.Type.Int, QMetaType.Type.LongLong
+    REAL, TEXT = QMetaType.Type.Double, QMetaType.Type.QString
+else:
+    INTEGER, BIG_INTEGER = QVariant.Int, QVariant.LongLong
+    REAL, TEXT = QVariant.Double, QVariant.String
 
 if Qgis.QGIS_VERSION_INT >= 33000:
     METRES = Qgis.DistanceUnit.Meters
@@ -27,3 +31,10 @@ else:
     RASTERS = QgsProcessing.SourceType.TypeRaster
     MAP_LAYERS = QgsProcessing.SourceType.TypeMapLayer
     SKIP_VALIDITY_CHECKS = QgsProcessingFeatureSource.Flag.FlagSkipGeometryValidityChecks
+
+
+def field_names(algorithm, parameters, name, context):
+    """Fields that a field parameter names, as a list."""
+    if hasattr(algorithm, "parameterAsStrings"):
+        return algorithm.parameterAsStrings(parameters, name, context)
+    return algorithm.parameterAsFields(parameters, name, context)

@@ -1,0 +1,124 @@
+"""Maps drawn by the host: a sheet with title, map, legend and scale bar as PNG."""
+
+from qgis.core import (
+    QgsLayerTree,
+    QgsLayoutExporter,
+    QgsLayoutItemLabel,
+    QgsLayoutItemLegend,
+    QgsLayoutItemMap,
+    QgsLayoutItemScaleBar,
+    QgsLayoutPoint,
+    QgsLayoutSize,
+    QgsPrintLayout,
+    QgsRectangle,
+    QgsUnitTypes,
+)
+from qgis.PyQt.QtGui import QColor, QFont
+
+MILLIMETRES = QgsUnitTypes.LayoutUnit.LayoutMillimeters
+WIDTH, HEIGHT, LEGEND_WIDTH, TITLE_HEIGHT = 230, 150, 62, 14
+
+
+def _place(item, layout, x, y, width, height):
+    layout.addLayoutItem(item)
+    item.attemptMove(QgsLayoutPoint(x, y, MILLIMETRES))
+    item.attemptResize(QgsLayoutSize(width, height, MILLIMETRES))
+
+
+def map_sheet(project, layers, title, path, extent, legend_of=None, dpi=120):
+    """Draw layers, the first on top, as one sheet.
+
+    Parameters
+    ----------
+    project : QgsProject
+        Holds the layers; its CRS is the map's.
+    layers : sequence of QgsMapLayer
+    title : str
+    path : str
+        PNG file to write.
+    extent : QgsRectangle
+    legend_of : sequence of QgsMapLayer or None
+        Layers in the legend; all by default.
+    dpi : int
+
+    Raises
+    ------
+    RuntimeError
+        The sheet could not be written.
+    """
+    layout = QgsPrintLayout(project)
+    layout.initializeDefaults()
+    layout.pageCollection().page(0).setPageSize(QgsLayoutSize(WIDTH, HEIGHT, MILLIMETRES))
+    heading = QgsLayoutItemLabel(layout)
+    heading.setText(title)
+    heading.setFont(QFont("Noto Sans", 14))
+    _place(heading, layout, 5, 4, WIDTH - 10, TITLE_HEIGHT - 4)
+    drawn = QgsLayoutItemMap(layout)
+    map_width, map_height = WIDTH - LEGEND_WIDTH - 10, HEIGHT - TITLE_HEIGHT - 5
+    _place(drawn, layout, 5, TITLE_HEIGHT, map_width, map_height)
+    drawn.setCrs(project.crs())
+    drawn.setLayers(list(layers))
+    drawn.setKeepLayerSet(True)
+    drawn.setExtent(_shaped(extent, map_width / map_height))
+    drawn.setFrameEnabled(True)
+    drawn.setFrameStrokeColor(QColor("#b9b2a0"))
+    _add_legend(layout, drawn, legend_of or layers)
+    _add_scale(layout, drawn, extent.width())
+    settings = QgsLayoutExporter.ImageExportSettings()
+    settings.dpi = dpi
+    written = QgsLayoutExporter(layout).exportToImage(path, settings)
+    if written != QgsLayoutExporter.ExportResult.Success:
+        raise RuntimeError(f"the map {path} was not written ({written})")
+
+
+def _shaped(extent, wanted):
+    """An extent grown to the shape of the map's frame, with a small margin."""
+    width, height = extent.width() * 1.04, extent.height() * 1.04
+    if width / height < wanted:
+        width = height * wanted
+    else:
+        height = width / wanted
+    centre = extent.center()
+    return QgsRectangle(
+        centre.x() - width / 2, centre.y() - height / 2,
+        centre.x() + width / 2, centre.y() + height / 2,
+    )  # fmt: skip
+
+
+def _add_legend(layout, drawn, layers):
+    legend = QgsLayoutItemLegend(layout)
+    legend.setLinkedMap(drawn)
+    legend.setAutoUpdateModel(False)
+    tree = QgsLayerTree()
+    for layer in layers:
+        tree.addLayer(layer)
+    legend.model().setRootGroup(tree)
+    legend.setWrapString("|")
+    legend.setResizeToContents(True)
+    _place(legend, layout, WIDTH - LEGEND_WIDTH - 3, TITLE_HEIGHT, LEGEND_WIDTH, 100)
+    legend.adjustBoxSize()
+    # the legend's own copy must outlive this function
+    layout.setProperty("legend tree", tree)
+
+
+def _add_scale(layout, drawn, width):
+    scale = QgsLayoutItemScaleBar(layout)
+    scale.setLinkedMap(drawn)
+    scale.setStyle("Line Ticks Up")
+    scale.setUnits(QgsUnitTypes.DistanceUnit.DistanceKilometers)
+    scale.setUnitLabel("km")
+    scale.setNumberOfSegments(2)
+    scale.setNumberOfSegmentsLeft(0)
+    scale.setUnitsPerSegment(_round_length(width / 8000))
+    scale.update()
+    _place(scale, layout, WIDTH - LEGEND_WIDTH - 2, HEIGHT - 18, LEGEND_WIDTH, 12)
+
+
+def _round_length(value):
+    """The nearest of 1, 2 or 5 times a power of ten below a value."""
+    power = 1.0
+    while power > value:
+        power /= 10
+    while power * 10 <= value:
+        power *= 10
+    return max(step * power for step in (1, 2, 5) if step * power <= value)
