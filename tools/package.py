@@ -11,10 +11,21 @@ ROOT = Path(__file__).resolve().parent.parent
 PARTS = ["plugin", "algorithms", "icons"]
 FILES = ["__init__.py", "metadata.txt", "LICENSE", "README.md", "CHANGELOG.md"]
 ENDINGS = {".py", ".txt", ".md", ".svg", ".model3", ".html", ".png", ""}
-NEEDED = (
-    "name qgisMinimumVersion qgisMaximumVersion description about version author email "
-    "repository tracker supportsQt6 hasProcessingProvider icon"
-).split()
+NEEDED = [
+    "name",
+    "qgisMinimumVersion",
+    "qgisMaximumVersion",
+    "description",
+    "about",
+    "version",
+    "author",
+    "email",
+    "repository",
+    "tracker",
+    "supportsQt6",
+    "hasProcessingProvider",
+    "icon",
+]
 # unscoped enums of Qt 5 that Qt 6 has dropped
 UNSCOPED = re.compile(r"\bQt\.(Align\w+|\w+Button|UserRole|ISODate|Horizontal|Vertical)\b")
 
