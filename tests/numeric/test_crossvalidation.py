@@ -2,7 +2,7 @@
 
 import numpy as np
 import pytest
-from steadfield.algorithms.numeric import bandwidth, crossvalidation
+from steadfield.algorithms.numeric import bandwidth, crossvalidation, pairsums
 from steadfield.algorithms.numeric.errors import CancelledError, InputError
 
 
@@ -82,8 +82,11 @@ def test_least_squares_curve_equals_the_pair_sum(kind):
     assert np.all(np.abs(found - expected) <= 1e-6 * np.maximum(np.abs(expected), first))
 
 
+@pytest.mark.parametrize("pairs_per_node", [0, 1e9])
 @pytest.mark.parametrize("kind", KINDS)
-def test_likelihood_curve_equals_the_pair_sum(kind):
+def test_likelihood_curve_equals_the_pair_sum(kind, pairs_per_node, monkeypatch):
+    # read off surfaces, or all pairs
+    monkeypatch.setattr(crossvalidation, "PAIRS_PER_NODE", pairs_per_node)
     x, y, weights = pattern(kind)
     bandwidths = bandwidths_for(kind, x, y)
     expected = likelihood_by_pairs(x, y, weights, bandwidths)
@@ -91,7 +94,8 @@ def test_likelihood_curve_equals_the_pair_sum(kind):
     np.testing.assert_allclose(found, expected, rtol=0, atol=5e-6)
 
 
-def test_likelihood_of_very_lonely_records_does_not_underflow():
+def test_likelihood_of_very_lonely_records_does_not_underflow(monkeypatch):
+    monkeypatch.setattr(crossvalidation, "PAIRS_PER_NODE", 0)
     x, y = np.array([0.0, 1000.0, 2500.0]), np.zeros(3)
     bandwidths = np.array([2.0, 5.0])
     expected = likelihood_by_pairs(x, y, np.ones(3), bandwidths)
@@ -100,7 +104,8 @@ def test_likelihood_of_very_lonely_records_does_not_underflow():
     np.testing.assert_allclose(found, expected, rtol=1e-12)
 
 
-def test_likelihood_of_a_record_far_from_a_dense_crowd_is_exact():
+def test_likelihood_of_a_record_far_from_a_dense_crowd_is_exact(monkeypatch):
+    monkeypatch.setattr(crossvalidation, "PAIRS_PER_NODE", 0)
     generator = np.random.default_rng(2)
     x, y = generator.normal(0, 1, (2, 400))
     x[0] = 30.0
@@ -112,14 +117,12 @@ def test_likelihood_of_a_record_far_from_a_dense_crowd_is_exact():
 
 def test_weights_count_equal_records_in_the_pair_sum():
     x, y, _ = pattern("round", 60)
-    spectrum = crossvalidation.record_spectrum(x, y, np.full(60, 3.0), 100.0, 400.0)
-    thrice = crossvalidation.record_spectrum(
-        np.repeat(x, 3), np.repeat(y, 3), np.ones(180), 100.0, 400.0
-    )
+    spectrum = pairsums.record_spectrum(x, y, np.full(60, 3.0), 100.0, 400.0)
+    thrice = pairsums.record_spectrum(np.repeat(x, 3), np.repeat(y, 3), np.ones(180), 100.0, 400.0)
     widths = np.array([100.0, 300.0])
     np.testing.assert_allclose(
-        crossvalidation.pair_sums(spectrum, widths),
-        crossvalidation.pair_sums(thrice, widths),
+        pairsums.pair_sums(spectrum, widths),
+        pairsums.pair_sums(thrice, widths),
         rtol=1e-12,
     )
 
@@ -151,9 +154,9 @@ def test_bandwidths_that_no_lattice_holds_are_refused_with_one_that_fits():
     x, y = generator.uniform(0, 1e5, (2, 3000))
     with pytest.raises(InputError, match="start at"):
         crossvalidation.least_squares_scores(x, y, [1.0, 1000.0])
-    least = crossvalidation.narrowest_bandwidth(x, y, 1000.0)
+    least = pairsums.narrowest_bandwidth(x, y, 1000.0)
     assert 50 < least < 200
-    crossvalidation.record_spectrum(x, y, None, 20 * least, 1000.0 + 20 * least)
+    pairsums.record_spectrum(x, y, None, 20 * least, 1000.0 + 20 * least)
 
 
 def test_cancelling_stops_the_likelihood():

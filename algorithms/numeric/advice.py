@@ -1,0 +1,353 @@
+"""One advised bandwidth, with the reason and what in the records stands against it."""
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+import shapely
+from scipy.spatial import cKDTree
+
+from . import bandwidth
+from .crossvalidation import least_squares_scores, likelihood_scores
+from .errors import InputError
+from .pairsums import narrowest_bandwidth, record_spectrum
+from .progress import part, silent
+
+BANDWIDTHS = 60
+# Cross-validation from fewer records than these is erratic (common practice, no source)
+FEWEST_RECORDS, FEW_RECORDS = 30, 100
+# Share of stacked pairs per record above which a minimum is no longer trusted. With Gaussian
+# kernels in the plane the score falls without limit from 1/3 on (Silverman 1986, section 3.4.3)
+STACKED_PAIRS = 0.2
+STACKED_RECORDS = 0.2
+AGREEMENT = 2.0
+NEAR_BOUNDARY = 0.1
+SAMPLE = 20_000
+
+
+@dataclass(frozen=True)
+class Diagnosis:
+    """What the records are like, as far as it bears on a bandwidth.
+
+    Attributes
+    ----------
+    records, places : int
+        Records with weight, and different coordinates among them.
+    effective : float
+        (sum w)^2 / sum w^2.
+    stacked : float
+        Share of the records that have their coordinates in common with another.
+    pairs : float
+        Weight products of pairs on one place over the sum of squared weights; without weights
+        the mean number of other records on a record's place.
+    collapses : bool
+        The least-squares score falls without limit as the bandwidth goes to 0.
+    nearest : float
+        Distance from which on three quarters of the places have their nearest other place, metres.
+    rounding : float
+        Spacing of the lattice that the coordinates were rounded to, metres; 0 where none is seen.
+    outside : int
+        Records outside the boundary, left out.
+    """
+
+    records: int
+    places: int
+    effective: float
+    stacked: float
+    pairs: float
+    collapses: bool
+    nearest: float
+    rounding: float
+    outside: int
+
+
+@dataclass(frozen=True)
+class Advice:
+    """Bandwidths by four rules, the advised one and why.
+
+    Attributes
+    ----------
+    normal_scale, oversmoothed : float
+        Metres.
+    least_squares, likelihood : float
+        Metres; NaN where the curve has no best value inside the range.
+    advised : float
+        Metres.
+    reason : str
+        One sentence.
+    warnings : tuple of str
+        What a reader must know of the records, one sentence or two each.
+    bandwidths : (m,) array
+        Of the curves, metres.
+    least_squares_curve : (m,) array
+        Score, per square metre; small is good.
+    likelihood_curve : (m,) array
+        Mean log density per square metre; large is good. NaN where not asked.
+    near_boundary : float
+        Share of the records within one advised bandwidth of the boundary; NaN without one.
+    diagnosis : Diagnosis
+    """
+
+    normal_scale: float
+    oversmoothed: float
+    least_squares: float
+    likelihood: float
+    advised: float
+    reason: str
+    warnings: tuple
+    bandwidths: np.ndarray
+    least_squares_curve: np.ndarray
+    likelihood_curve: np.ndarray
+    near_boundary: float
+    diagnosis: Diagnosis
+
+
+def advise(x, y, weights=None, boundary=None, progress=silent):
+    """Work out bandwidths by four rules and advise one.
+
+    The advised value is the geometric mean of the two cross-validated ones while they agree
+    within a factor of two, the least-squares one when they do not, and a rule of thumb when the
+    records are too few, stacked or rounded for cross-validation.
+
+    Parameters
+    ----------
+    x, y : (n,) arrays
+        Places in metres.
+    weights : (n,) array, optional
+        Not negative.
+    boundary : shapely geometry, optional
+        Study area in the same metres; records outside are left out.
+    progress : callable
+
+    Returns
+    -------
+    Advice
+
+    Raises
+    ------
+    InputError
+        No record with weight, or all on one place.
+    """
+    x, y, weights = bandwidth.checked_records(x, y, weights)
+    x, y, weights, outside = _inside(x, y, weights, boundary)
+    normal = bandwidth.normal_scale(x, y, weights)
+    widest = bandwidth.oversmoothed(x, y, weights)
+    diagnosis = diagnose(x, y, weights, outside)
+    progress(0.05)
+    bandwidths = search_range(x, y, normal, widest, diagnosis)
+    spectrum = record_spectrum(
+        x, y, weights, bandwidths[0], bandwidths[-1], part(progress, 0.05, 0.2)
+    )
+    squares = least_squares_scores(x, y, bandwidths, weights, spectrum)
+    likelihoods = likelihood_scores(x, y, bandwidths, weights, spectrum, part(progress, 0.2, 1.0))
+    least_squares = best_inside(bandwidths, -squares)
+    likelihood = best_inside(bandwidths, likelihoods)
+    advised, reason = _choose(diagnosis, normal, widest, least_squares, likelihood)
+    near = _near_boundary(x, y, weights, boundary, advised)
+    warnings = _warnings(diagnosis, advised, least_squares, likelihood, near)
+    return Advice(
+        normal,
+        widest,
+        least_squares,
+        likelihood,
+        advised,
+        reason,
+        tuple(warnings),
+        bandwidths,
+        squares,
+        likelihoods,
+        near,
+        diagnosis,
+    )
+
+
+def diagnose(x, y, weights, outside=0):
+    """Count stacked records and look for rounded coordinates; returns a Diagnosis."""
+    order = np.lexsort((y, x))
+    starts = np.append(True, (np.diff(x[order]) != 0) | (np.diff(y[order]) != 0))
+    place = np.cumsum(starts) - 1
+    sizes = np.bincount(place)
+    held = np.bincount(place, weights[order])
+    squares = float((weights**2).sum())
+    together = float((held**2).sum()) - squares
+    total = float(weights.sum())
+    apart = total**2 - squares
+    nearest = nearest_distances(x[order][starts], y[order][starts])
+    return Diagnosis(
+        records=x.size,
+        places=sizes.size,
+        effective=bandwidth.effective_size(weights),
+        stacked=float(sizes[sizes > 1].sum() / x.size),
+        pairs=together / squares,
+        collapses=bool(together / apart > (squares + together) / (4 * total**2)),
+        nearest=float(np.quantile(nearest, 0.25)),
+        rounding=lattice_spacing(nearest),
+        outside=outside,
+    )
+
+
+def nearest_distances(x, y):
+    """Distance to the nearest other place from up to some 20,000 of different places."""
+    places = np.column_stack([x - x.min(), y - y.min()])
+    some = places[:: max(1, x.size // SAMPLE)]
+    return cKDTree(places).query(some, k=2, workers=-1)[0][:, 1]
+
+
+def lattice_spacing(nearest):
+    """Spacing of the lattice that places lie on, 0 where they do not.
+
+    On a lattice most places have their nearest neighbour at one and the same distance, whatever
+    way the lattice is turned; at random hardly two have. A lattice so sparsely used that this
+    fails is finer than what the records show anyway.
+
+    Parameters
+    ----------
+    nearest : (n,) array
+        Distances to the nearest other place.
+    """
+    if nearest.size < 20:
+        return 0.0
+    spacing = np.quantile(nearest, 0.05)
+    on_lattice = np.abs(nearest - spacing) <= 0.02 * spacing
+    return float(np.median(nearest[on_lattice])) if on_lattice.mean() > 0.5 else 0.0
+
+
+def search_range(x, y, normal, widest, diagnosis):
+    """Bandwidths to examine, up to a quarter above the oversmoothed one.
+
+    The lower end is a fortieth of the normal scale, or more where the nearest neighbours, the
+    rounding of the coordinates or the size of the lattice allow no narrower ones.
+    """
+    highest = 1.25 * max(normal, widest)
+    lowest = max(
+        normal / 40,
+        diagnosis.nearest / 2,
+        diagnosis.rounding,
+        narrowest_bandwidth(x, y, highest),
+    )
+    return np.geomspace(min(lowest, highest / 3), highest, BANDWIDTHS)
+
+
+def best_inside(bandwidths, merit):
+    """Bandwidth of the highest merit that lies inside the range, refined by a parabola.
+
+    Where merit keeps rising towards 0, the widest local best is taken (Park & Marron 1990,
+    Journal of the American Statistical Association 85:66-72).
+
+    Returns
+    -------
+    float
+        NaN when no bandwidth inside the range is better than both of its neighbours.
+    """
+    inside = np.flatnonzero((merit[1:-1] > merit[:-2]) & (merit[1:-1] >= merit[2:])) + 1
+    if inside.size == 0:
+        return math.nan
+    falling_to_zero = merit[0] >= merit[inside].max()
+    place = inside[-1] if falling_to_zero else inside[np.argmax(merit[inside])]
+    before, here, after = merit[place - 1 : place + 2]
+    offset = 0.5 * (before - after) / (before - 2 * here + after)
+    step = math.log(bandwidths[1] / bandwidths[0])
+    return float(bandwidths[place] * math.exp(offset * step))
+
+
+def _inside(x, y, weights, boundary):
+    if boundary is None:
+        return x, y, weights, 0
+    shapely.prepare(boundary)
+    inside = shapely.intersects_xy(boundary, x, y)
+    if not inside.any():
+        raise InputError(
+            f"None of the {x.size} records lies inside BOUNDARY; check that both layers show the "
+            "same area and that their CRS are set."
+        )
+    return x[inside], y[inside], weights[inside], int(x.size - inside.sum())
+
+
+def _near_boundary(x, y, weights, boundary, distance):
+    if boundary is None:
+        return math.nan
+    step = max(1, x.size // SAMPLE)
+    rim = shapely.buffer(shapely.boundary(boundary), distance)
+    shapely.prepare(rim)
+    near = shapely.intersects_xy(rim, x[::step], y[::step])
+    return float(weights[::step][near].sum() / weights[::step].sum())
+
+
+def _choose(diagnosis, normal, widest, least_squares, likelihood):
+    """The advised bandwidth and the reason in a sentence."""
+    if diagnosis.effective < FEWEST_RECORDS:
+        return widest, (
+            f"With an effective {diagnosis.effective:.0f} records cross-validation is left to "
+            "chance, so the oversmoothed value is advised: it invents no structure."
+        )
+    floor = diagnosis.rounding
+    if diagnosis.pairs > STACKED_PAIRS or diagnosis.stacked > STACKED_RECORDS:
+        return max(normal, floor), (
+            "Records stacked on the same coordinates mislead cross-validation, so the "
+            + ("normal-scale value" if normal >= floor else "spacing of the coordinates")
+            + " is advised without it."
+        )
+    if math.isnan(least_squares) and math.isnan(likelihood):
+        return max(normal, floor), (
+            "Neither cross-validation curve has a best value inside its range, so the "
+            "normal-scale value is advised."
+        )
+    if math.isnan(least_squares) or math.isnan(likelihood):
+        name = "likelihood" if math.isnan(least_squares) else "least-squares"
+        value = likelihood if math.isnan(least_squares) else least_squares
+        return max(value, floor), (
+            f"Only the {name} curve has a best value inside its range, and it is advised."
+        )
+    wider = max(least_squares, likelihood) / min(least_squares, likelihood)
+    if wider <= AGREEMENT:
+        return max(math.sqrt(least_squares * likelihood), floor), (
+            "The two cross-validations agree within a factor of "
+            f"{wider:.2f}, and their geometric mean, which varies less than either, is advised."
+        )
+    return max(least_squares, floor), (
+        f"The two cross-validations differ by a factor of {wider:.1f}, as happens when lonely "
+        "records pull the likelihood, so the least-squares value is advised."
+    )
+
+
+def _warnings(diagnosis, advised, least_squares, likelihood, near):
+    words = []
+    if diagnosis.outside:
+        words.append(f"{diagnosis.outside} records lie outside BOUNDARY and were left out.")
+    if diagnosis.effective < FEW_RECORDS:
+        counted = f"{diagnosis.records} records"
+        if diagnosis.effective < 0.95 * diagnosis.records:
+            counted += f", an effective {diagnosis.effective:.0f} by their weights,"
+        words.append(
+            f"{counted} are few: cross-validation varies a good deal from one such sample to the "
+            "next. Look at the surface at half and at twice the advised value too."
+        )
+    if diagnosis.stacked > 0.02:
+        words.append(
+            f"{100 * diagnosis.stacked:.0f} % of the records share their coordinates with another "
+            f"({diagnosis.records} records on {diagnosis.places} places)."
+            + (
+                " The least-squares score falls without limit as the bandwidth goes to 0, so its "
+                "lowest value says nothing."
+                if diagnosis.collapses
+                else " This draws cross-validation towards narrow bandwidths."
+            )
+        )
+    if diagnosis.rounding > 0.1 * advised:
+        words.append(
+            f"The coordinates look rounded to a lattice of about {diagnosis.rounding:.3g} m, so "
+            "no detail below that is in the data; narrower bandwidths were not considered."
+        )
+    for value, name in ((least_squares, "least-squares"), (likelihood, "likelihood")):
+        if math.isnan(value):
+            words.append(
+                f"The {name} curve has no best value inside the range examined: it keeps improving "
+                "to one end."
+            )
+    if near > NEAR_BOUNDARY:
+        words.append(
+            f"{100 * near:.0f} % of the records lie within one bandwidth of the boundary. "
+            "Cross-validation takes the ground outside for empty and comes out somewhat narrow; "
+            "switch on an edge correction for the surface."
+        )
+    return words
