@@ -26,61 +26,6 @@ BATCH = 25
 _BLOCK = 8192
 
 
-@dataclass(frozen=True)
-class Ground:
-    """What zonings are laid over; make it with `ground`.
-
-    Attributes
-    ----------
-    x, y, count : (events,) arrays
-        Places of the records and how many stand there; no place twice.
-    total_x, total_y, total : (totals,) arrays
-        The same for what they are compared with: people at risk, or samples of area.
-    place_x, place_y : (places,) arrays
-        Places that are given a value.
-    bounds : (left, bottom, right, top) of all of these
-    kind : {"share", "rate"}
-    threshold : float
-        In units of count over total.
-    least_total : float
-        A cell with less than this in total has no value.
-    """
-
-    x: np.ndarray
-    y: np.ndarray
-    count: np.ndarray
-    total_x: np.ndarray
-    total_y: np.ndarray
-    total: np.ndarray
-    place_x: np.ndarray
-    place_y: np.ndarray
-    bounds: tuple
-    kind: str
-    threshold: float
-    least_total: float
-
-
-@dataclass(frozen=True)
-class Halves:
-    """The held-out split of the events for the allocation of a budget.
-
-    Attributes
-    ----------
-    budget : float
-        Share of the total that is covered, 0 to 1.
-    half : (events,) array
-        Count of the drawn half at each event place of the ground.
-    place_half, place_count, place_total : (places,) arrays
-        The half, all events and the total of each evaluated place.
-    """
-
-    budget: float
-    half: np.ndarray
-    place_half: np.ndarray
-    place_count: np.ndarray
-    place_total: np.ndarray
-
-
 @dataclass
 class Scale:
     """All scenarios of one cell size; grows by `merge`.
@@ -125,73 +70,20 @@ class Scale:
         return sums / np.maximum(self.moments.count, 1)
 
 
-def ground(events, totals, places, kind, threshold=None, least_total=0.0):
-    """Check and pack the data of a study.
+def memory_needed(places, scales, cells, budget=False):
+    """Bytes that `run_scales` takes at its peak, about.
 
     Parameters
     ----------
-    events : (x, y, count) of (n,) arrays
-    totals : (x, y, total) of (m,) arrays
-    places : (x, y) of (places,) arrays
-    kind : {"share", "rate"}
-    threshold : float, optional
-        The overall value, sum of count over sum of total, unless given.
-    least_total : float
-        A cell with less than this in total has no value.
-
-    Returns
-    -------
-    Ground
-
-    Raises
-    ------
-    InputError
-        Without any event, any total or any place.
+    places, scales : int
+    cells : int
+        Cells of the finest tiling over the extent.
+    budget : bool
+        Whether halves are carried along.
     """
-    x, y, count = _stacked(*events)
-    total_x, total_y, total = _stacked(*totals)
-    place_x, place_y = (np.ascontiguousarray(part, dtype=float) for part in places)
-    if not count.sum() > 0:
-        raise InputError("RECORDS: there is nothing to count; the sum of the counts is 0.")
-    if not total.sum() > 0:
-        raise InputError("The total that records are compared with is 0 everywhere.")
-    if not len(place_x):
-        raise InputError("There is no place to evaluate; check the boundary and the grid.")
-    every_x = np.concatenate([x, total_x, place_x])
-    every_y = np.concatenate([y, total_y, place_y])
-    bounds = (every_x.min(), every_y.min(), every_x.max(), every_y.max())
-    if threshold is None:
-        threshold = count.sum() / total.sum()
-    return Ground(
-        x, y, count, total_x, total_y, total, place_x, place_y,
-        tuple(float(edge) for edge in bounds), kind, float(threshold), float(least_total),
-    )  # fmt: skip
-
-
-def split(study, event_places, total_places, budget, generator):
-    """Draw the held-out halves for the allocation of a budget.
-
-    Parameters
-    ----------
-    study : Ground
-    event_places, total_places : (events,), (totals,) int arrays
-        Evaluated place that each event place and total place of the ground lies in.
-    budget : float
-    generator : numpy.random.Generator
-
-    Returns
-    -------
-    Halves
-    """
-    half = allocation.random_half(study.count, generator)
-    number = len(study.place_x)
-    return Halves(
-        allocation.check_budget(budget),
-        half,
-        np.bincount(event_places, weights=half, minlength=number),
-        np.bincount(event_places, weights=study.count, minlength=number),
-        np.bincount(total_places, weights=study.total, minlength=number),
-    )
+    columns = 8 if budget else 6
+    under_way = _ahead() + 2
+    return 8 * (places * columns * (under_way + scales) + 3 * cells * columns * under_way)
 
 
 def run_scales(
@@ -281,19 +173,11 @@ def allocate(scales, halves):
     return allocation.Allocation(
         halves.budget,
         float(halves.place_count.sum()),
-        np.concatenate([scale.statistics["reached"] for scale in scales]),
+        np.concatenate([scale.statistics["events_reached"] for scale in scales]),
         allocation.held_out_events_by_value(half_values, other_values, *counted, halves.budget),
         None,
         allocation.best_possible(halves.place_count, halves.place_total, halves.budget),
     )
-
-
-def _stacked(x, y, weight):
-    """Merge points on the same spot, in order of x and then y."""
-    x, y, weight = (np.asarray(part, float) for part in (x, y, weight))
-    places, index = np.unique(np.stack([x, y], axis=1), axis=0, return_inverse=True)
-    summed = np.bincount(index.ravel(), weights=weight, minlength=len(places))
-    return np.ascontiguousarray(places[:, 0]), np.ascontiguousarray(places[:, 1]), summed
 
 
 def _batch(study, size, shape, rotate, task, halves, tick):
@@ -365,11 +249,16 @@ def tiling_values(study, tiling, halves=None):
     if halves is not None:
         half = np.bincount(events, weights=halves.half, minlength=block.cells)[used]
         columns += [half / used_total, (used_count - half) / used_total]
-        statistics["reached"] = allocation.held_out_events(
+        statistics["events_reached"] = allocation.held_out_events(
             half, used_count, used_total, halves.budget
         )
     table[used] = np.stack(columns, axis=1)
     return table, block, statistics
+
+
+def _ahead():
+    """Batches that may be under way or finished but not yet merged."""
+    return 2 * (os.cpu_count() or 1)
 
 
 def _in_order(work, tasks, steps, executor, progress):
@@ -391,7 +280,7 @@ def _in_order(work, tasks, steps, executor, progress):
         for position, task in enumerate(tasks):
             yield work(task, ticked(position))
         return
-    waiting, ahead, submitted = deque(), 2 * (os.cpu_count() or 1), 0
+    waiting, ahead, submitted = deque(), _ahead(), 0
     try:
         while submitted < len(tasks) or waiting:
             while submitted < len(tasks) and len(waiting) < ahead:

@@ -167,6 +167,24 @@ def morans_i(value, i, j, zoning=None):
     return result if value.ndim > 1 else float(result[0])
 
 
+def summarise(values):
+    """Lowest, 5 %, 50 % and 95 % quantile, and highest of a statistic over scenarios.
+
+    Parameters
+    ----------
+    values : (scenarios,) array
+        NaN where a scenario has none.
+
+    Returns
+    -------
+    (5,) array
+        Quantiles interpolated between neighbouring values; NaN without any value.
+    """
+    values = np.asarray(values, float)
+    values = values[~np.isnan(values)]
+    return np.quantile(values, [0, 0.05, 0.5, 0.95, 1]) if len(values) else np.full(5, np.nan)
+
+
 def _or_missing(values, known):
     return np.where(known, values, np.nan)
 

@@ -15,6 +15,7 @@ sys.path.insert(0, str(Path(__file__).resolve().parents[1]))
 import conftest  # noqa: F401
 from steadfield.algorithms.numeric import lattice_variance
 from steadfield.algorithms.numeric.grid import Grid
+from steadfield.algorithms.numeric.ground import ground
 
 SIZES = (200, 300, 450, 700, 1000, 1500)
 
@@ -24,7 +25,7 @@ def main(replicates=500):
     residents = generator.uniform(0, 10_000, (2, 90_000))
     records = generator.uniform(0, 10_000, (2, 6_000))
     x, y = Grid(0, 10_000, 10_000 / 300, 300, 300).centres()
-    study = lattice_variance.ground(
+    study = ground(
         (*records, np.ones(6_000)), (*residents, np.ones(90_000)), (x.ravel(), y.ravel()), "share"
     )
     first = None

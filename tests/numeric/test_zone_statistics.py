@@ -108,3 +108,9 @@ def test_several_zonings_with_their_own_pairs_and_missing_zones_agree_with_singl
     assert found[0] == pytest.approx(expected, rel=1e-12)
     assert found[1] == pytest.approx(statistics.morans_i(values[1], i, j), rel=1e-12)
     assert np.isnan(found[2])
+
+
+def test_summary_of_a_statistic_skips_what_is_missing():
+    values = np.r_[np.arange(101.0), np.nan]
+    np.testing.assert_allclose(statistics.summarise(values), [0, 5, 50, 95, 100])
+    assert np.isnan(statistics.summarise([np.nan])).all()

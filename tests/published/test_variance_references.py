@@ -6,6 +6,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 from steadfield.algorithms.numeric import lattice_variance
+from steadfield.algorithms.numeric.ground import ground
 from steadfield.algorithms.numeric.lattice_zonings import Tiling, cell_numbers, random_tiling
 from steadfield.algorithms.numeric.zone_statistics import zone_statistics
 
@@ -36,7 +37,7 @@ def carolina():
 def test_every_tiling_of_north_carolina_holds_667_cases_among_329962_births(carolina, shape):
     # Totals of 1974-78: 667 cases, 329,962 births (Cressie & Chan 1989, JASA 84:393).
     x, y, births, deaths = carolina
-    study = lattice_variance.ground((x, y, deaths), (x, y, births), (x, y), "share")
+    study = ground((x, y, deaths), (x, y, births), (x, y), "share")
     assert study.threshold == pytest.approx(667 / 329_962, rel=1e-12)
     generator = np.random.default_rng(1)
     for size in (0.4, 1.0, 2.5):
@@ -55,7 +56,7 @@ def test_every_tiling_of_north_carolina_holds_667_cases_among_329962_births(caro
 def test_merging_cells_never_raises_the_largest_value_nor_lowers_the_smallest(carolina):
     # A mediant lies between its parts: squares that each hold four of the smaller ones whole.
     x, y, births, deaths = carolina
-    study = lattice_variance.ground((x, y, deaths), (x, y, births), (x, y), "share")
+    study = ground((x, y, deaths), (x, y, births), (x, y), "share")
     found = [
         lattice_variance.tiling_values(study, Tiling("square", size, (-85.0, 33.0), 0.3))[2]
         for size in (0.3, 0.6, 1.2, 2.4)
