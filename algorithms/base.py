@@ -6,19 +6,22 @@ from qgis.core import (
     QgsProcessingAlgorithm,
     QgsProcessingException,
     QgsProcessingOutputNumber,
+    QgsProcessingParameterBoolean,
     QgsProcessingParameterCrs,
     QgsProcessingParameterDefinition,
     QgsProcessingParameterDistance,
     QgsProcessingParameterEnum,
+    QgsProcessingParameterFeatureSink,
     QgsProcessingParameterFeatureSource,
     QgsProcessingParameterField,
     QgsProcessingParameterFileDestination,
     QgsProcessingParameterNumber,
     QgsProcessingParameterRasterDestination,
+    QgsProcessingParameterString,
 )
 from qgis.PyQt.QtGui import QIcon
 
-from ..plugin.host import METRES, POINTS, POLYGONS
+from ..plugin.host import ANY_VECTOR, METRES, POINTS, POLYGONS
 from ..plugin.text import tr
 from .job import Job
 from .numeric.errors import CancelledError, InputError
@@ -187,6 +190,16 @@ class SteadfieldAlgorithm(QgsProcessingAlgorithm):
             advanced,
         )
 
+    def add_flag(self, name, label, help, default=False, advanced=False):
+        """Add a yes or no."""
+        self.add(QgsProcessingParameterBoolean(name, label, default), help, advanced)
+
+    def add_text(self, name, label, help, default="", optional=True, advanced=False):
+        """Add a line of text, such as a list of numbers."""
+        self.add(
+            QgsProcessingParameterString(name, label, default, False, optional), help, advanced
+        )
+
     def add_seed(self):
         """Add SEED and the output SEED_USED."""
         self.add_number(
@@ -216,6 +229,15 @@ class SteadfieldAlgorithm(QgsProcessingAlgorithm):
         """Add a raster output; an optional one is off until asked for."""
         self.add(
             QgsProcessingParameterRasterDestination(name, label, None, optional, not optional), help
+        )
+
+    def add_table(self, name, label, help="", optional=False):
+        """Add a table output, a vector output without geometry."""
+        self.add(
+            QgsProcessingParameterFeatureSink(
+                name, label, ANY_VECTOR, None, optional, not optional
+            ),
+            help,
         )
 
     def add_report(self, optional=True):
