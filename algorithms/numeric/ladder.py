@@ -36,7 +36,13 @@ class Band:
 
     def shares(self, bandwidths):
         """Weights of the rungs that stand for each bandwidth, (n, m) array; rows add up to 1."""
-        return lagrange_weights(np.log(bandwidths), np.log(self.rungs))
+        places, nodes = np.log(bandwidths), np.log(self.rungs)
+        if len(nodes) == 1:
+            return np.ones((len(places), 1))
+        # over -1 to 1 the polynomials may be written in powers without loss
+        middle, half = 0.5 * (nodes[0] + nodes[-1]), 0.5 * (nodes[-1] - nodes[0])
+        powers = np.vander((places - middle) / half, len(nodes))
+        return powers @ np.linalg.inv(np.vander((nodes - middle) / half))
 
 
 def lagrange_weights(places, nodes):

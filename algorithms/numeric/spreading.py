@@ -242,3 +242,96 @@ def gather_windows(row, column, reach, values, raster, progress=silent):
     for block in _window_blocks(row, column, reach, values, raster.shape, margin, progress):
         collected[block.records] = block.collect(canvas)[:, 0]
     return collected
+
+
+@dataclass(frozen=True)
+class Strip:
+    """Some records of one strip of columns: Gaussians along rows and along columns apart."""
+
+    records: np.ndarray
+    rows: slice
+    columns: slice
+    along_rows: csc_matrix
+    along_columns: np.ndarray
+
+
+def _strips(row, column, bandwidths, reach, shape, margin, progress):
+    """Records strip by strip; along the columns of a strip every value is worked out, so that
+    the sum over records is a product of a sparse and a dense matrix."""
+    half = math.ceil(reach)
+    kept = np.flatnonzero(
+        (row > -half - 0.5)
+        & (row < shape[0] + half)
+        & (column > -half - 0.5)
+        & (column < shape[1] + half)
+    )
+    if not len(kept):
+        return
+    width = 2 * half + 1
+    order = kept[row_order(row[kept])]
+    order = order[row_order(column[order] / width)]
+    strip = np.floor(column[order] / width).astype(np.int64)
+    ends = np.append(np.flatnonzero(np.diff(strip)) + 1, len(order))
+    offsets = np.arange(-half, half + 1, dtype=np.int32)
+    step = max(64, _ELEMENTS // (4 * width))
+    start = 0
+    for end in ends:
+        first = int(strip[start]) * width
+        columns = slice(max(first - half, 0), min(first + width + half + 1, shape[1]))
+        while start < end:
+            progress(start / len(order))
+            chosen = order[start : min(start + step, end)]
+            start += len(chosen)
+            if columns.stop <= columns.start:
+                continue
+            scale = (-0.5 / np.square(bandwidths[chosen]))[:, None]
+            row_node = np.rint(row[chosen]).astype(np.int32)
+            apart = offsets - (row[chosen] - row_node)[:, None]
+            values = np.exp(scale * np.square(apart)) * (-scale / np.pi)
+            low = int(row_node.min()) - half
+            span = int(row_node.max()) + half + 1 - low
+            matrix = csc_matrix(
+                (
+                    values.ravel(),
+                    ((row_node - low)[:, None] + offsets).ravel(),
+                    np.arange(len(chosen) + 1, dtype=np.int32) * width,
+                ),
+                shape=(span, len(chosen)),
+            )
+            apart = np.arange(columns.start, columns.stop) - column[chosen][:, None]
+            rows = slice(low + margin, low + margin + span)
+            yield Strip(chosen, rows, columns, matrix, np.exp(scale * np.square(apart)))
+
+
+def sum_gaussians(row, column, weights, bandwidths, reach, shape, progress=silent):
+    """Sum narrow Gaussians of unit mass over the pixels around each record.
+
+    Parameters
+    ----------
+    row, column, weights, bandwidths : (n,) arrays
+        In pixels, 0 at the centre of the first pixel; places may lie outside the lattice.
+    reach : float
+        Distance in pixels within which pixels are visited; any further pixel may be too.
+    shape : (int, int)
+
+    Returns
+    -------
+    (rows, columns) array
+    """
+    margin = 2 * math.ceil(reach) + 1
+    canvas = np.zeros((shape[0] + 2 * margin, shape[1]))
+    for strip in _strips(row, column, bandwidths, reach, shape, margin, progress):
+        weighted = strip.along_columns * weights[strip.records][:, None]
+        canvas[strip.rows, strip.columns] += strip.along_rows @ weighted
+    return canvas[margin:-margin]
+
+
+def gather_gaussians(row, column, bandwidths, reach, raster, progress=silent):
+    """The transpose of sum_gaussians: every record's Gaussian summed over a raster, (n,) array."""
+    margin = 2 * math.ceil(reach) + 1
+    canvas = np.pad(raster, ((margin, margin), (0, 0)))
+    collected = np.zeros(len(row))
+    for strip in _strips(row, column, bandwidths, reach, raster.shape, margin, progress):
+        along_rows = strip.along_rows.T @ np.ascontiguousarray(canvas[strip.rows, strip.columns])
+        collected[strip.records] = np.einsum("nc,nc->n", along_rows, strip.along_columns)
+    return collected

@@ -4,13 +4,13 @@ import math
 
 import numpy as np
 
+from .discs import disc_mass, disc_sum
 from .errors import InputError
 from .grid import covering
-from .kernels import GAUSSIAN, kernel_named
+from .kernels import GAUSSIAN, QUARTIC_RADIUS, kernel_named
 from .ladder import RUNG_RATIOS
 from .progress import silent
 from .spectrum import NODES_PER_BANDWIDTH, gaussian_mass, gaussian_sum
-from .spreading import gather_windows, sum_windows
 
 
 def _records(x, y, weights, bandwidths):
@@ -76,17 +76,10 @@ def adaptive_surface(x, y, weights, bandwidths, grid, kernel="gaussian", progres
     if kernel is GAUSSIAN:
         total = gaussian_sum(row, column, weights, widths, grid.shape, progress)
     else:
-        reach = np.sqrt(0.5 + np.square(kernel.reach * widths))
-        values = _window_values(kernel, widths)
-        total = sum_windows(row, column, weights, reach, values, grid.shape, progress)
+        heights = weights * kernel.peak / np.square(widths)
+        radius = QUARTIC_RADIUS * widths
+        total = disc_sum(row, column, heights, radius, 2, grid.shape, progress)
     return _without_negatives(total / grid.cell_area, weights)
-
-
-def _window_values(kernel, widths):
-    def values(row_squared, column_squared, chosen):
-        return kernel.value(row_squared + column_squared, widths[chosen][:, None, None])
-
-    return values
 
 
 def _without_negatives(surface, weights):
@@ -119,14 +112,10 @@ def squared_surface(x, y, weights, bandwidths, grid, kernel="gaussian", progress
     x, y, weights, bandwidths = _records(x, y, weights, bandwidths)
     if kernel is not GAUSSIAN:
         row, column, widths = _in_pixels(x, y, bandwidths, grid)
-        reach = np.sqrt(0.5 + np.square(kernel.reach * widths))
-
-        def values(row_squared, column_squared, chosen):
-            own = widths[chosen][:, None, None]
-            return np.square(kernel.value(row_squared + column_squared, own))
-
-        squares = sum_windows(row, column, np.square(weights), reach, values, grid.shape, progress)
-        return squares / grid.cell_area**2
+        heights = np.square(weights * kernel.peak / np.square(widths))
+        radius = QUARTIC_RADIUS * widths
+        squares = disc_sum(row, column, heights, radius, 4, grid.shape, progress)
+        return np.maximum(squares, 0.0) / grid.cell_area**2
     masses = np.square(weights) * kernel.roughness / np.square(bandwidths)
     return adaptive_surface(x, y, masses, bandwidths / math.sqrt(2.0), grid, "gaussian", progress)
 
@@ -185,8 +174,8 @@ def kernel_mass(x, y, bandwidths, mask, grid, kernel="gaussian", progress=silent
     mask = np.asarray(mask, float)
     if kernel is GAUSSIAN:
         return gaussian_mass(row, column, widths, mask, progress)
-    reach = np.sqrt(0.5 + np.square(kernel.reach * widths))
-    return gather_windows(row, column, reach, _window_values(kernel, widths), mask, progress)
+    mass = disc_mass(row, column, QUARTIC_RADIUS * widths, 2, mask, progress)
+    return mass * kernel.peak / np.square(widths)
 
 
 def effective_records(total, squares):
