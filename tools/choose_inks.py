@@ -17,7 +17,7 @@ from pathlib import Path
 import numpy as np
 
 ROOT = Path(__file__).resolve().parent.parent
-LEAST_CHROMA, MOST_CHROMA = 0.075, 0.21
+LEAST_CHROMA, MOST_CHROMA = 0.09, 0.21
 LEAST_CHANNEL = 0.12
 STARTS = 150
 NEARLY_BEST = 0.92

@@ -40,11 +40,11 @@ MOST_LAYERS = 6
 
 # Chosen by tools/choose_inks.py, which prints them with their colour differences.
 DEFAULT_INKS = {
-    2: ("#af4cd2", "#219a2c"),
+    2: ("#b14fc7", "#219a2c"),
     3: ("#1f82de", "#bf5a7d", "#828721"),
-    4: ("#3c74fb", "#aa6694", "#dc4228", "#658c64"),
-    5: ("#9a59dc", "#a66d7e", "#e2352e", "#6c8b5d", "#358da5"),
-    6: ("#6980ae", "#9d54e3", "#d0457c", "#e2352e", "#778855", "#329286"),
+    4: ("#7767ee", "#d53d7b", "#8d813d", "#2d918e"),
+    5: ("#6e6af0", "#ad697a", "#d54c25", "#678d56", "#358da5"),
+    6: ("#317af2", "#8874ae", "#d53d7b", "#af711f", "#678d56", "#2d918e"),
 }
 
 # Below the first, two inks are taken for one another side by side; below the second, at a glance
