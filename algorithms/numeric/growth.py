@@ -53,9 +53,10 @@ def grown(graph, zone_count, replicates, generator):
         step = min(SWEEP_ZONINGS, SWEEP_VALUES // (len(graph.pairs) + graph.units))
     plan = _sweep_plan(graph) if small else _heap_plan(graph)
     grow = grow_by_sweeps if small else grow_by_heap
+    parts = graph.components()
     for start in range(0, replicates, step):
         stop = min(start + step, replicates)
-        seeds = _seeds(graph, zone_count, stop - start, generator)
+        seeds = _seeds(parts, zone_count, stop - start, generator)
         shape = (len(graph.pairs), stop - start)
         times = generator.standard_exponential(shape, dtype=np.float32)
         labels[start:stop] = grow(plan, seeds, times)
@@ -94,18 +95,19 @@ def grow_by_sweeps(plan, seeds, times):
     -------
     (replicates, units) int32 array
     """
-    rank, first, second, by_rank = plan
+    rank, pairs = plan
     replicates, zones = seeds.shape
     digits = max(1, int(zones - 1).bit_length())
     arrival = np.full((len(rank), replicates), FAR, np.int64)
     arrival[rank[seeds].T, np.arange(replicates)] = np.arange(zones)[:, None]
-    passage = (times[by_rank] * np.float32(2**TIME_BITS)).astype(np.int64) << digits
+    passage = (times * np.float32(2**TIME_BITS)).astype(np.int64)
+    passage <<= digits
     active = np.arange(replicates)
     settled = np.empty_like(arrival)
     sweeps = 0
     while len(active):
         before = arrival.copy() if sweeps else None
-        _sweep(arrival, passage, first, second)
+        _sweep(arrival, passage, pairs)
         sweeps += 1
         if before is None:
             continue
@@ -144,12 +146,12 @@ def grow_by_heap(plan, seeds, times):
     return labels
 
 
-def _sweep(arrival, passage, first, second):
+def _sweep(arrival, passage, pairs):
     """Relax every pair once upwards and once downwards, in place."""
-    rows = list(arrival)
+    rows, times = list(arrival), list(passage)
     trial = np.empty(arrival.shape[1], arrival.dtype)
     add, least = np.add, np.minimum
-    work = [(rows[a], rows[b], time) for a, b, time in zip(first, second, passage)]
+    work = [(rows[low], rows[high], times[pair]) for low, high, pair in pairs]
     for low, high, time in work:
         add(low, time, trial)
         least(high, trial, high)
@@ -159,14 +161,13 @@ def _sweep(arrival, passage, first, second):
 
 
 def _sweep_plan(graph):
-    """Units in an order where neighbours stand close, and the pairs sorted by it."""
+    """Place of each unit in an order where neighbours stand close; (low, high, pair) by it."""
     order = reverse_cuthill_mckee(graph.matrix(), symmetric_mode=True)
     rank = np.empty(graph.units, np.int64)
     rank[order] = np.arange(graph.units)
-    pairs = np.sort(rank[graph.pairs], axis=1)
-    by_rank = np.lexsort((pairs[:, 1], pairs[:, 0]))
-    first, second = pairs[by_rank].T.tolist() if len(pairs) else ([], [])
-    return rank, first, second, by_rank
+    ends = np.sort(rank[graph.pairs], axis=1)
+    by_rank = np.lexsort((ends[:, 1], ends[:, 0]))
+    return rank, np.c_[ends[by_rank], by_rank].tolist()
 
 
 def _heap_plan(graph):
@@ -179,15 +180,16 @@ def _heap_plan(graph):
     return matrix.indices, matrix.indptr, matrix.data - 1, graph.units
 
 
-def _seeds(graph, zone_count, replicates, generator):
+def _seeds(parts, zone_count, replicates, generator):
     """Distinct units for every replicate, at least one in each connected part."""
-    parts, part = graph.components()
-    keys = generator.random((replicates, graph.units), dtype=np.float32)
-    if parts > 1:
+    count, part = parts
+    units = len(part)
+    if zone_count == units:
+        return np.tile(np.arange(units), (replicates, 1))
+    keys = generator.random((replicates, units), dtype=np.float32)
+    if count > 1:
         order = np.argsort(part, kind="stable")
-        begin = np.searchsorted(part[order], np.arange(parts))
+        begin = np.searchsorted(part[order], np.arange(count))
         smallest = np.minimum.reduceat(keys[:, order], begin, axis=1)
         keys[keys == smallest[:, part]] = -1
-    if zone_count == graph.units:
-        return np.tile(np.arange(graph.units), (replicates, 1))
     return np.argpartition(keys, zone_count - 1, axis=1)[:, :zone_count]

@@ -1,0 +1,512 @@
+"""Zoning variance from base units: many random zonings, and what of a map they leave standing.
+
+``problem`` (scenarios) says what is counted; ``recipes`` says how zones are made; ``simulate``
+runs the zonings in batches and keeps running sums, one row of statistics a zoning and the
+extreme zonings themselves.
+"""
+
+from dataclasses import dataclass
+from typing import Optional
+
+import numpy as np
+
+from .allocation import Allocation, best_possible, held_out_events, held_out_events_by_value
+from .batches import plan_batches, run_batches
+from .builders import TREE_CUT, Recipe, build, least_total_for
+from .errors import InputError
+from .growth import check_zone_count
+from .progress import part, silent
+from .scenarios import Problem, describe, judgements, zone_ranks, zone_sums
+from .treezones import check_least_total
+from .variance import (
+    BinnedCounts,
+    Decomposition,
+    RunningMoments,
+    ThresholdTally,
+    decompose,
+    share_above,
+    verdict,
+)
+
+MOST_BINS = 200
+BINNED_VALUES = 12_000_000  # bins times units that are held
+RANK_BINS = 50
+MISSING = 255
+PILOT_VALUES = 300_000
+
+
+def recipes(problem, builder, zone_counts, generator, least_total=None, tolerance=0.1):
+    """One recipe for each number of zones, checked.
+
+    Parameters
+    ----------
+    problem : Problem
+    builder : {"grown", "tree-cut", "balanced"}
+    zone_counts : sequence of int
+    generator : numpy.random.Generator
+        For the pilot that finds what a tree-cut must hold to give so many zones.
+    least_total : float, optional
+        Tree-cut only: no zone holds less. A number of zones too large for it comes out smaller.
+    tolerance : float
+        Balanced only.
+
+    Returns
+    -------
+    tuple of Recipe
+
+    Raises
+    ------
+    InputError
+        A number of zones that cannot be made.
+    """
+    graph, totals = problem.graph, problem.totals
+    if least_total is not None and builder != TREE_CUT:
+        raise InputError(
+            f"LEAST_TOTAL is kept by tree-cut zones only, and BUILDER is {builder}; choose "
+            "tree-cut or leave LEAST_TOTAL empty."
+        )
+    if not len(zone_counts):
+        raise InputError("ZONE_COUNTS: no number of zones was given; give one or more.")
+    if least_total is not None:
+        check_least_total(graph, totals, least_total)
+    made = []
+    for zone_count in sorted({int(count) for count in zone_counts}):
+        recipe = Recipe(builder, zone_count, tolerance=tolerance)
+        check_zone_count(graph, zone_count)
+        if builder == TREE_CUT:
+            found = least_total_for(graph, totals, zone_count, generator)
+            recipe = Recipe(builder, zone_count, max(found, least_total or 0.0))
+        made.append(recipe)
+    return tuple(made)
+
+
+@dataclass(frozen=True)
+class Work:
+    """What a batch of zonings needs, wherever it runs."""
+
+    problem: Problem
+    recipes: tuple
+    value_edges: np.ndarray
+    statistic: int
+
+
+@dataclass(frozen=True)
+class BatchResult:
+    """What a batch of zonings hands back: sums over its zonings, codes and rows of each."""
+
+    scale: int
+    moments: RunningMoments
+    counting: RunningMoments
+    tally: ThresholdTally
+    value_codes: np.ndarray
+    rank_codes: np.ndarray
+    statistics: np.ndarray
+    extremes: tuple
+    halves: Optional[tuple]
+
+
+def simulate_batch(work, batch):
+    """Make the zonings of a batch and sum them up; runs in a worker.
+
+    Parameters
+    ----------
+    work : Work
+    batch : Batch
+
+    Returns
+    -------
+    BatchResult
+    """
+    setting = work.problem
+    recipe = work.recipes[batch.scale]
+    labels = build(setting.graph, setting.totals, recipe, batch.replicates, batch.generator())
+    block = describe(setting, labels)
+    zones = block.values.shape[1]
+    place = labels + (np.arange(batch.replicates, dtype=np.int64) * zones)[:, None]
+
+    def on_units(of_zones):
+        return of_zones.ravel()[place]
+
+    counting, above, excess = judgements(setting, block)
+    tally = ThresholdTally(setting.graph.units)
+    tally.add_many(on_units(above), on_units(excess))
+    halves = None
+    if setting.budget is not None:
+        halves = tuple(
+            RunningMoments.of(on_units(values))
+            for values in (block.half_values, block.other_values)
+        )
+    rank_edges = np.linspace(0, 1, RANK_BINS + 1)
+    return BatchResult(
+        batch.scale,
+        RunningMoments.of(on_units(block.values)),
+        RunningMoments.of(on_units(counting)),
+        tally,
+        on_units(_codes(block.values, work.value_edges)),
+        on_units(_codes(zone_ranks(block.values, labels), rank_edges)),
+        block.statistics,
+        _extremes(block.statistics[:, work.statistic], labels),
+        halves,
+    )
+
+
+@dataclass(frozen=True)
+class ScaleResult:
+    """The zonings of one recipe, summed up.
+
+    Attributes
+    ----------
+    recipe : Recipe
+    replicates : int
+    moments, counting : RunningMoments
+        Of the value of each unit, and of its counting variance.
+    tally : ThresholdTally
+    statistics : (replicates, names) array
+        One row a zoning, in the order of ``Problem.statistic_names``.
+    """
+
+    recipe: Recipe
+    replicates: int
+    moments: RunningMoments
+    counting: RunningMoments
+    tally: ThresholdTally
+    statistics: np.ndarray
+
+
+@dataclass(frozen=True)
+class Extreme:
+    """The zoning that gave the largest or smallest value of the chosen statistic.
+
+    Attributes
+    ----------
+    value : float
+    labels : (units,) array
+    zone_count : int
+        Of the recipe.
+    """
+
+    value: float
+    labels: np.ndarray
+    zone_count: int
+
+
+@dataclass(frozen=True)
+class Official:
+    """An official zoning among the simulated ones of its own number of zones.
+
+    Attributes
+    ----------
+    labels : (units,) int array
+    zone_count : int
+    statistics : (names,) array
+    places : (names,) array
+        Share of the simulated zonings with a smaller value, ties counted half; NaN where
+        there is nothing to compare with.
+    """
+
+    labels: np.ndarray
+    zone_count: int
+    statistics: np.ndarray
+    places: np.ndarray
+
+
+@dataclass(frozen=True)
+class Simulation:
+    """All that is kept of the simulated zonings.
+
+    Attributes
+    ----------
+    problem : Problem
+    statistic : str
+        The one whose extremes were kept.
+    scales : tuple of ScaleResult
+    reference : ScaleResult or None
+        Zonings with the official number of zones, where it is not one of the scales.
+    largest, smallest : Extreme
+    official : Official or None
+    allocation : Allocation or None
+    """
+
+    problem: Problem
+    statistic: str
+    scales: tuple
+    reference: Optional[ScaleResult]
+    largest: Extreme
+    smallest: Extreme
+    official: Optional[Official]
+    allocation: Optional[Allocation]
+    value_bins: BinnedCounts
+    rank_bins: BinnedCounts
+
+    @property
+    def replicates(self):
+        """Zonings of each scale."""
+        return [scale.replicates for scale in self.scales]
+
+    def decomposition(self) -> Decomposition:
+        """Scale, zoning and counting variance of every unit."""
+        return decompose(
+            [scale.moments for scale in self.scales],
+            self.replicates,
+            [scale.counting.mean for scale in self.scales],
+        )
+
+    def above(self):
+        """(p_above, evidence) of every unit."""
+        return share_above([scale.tally for scale in self.scales], self.replicates)
+
+    def verdicts(self):
+        """1 holds above, -1 holds below, 0 depends, NaN no value; (units,) array."""
+        return verdict(*self.above())
+
+    def quantiles(self, share):
+        """Quantile of every unit's value over all zonings, within a bin's width."""
+        return self.value_bins.quantile(share)
+
+    def rank_quantiles(self, share):
+        """Quantile of every unit's rank, 1 the highest value and the number of units the lowest."""
+        units = self.problem.graph.units
+        return np.clip(self.rank_bins.quantile(share) * units + 0.5, 1, units)
+
+    def summary(self):
+        """Rows (zone count, statistic, least, q05, q50, q95, greatest), a scale and statistic each.
+
+        Zonings for which a statistic is undefined drop out.
+        """
+        rows = []
+        for scale in self.scales:
+            for column, name in enumerate(self.problem.statistic_names()):
+                values = scale.statistics[:, column]
+                values = values[~np.isnan(values)]
+                levels = (0, 0.05, 0.5, 0.95, 1)
+                found = np.quantile(values, levels) if len(values) else np.full(5, np.nan)
+                rows.append((scale.recipe.zone_count, name, *map(float, found)))
+        return rows
+
+
+def simulate(
+    problem, recipes, replicates, seed,
+    official=None, reference=None, statistic="largest", executor=None, progress=silent,
+):  # fmt: skip
+    """Simulate zonings of base units and keep what they do to every unit and statistic.
+
+    Parameters
+    ----------
+    problem : Problem
+    recipes : sequence of Recipe
+        The scales.
+    replicates : int
+        Zonings of each scale, at least 2.
+    seed : int or numpy.random.SeedSequence
+    official : (units,) int array, optional
+        Zones of the official zoning, numbered from 0.
+    reference : Recipe, optional
+        How to make zonings to compare the official one with, where no scale has its number
+        of zones; they count for nothing else.
+    statistic : str
+        One of ``problem.statistic_names()``; the zonings with its largest and smallest value
+        are kept.
+    executor : concurrent.futures.Executor, optional
+        Where the batches run; the result is the same to the bit.
+    progress : callable
+
+    Returns
+    -------
+    Simulation
+
+    Raises
+    ------
+    InputError
+        Too few replicates or an unknown statistic.
+    """
+    names = problem.statistic_names()
+    if statistic not in names:
+        raise InputError(f"The statistic is one of {', '.join(names)}; found {statistic!r}.")
+    if not replicates >= 2:
+        raise InputError(f"REPLICATES: two zonings a scale are the least; found {replicates}.")
+    root = seed if isinstance(seed, np.random.SeedSequence) else np.random.SeedSequence(seed)
+    pilot_seed, batch_seed = root.spawn(2)
+    edges = _value_edges(problem, recipes, np.random.default_rng(pilot_seed))
+    every = [*recipes] if reference is None else [*recipes, reference]
+    work = Work(problem, tuple(every), edges, names.index(statistic))
+    batches = plan_batches(problem.graph.units, [replicates] * len(every), batch_seed)
+    collected = _Collected(work, len(recipes))
+    results = run_batches(simulate_batch, work, batches, executor, part(progress, 0.02, 1.0))
+    for result in results:
+        collected.take(result)
+    return collected.finish(statistic, official)
+
+
+class _Collected:
+    """Running sums over batches, taken in their order."""
+
+    def __init__(self, work, scales):
+        units = work.problem.graph.units
+        self.work, self.scales = work, scales
+        many = len(work.recipes)
+        self.moments = [RunningMoments(units) for _ in range(many)]
+        self.counting = [RunningMoments(units) for _ in range(many)]
+        self.tallies = [ThresholdTally(units) for _ in range(many)]
+        self.rows = [[] for _ in range(many)]
+        self.value_bins = BinnedCounts(work.value_edges, units)
+        self.rank_bins = BinnedCounts(np.linspace(0, 1, RANK_BINS + 1), units)
+        self.halves = (RunningMoments(units), RunningMoments(units))
+        self.largest = self.smallest = None
+
+    def take(self, result):
+        scale = result.scale
+        self.moments[scale].merge(result.moments)
+        self.counting[scale].merge(result.counting)
+        self.tallies[scale].merge(result.tally)
+        self.rows[scale].append(result.statistics)
+        if scale >= self.scales:
+            return
+        _add_codes(self.value_bins, result.value_codes)
+        _add_codes(self.rank_bins, result.rank_codes)
+        if result.halves is not None:
+            for kept, new in zip(self.halves, result.halves):
+                kept.merge(new)
+        if result.extremes is None:
+            return
+        (low, low_labels), (high, high_labels) = result.extremes
+        zone_count = self.work.recipes[scale].zone_count
+        if self.smallest is None or low < self.smallest.value:
+            self.smallest = Extreme(low, low_labels, zone_count)
+        if self.largest is None or high > self.largest.value:
+            self.largest = Extreme(high, high_labels, zone_count)
+
+    def finish(self, statistic, official):
+        made = [
+            ScaleResult(recipe, len(rows), moments, counting, tally, rows)
+            for recipe, moments, counting, tally, rows in zip(
+                self.work.recipes,
+                self.moments,
+                self.counting,
+                self.tallies,
+                (np.concatenate(rows) for rows in self.rows),
+            )
+        ]
+        setting = self.work.problem
+        placed = None if official is None else place_official(setting, official, made)
+        return Simulation(
+            setting,
+            statistic,
+            tuple(made[: self.scales]),
+            made[self.scales] if len(made) > self.scales else None,
+            self.largest,
+            self.smallest,
+            placed,
+            self._allocation(made[: self.scales], official),
+            self.value_bins,
+            self.rank_bins,
+        )
+
+    def _allocation(self, scales, official):
+        setting = self.work.problem
+        if setting.budget is None:
+            return None
+        column = setting.statistic_names().index("events_reached")
+        counts, totals, half = setting.counts, setting.totals, setting.half
+        averaged = held_out_events_by_value(
+            *(moments.expected() for moments in self.halves), half, counts, totals, setting.budget
+        )
+        by_official = None
+        if official is not None:
+            sums = [
+                zone_sums(official[None], int(official.max()) + 1, values)[0]
+                for values in (half, counts, totals)
+            ]
+            by_official = held_out_events(*sums, setting.budget)
+        return Allocation(
+            setting.budget,
+            float(counts.sum()),
+            np.concatenate([scale.statistics[:, column] for scale in scales]),
+            averaged,
+            by_official,
+            best_possible(counts, totals, setting.budget),
+        )
+
+
+def place_official(problem, labels, scales):
+    """Where the statistics of an official zoning fall among simulated ones as numerous.
+
+    Parameters
+    ----------
+    problem : Problem
+    labels : (units,) int array
+        From 0 up.
+    scales : sequence of ScaleResult
+
+    Returns
+    -------
+    Official
+    """
+    labels = np.asarray(labels)
+    row = describe(problem, labels[None]).statistics[0]
+    zone_count = len(np.unique(labels))
+    places = np.full(len(row), np.nan)
+    for scale in scales:
+        if scale.recipe.zone_count == zone_count:
+            below = (scale.statistics < row).sum(axis=0)
+            equal = (scale.statistics == row).sum(axis=0)
+            known = (~np.isnan(scale.statistics)).sum(axis=0)
+            some = (known > 0) & ~np.isnan(row)
+            places[some] = (below[some] + equal[some] / 2) / known[some]
+    return Official(labels, zone_count, row, places)
+
+
+def _value_edges(problem, recipes, generator):
+    """Edges of the quantile bins: fine where a pilot of zonings puts many values.
+
+    No zone value lies outside the values of the units (a mediant lies between its parts).
+    """
+    used = problem.totals > 0
+    own = problem.counts[used] / problem.totals[used]
+    many = max(2, PILOT_VALUES // problem.graph.units // len(recipes))
+    pilot = []
+    for recipe in recipes:
+        labels = build(problem.graph, problem.totals, recipe, min(many, 40), generator)
+        values = describe(problem, labels).values
+        on_units = np.take_along_axis(values, labels.astype(np.int64), axis=1)
+        pilot.append(on_units[~np.isnan(on_units)])
+    bins = int(np.clip(BINNED_VALUES // problem.graph.units, 40, MOST_BINS))
+    pilot = np.concatenate(pilot)
+    by_mass = np.quantile(pilot, np.linspace(0, 1, bins // 2))
+    evenly = np.linspace(pilot.min(), pilot.max(), bins // 2)
+    # zones may hold events of units without a total, so a value may leave the units' range
+    low, high = min(own.min(), pilot.min()), max(own.max(), pilot.max())
+    edges = np.unique(np.r_[low, by_mass, evenly, high])
+    if len(edges) < 2:
+        return np.array([low - 0.5 * abs(low) - 1e-9, high + 0.5 * abs(high) + 1e-9])
+    apart = np.r_[True, np.diff(edges) > 1e-12 * max(abs(low), abs(high))]
+    apart[-1] = True
+    return edges[apart]
+
+
+def _codes(values, edges):
+    """Bin of each value as one byte; MISSING without a value."""
+    index = np.searchsorted(edges, values, side="right") - 1
+    index = np.clip(index, 0, len(edges) - 2)
+    return np.where(np.isnan(values), MISSING, index).astype(np.uint8)
+
+
+def _add_codes(bins, codes):
+    """Count the codes of (replicates, units) in the bins of the units."""
+    units, many = bins.counts.shape
+    cell = (codes + np.arange(units, dtype=np.int64) * many)[codes != MISSING]
+    if codes.size * 4 < bins.counts.size:
+        np.add.at(bins.counts.reshape(-1), cell, 1)
+    else:
+        bins.counts += np.bincount(cell, minlength=bins.counts.size).reshape(units, many)
+
+
+def _extremes(values, labels):
+    """((smallest, its labels), (largest, its labels)) of a batch, or None without any value."""
+    if np.isnan(values).all():
+        return None
+    low, high = int(np.nanargmin(values)), int(np.nanargmax(values))
+    kept = np.int32
+    return (
+        (float(values[low]), labels[low].astype(kept)),
+        (float(values[high]), labels[high].astype(kept)),
+    )
