@@ -18,15 +18,8 @@ from .growth import check_zone_count
 from .progress import part, silent
 from .scenarios import Problem, describe, judgements, zone_ranks, zone_sums
 from .treezones import check_least_total
-from .variance import (
-    BinnedCounts,
-    Decomposition,
-    RunningMoments,
-    ThresholdTally,
-    decompose,
-    share_above,
-    verdict,
-)
+from .variance import BinnedCounts, RunningMoments, ThresholdTally
+from .zone_results import Extreme, ScaleResult, Simulation, place_official
 
 MOST_BINS = 200
 BINNED_VALUES = 12_000_000  # bins times units that are held
@@ -148,140 +141,6 @@ def simulate_batch(work, batch):
         _extremes(block.statistics[:, work.statistic], labels),
         halves,
     )
-
-
-@dataclass(frozen=True)
-class ScaleResult:
-    """The zonings of one recipe, summed up.
-
-    Attributes
-    ----------
-    recipe : Recipe
-    replicates : int
-    moments, counting : RunningMoments
-        Of the value of each unit, and of its counting variance.
-    tally : ThresholdTally
-    statistics : (replicates, names) array
-        One row a zoning, in the order of ``Problem.statistic_names``.
-    """
-
-    recipe: Recipe
-    replicates: int
-    moments: RunningMoments
-    counting: RunningMoments
-    tally: ThresholdTally
-    statistics: np.ndarray
-
-
-@dataclass(frozen=True)
-class Extreme:
-    """The zoning that gave the largest or smallest value of the chosen statistic.
-
-    Attributes
-    ----------
-    value : float
-    labels : (units,) array
-    zone_count : int
-        Of the recipe.
-    """
-
-    value: float
-    labels: np.ndarray
-    zone_count: int
-
-
-@dataclass(frozen=True)
-class Official:
-    """An official zoning among the simulated ones of its own number of zones.
-
-    Attributes
-    ----------
-    labels : (units,) int array
-    zone_count : int
-    statistics : (names,) array
-    places : (names,) array
-        Share of the simulated zonings with a smaller value, ties counted half; NaN where
-        there is nothing to compare with.
-    """
-
-    labels: np.ndarray
-    zone_count: int
-    statistics: np.ndarray
-    places: np.ndarray
-
-
-@dataclass(frozen=True)
-class Simulation:
-    """All that is kept of the simulated zonings.
-
-    Attributes
-    ----------
-    problem : Problem
-    statistic : str
-        The one whose extremes were kept.
-    scales : tuple of ScaleResult
-    reference : ScaleResult or None
-        Zonings with the official number of zones, where it is not one of the scales.
-    largest, smallest : Extreme
-    official : Official or None
-    allocation : Allocation or None
-    """
-
-    problem: Problem
-    statistic: str
-    scales: tuple
-    reference: Optional[ScaleResult]
-    largest: Extreme
-    smallest: Extreme
-    official: Optional[Official]
-    allocation: Optional[Allocation]
-    value_bins: BinnedCounts
-    rank_bins: BinnedCounts
-
-    @property
-    def replicates(self):
-        """Zonings of each scale."""
-        return [scale.replicates for scale in self.scales]
-
-    def decomposition(self) -> Decomposition:
-        """Scale, zoning and counting variance of every unit."""
-        return decompose(
-            [scale.moments for scale in self.scales],
-            self.replicates,
-            [scale.counting.mean for scale in self.scales],
-        )
-
-    def above(self):
-        """(p_above, evidence) of every unit."""
-        return share_above([scale.tally for scale in self.scales], self.replicates)
-
-    def verdicts(self):
-        """1 holds above, -1 holds below, 0 depends, NaN no value; (units,) array."""
-        return verdict(*self.above())
-
-    def quantiles(self, share):
-        """Quantile of every unit's value over all zonings, within a bin's width."""
-        return self.value_bins.quantile(share)
-
-    def rank_quantiles(self, share):
-        """Quantile of every unit's rank, 1 the highest value and the number of units the lowest."""
-        units = self.problem.graph.units
-        return np.clip(self.rank_bins.quantile(share) * units + 0.5, 1, units)
-
-    def summary(self):
-        """Rows (zone count, statistic, least, q05, q50, q95, greatest), a scale and statistic each.
-
-        Zonings for which a statistic is undefined drop out.
-        """
-        rows = []
-        for scale in self.scales:
-            for column, name in enumerate(self.problem.statistic_names()):
-                values = scale.statistics[:, column]
-                values = values[~np.isnan(values)]
-                levels = (0, 0.05, 0.5, 0.95, 1)
-                found = np.quantile(values, levels) if len(values) else np.full(5, np.nan)
-                rows.append((scale.recipe.zone_count, name, *map(float, found)))
-        return rows
 
 
 def simulate(
@@ -425,34 +284,6 @@ class _Collected:
             by_official,
             best_possible(counts, totals, setting.budget),
         )
-
-
-def place_official(problem, labels, scales):
-    """Where the statistics of an official zoning fall among simulated ones as numerous.
-
-    Parameters
-    ----------
-    problem : Problem
-    labels : (units,) int array
-        From 0 up.
-    scales : sequence of ScaleResult
-
-    Returns
-    -------
-    Official
-    """
-    labels = np.asarray(labels)
-    row = describe(problem, labels[None]).statistics[0]
-    zone_count = len(np.unique(labels))
-    places = np.full(len(row), np.nan)
-    for scale in scales:
-        if scale.recipe.zone_count == zone_count:
-            below = (scale.statistics < row).sum(axis=0)
-            equal = (scale.statistics == row).sum(axis=0)
-            known = (~np.isnan(scale.statistics)).sum(axis=0)
-            some = (known > 0) & ~np.isnan(row)
-            places[some] = (below[some] + equal[some] / 2) / known[some]
-    return Official(labels, zone_count, row, places)
 
 
 def _value_edges(problem, recipes, generator):

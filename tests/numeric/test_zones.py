@@ -14,8 +14,9 @@ from steadfield.algorithms.numeric.scenarios import (
     zone_ranks,
     zone_sums,
 )
+from steadfield.algorithms.numeric.zone_results import place_official
 from steadfield.algorithms.numeric.zone_statistics import morans_i
-from steadfield.algorithms.numeric.zones import place_official, recipes, simulate
+from steadfield.algorithms.numeric.zones import recipes, simulate
 
 
 def board(rows, columns):
