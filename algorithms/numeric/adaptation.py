@@ -16,6 +16,8 @@ _BLOCK = 50_000
 # a cubic spline on a sixth of the bandwidth follows a Gaussian within 1e-5 of its peak
 _PILOT_PIXELS = 6
 _MOST_PILOT_PIXELS = 4096 * 4096
+# pixels over which the end of a spline is felt
+_PILOT_MARGIN = 10
 
 
 @dataclass(frozen=True)
@@ -153,9 +155,11 @@ def pilot_density(x, y, weights, bandwidth, mask=None, grid=None, progress=silen
     """
     bounds = x.min(), y.min(), x.max(), y.max()
     cell = bandwidth / _PILOT_PIXELS
-    area = (bounds[2] - bounds[0] + 8 * cell) * (bounds[3] - bounds[1] + 8 * cell)
+    area = (bounds[2] - bounds[0] + 2 * _PILOT_MARGIN * cell) * (
+        bounds[3] - bounds[1] + 2 * _PILOT_MARGIN * cell
+    )
     cell = max(cell, math.sqrt(area / _MOST_PILOT_PIXELS))
-    own = covering(bounds, cell, margin=3 * cell)
+    own = covering(bounds, cell, margin=_PILOT_MARGIN * cell)
     surface = adaptive_surface(
         x,
         y,
