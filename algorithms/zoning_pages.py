@@ -163,7 +163,8 @@ def draw_allocation(figure, found):
         axes.axvline(100 * events / found.events, color=colour, ls=dash, lw=2, label=label)
     axes.set_xlabel(tr("share of held-out events reached (%)"))
     axes.set_ylabel(tr("zonings"))
-    axes.legend(frameon=False, fontsize=9)
+    axes.set_ylim(top=1.3 * axes.get_ylim()[1])
+    axes.legend(frameon=False, fontsize=9, loc="upper left", ncols=len(lines))
 
 
 def allocation_words(found):
@@ -192,13 +193,14 @@ def allocation_words(found):
         ),
         tr(
             "Where lines run thus decides over {} events out of {}. Places chosen by the value "
-            "averaged over all zonings reach {}, {} events more than the middling zoning; places "
+            "averaged over all zonings reach {}, {} events {} than the middling zoning; places "
             "drawn at random would reach {}."
         ).format(
-            number(high - low),
+            number(round(high - low)),
             number(events),
             percent(found.averaged / events),
-            number(found.averaged - middle),
+            number(abs(round(found.averaged - middle))),
+            tr("more") if found.averaged >= middle else tr("fewer"),
             percent(found.budget),
         ),
         tr(

@@ -26,6 +26,9 @@ class Ground:
         In units of count over total.
     least_total : float
         A cell with less than this in total has no value.
+    least_inside : float
+        Where the total is an area: a cell with less than this share of its own area in total has
+        no value. 0 otherwise.
     """
 
     x: np.ndarray
@@ -40,6 +43,7 @@ class Ground:
     kind: str
     threshold: float
     least_total: float
+    least_inside: float = 0.0
 
 
 @dataclass(frozen=True)
@@ -63,7 +67,7 @@ class Halves:
     place_total: np.ndarray
 
 
-def ground(events, totals, places, kind, threshold=None, least_total=0.0):
+def ground(events, totals, places, kind, threshold=None, least_total=0.0, least_inside=0.0):
     """Check and pack the data of a study.
 
     Parameters
@@ -74,8 +78,8 @@ def ground(events, totals, places, kind, threshold=None, least_total=0.0):
     kind : {"share", "rate"}
     threshold : float, optional
         The overall value, sum of count over sum of total, unless given.
-    least_total : float
-        A cell with less than this in total has no value.
+    least_total, least_inside : float
+        See `Ground`.
 
     Returns
     -------
@@ -103,6 +107,7 @@ def ground(events, totals, places, kind, threshold=None, least_total=0.0):
     return Ground(
         x, y, count, total_x, total_y, total, place_x, place_y,
         tuple(float(edge) for edge in bounds), kind, float(threshold), float(least_total),
+        float(least_inside),
     )  # fmt: skip
 
 

@@ -16,6 +16,7 @@ import numpy as np
 
 from . import allocation, variance
 from .errors import InputError
+from .hexagons import cell_area
 from .lattice_zonings import cell_block, cell_numbers, lattice_morans_i, random_tiling
 from .progress import silent
 from .zone_statistics import ZoneStatistics, zone_statistics
@@ -228,7 +229,8 @@ def tiling_values(study, tiling, halves=None):
     count = np.bincount(events, weights=study.count, minlength=block.cells)
     totals = cell_numbers(block, study.total_x, study.total_y)
     total = np.bincount(totals, weights=study.total, minlength=block.cells)
-    used = np.flatnonzero((total > 0) & (total >= study.least_total))
+    least = max(study.least_total, study.least_inside * cell_area(tiling.size, tiling.shape))
+    used = np.flatnonzero((total > 0) & (total >= least))
     used_count, used_total = count[used], total[used]
     value = used_count / used_total
     table = np.zeros((block.cells, 6 if halves is None else 8))
@@ -247,10 +249,14 @@ def tiling_values(study, tiling, halves=None):
     values[used] = value
     statistics["morans_i"] = lattice_morans_i(values, block)
     if halves is not None:
-        half = np.bincount(events, weights=halves.half, minlength=block.cells)[used]
-        columns += [half / used_total, (used_count - half) / used_total]
-        statistics["events_reached"] = allocation.held_out_events(
-            half, used_count, used_total, halves.budget
+        half = np.bincount(events, weights=halves.half, minlength=block.cells)
+        by_half, by_other = np.full((2, block.cells), np.nan)
+        by_half[used] = half[used] / used_total
+        by_other[used] = (used_count - half[used]) / used_total
+        columns += [by_half[used], by_other[used]]
+        # Cells without a value come last, but their people count towards the budget.
+        statistics["events_reached"] = allocation.held_out_events_by_value(
+            by_half, by_other, half, count, total, halves.budget
         )
     table[used] = np.stack(columns, axis=1)
     return table, block, statistics

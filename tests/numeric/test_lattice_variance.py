@@ -312,6 +312,19 @@ def test_cells_below_the_least_total_have_no_value():
     assert statistics["zones"] == (total >= 30).sum()
 
 
+def test_cells_with_too_small_a_part_inside_the_area_have_no_value():
+    x, y, share = area_samples(20.0, 0.5, 0.0)
+    study = ground(
+        (np.array([3.0]), np.array([3.0]), np.ones(1)), (x, y, share), (x, y), "rate",
+        least_inside=0.3,
+    )  # fmt: skip
+    tiling = Tiling("square", 8.0, (-6.0, -4.0), 0.0)
+    table, block, _ = lattice_variance.tiling_values(study, tiling)
+    cells = cell_numbers(block, np.array([1.0, 6.0, 19.0, 12.0]), np.array([1.0, 6.0, 19.0, 1.0]))
+    # Inside lie 2 x 4, 8 x 8, 2 x 8 and 8 x 4 of each cell's 64.
+    np.testing.assert_array_equal(table[cells, 0], [0, 1, 0, 1])
+
+
 def test_points_on_one_spot_count_together():
     study = ground(
         ([1.0, 1.0, 2.0], [5.0, 5.0, 5.0], [1.0, 2.0, 4.0]),
