@@ -1,0 +1,412 @@
+"""Withhold cells, and as many more as it takes that none can be worked out from the totals.
+
+A withheld cell is protected when an outsider, by the two linear programmes of `outsider`, can rule
+out nothing inside its protection range. Every withheld cell is held to that, unsafe or withheld
+to protect another, so that the release does not tell one kind from the other. The outsider is
+granted what the rule implies (a withheld cell is not empty) and, since contributors know their
+own share, the value of every cell that one contributor has to himself.
+
+The choice of further cells follows the incremental linear programme of complementary suppression
+(Kelly, Golden & Assad 1992, Networks 22:397; Fischetti & Salazar 2001): for each unprotected cell,
+the cheapest deviation that carries it across its range, where moving a published sum costs its
+records. Costs carry a random factor: an outsider who knows the method could otherwise conclude from
+"the cheapest cells were withheld" (the minimality attack of Wong et al. 2007, VLDB, 543).
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+from scipy import sparse
+from scipy.optimize import linprog
+
+from .errors import InputError
+from .outsider import TOLERANCE, Deviations, floors, target_values
+from .progress import silent
+
+COST_SPREAD = 0.5
+KEEP_ANYWAY = 0.1
+MOST_RETRIES = 200
+MOST_PIECES = 12
+
+
+@dataclass(frozen=True)
+class Withholding:
+    """Which sums are published.
+
+    Attributes
+    ----------
+    published : (sums,) bool array
+    complementary : (sums,) bool array
+        Withheld to protect others; tells of the data, not for release.
+    """
+
+    published: np.ndarray
+    complementary: np.ndarray
+
+
+class Proofs:
+    """Tables that agree with what is published, each showing how far some targets can deviate.
+
+    They are kept because publishing or withholding one more sum leaves most of them standing.
+    """
+
+    def __init__(self, sums, targets):
+        self.sums = sums
+        self.targets = targets
+        self.values = target_values(sums, targets)
+        self.slack = TOLERANCE * np.maximum(self.values, 1.0)
+        self._tables, self._moved, self._owner = [], [], []
+
+    def add(self, table, owner=-1):
+        """Keep a table of deviations; `owner` is the only target it counts for, -1 for all."""
+        self._tables.append((self.sums.members @ table.T).T)
+        moved = np.zeros(len(self.values))
+        for part, deviation in zip(self.targets.parts.T, table):
+            moved += part * (self.targets.members @ deviation)
+        self._moved.append(moved)
+        self._owner.append(owner)
+
+    def reach(self, published, direction):
+        """How far each target deviates in the tables that agree with what is published."""
+        best = np.zeros(len(self.values))
+        for sums, moved, owner in zip(self._tables, self._moved, self._owner):
+            if np.abs(sums[:, published]).max(initial=0.0) > TOLERANCE:
+                continue
+            if owner < 0:
+                np.maximum(best, direction * moved, out=best)
+            else:
+                best[owner] = max(best[owner], direction * moved[owner])
+        return best
+
+
+def unprotected(sums, targets, published, progress=silent, proofs=None, among=None, any_one=False):
+    """Targets that an outsider can place more narrowly than their protection range.
+
+    Parameters
+    ----------
+    sums : outsider.Sums
+    targets : outsider.Targets
+    published : (sums,) bool array
+    progress : callable
+    proofs : Proofs or None
+        Filled, and used again by the next call.
+    among : (targets,) bool array or None
+        Check only these.
+    any_one : bool
+        Stop at the first one that is found.
+
+    Returns
+    -------
+    below, above : (targets,) bool arrays
+        Unprotected towards the lower, and towards the upper end of the range.
+    """
+    proofs = Proofs(sums, targets) if proofs is None else proofs
+    active = targets.active(published) & (True if among is None else among)
+    programmes = Deviations(sums, published)
+    exchange = _exchange(sums, targets, published)
+    failing = []
+    for direction, within in zip((-1, 1), exchange):
+        end = targets.upper if direction > 0 else targets.lower
+        gap = direction * (end - proofs.values)
+        needed = gap - proofs.slack
+        reached = np.maximum(within, proofs.reach(published, direction))
+        while True:
+            progress(0.0)
+            open_ones = np.flatnonzero(active & (reached < needed))
+            if len(open_ones) < 2:
+                break
+            table = programmes.together(targets, open_ones, gap[open_ones], direction)
+            if table is None:
+                break
+            proofs.add(table)
+            reached = np.maximum(reached, proofs.reach(published, direction))
+            if (reached[open_ones] < needed[open_ones]).all():
+                break
+        for place in open_ones:
+            progress(0.0)
+            members = targets.members[place].indices
+            parts = np.flatnonzero(targets.parts[place])
+            reached[place], table = programmes.reach(members, parts, direction, gap[place])
+            if table is not None:
+                proofs.add(table, place)
+            if any_one and reached[place] < needed[place]:
+                break
+        failing.append(active & (reached < needed))
+        if any_one and failing[-1].any():
+            break
+    return failing[0], failing[-1]
+
+
+class _Kinds:
+    """Atoms sorted into kinds: those of one kind lie in the same published sums.
+
+    What one atom of a kind gains another can lose without any published sum telling.
+    """
+
+    def __init__(self, sums, published):
+        members = sums.members[published]
+        self.members = members
+        self.marks = np.random.default_rng(0).integers(1, 2**62, members.shape[0])
+        self.signature = members.T.astype(np.int64) @ self.marks
+        sizes = np.diff(members.indptr)
+        self.known = np.zeros(members.shape[1], bool)
+        self.known[members[sizes == 1].indices] = True
+        self.spare = ~self.known & ~sums.lone
+        self.signatures, kind = np.unique(self.signature, return_inverse=True)
+        self.kind = kind.reshape(-1)
+        self.many = len(self.signatures)
+        self.unbound = (self.signatures == 0) & (np.bincount(self.kind, ~self.known, self.many) > 0)
+        self.spares = self.total(np.ones(len(self.kind)))
+        self.parts = np.array([self.total(part) for part in sums.values])
+        self.need = self.total(sums.least)
+
+    def total(self, values):
+        """Sum over the spare atoms of each kind."""
+        return np.bincount(self.kind, np.where(self.spare, values, 0.0), self.many)
+
+    def find(self, signature):
+        """Kind of each signature, -1 where no atom has it."""
+        place = np.minimum(np.searchsorted(self.signatures, signature), self.many - 1)
+        return np.where(self.signatures[place] == signature, place, -1)
+
+
+def _exchange(sums, targets, published):
+    """How far targets can deviate down and up by simple exchanges, for all of them at once.
+
+    A lower bound of what the linear programmes allow.
+    """
+    kinds = _Kinds(sums, published)
+    down, up = _within_kind(sums, targets, kinds)
+    swap_down, swap_up = _across_a_border(sums, targets, kinds)
+    return np.maximum(down, swap_down), np.maximum(up, swap_up)
+
+
+def _within_kind(sums, targets, kinds):
+    """Exchange with atoms of the same kind: they give what they can spare, or take the rest."""
+    rows, atoms = targets.members.nonzero()
+    movable = ~kinds.known[atoms]
+    pair, place = np.unique(rows * kinds.many + kinds.kind[atoms], return_inverse=True)
+    place = place.reshape(-1)
+    row, kind = pair // kinds.many, pair % kinds.many
+    spare = kinds.spare[atoms]
+
+    def others(total, values):
+        return total[kind] - np.bincount(place, np.where(spare, values, 0.0), len(pair))
+
+    room = [others(*pieces) for pieces in zip(kinds.parts, sums.values[:, atoms])]
+    need = others(kinds.need, sums.least[atoms])
+    wanted = targets.parts[row].T
+    offered = sum(np.where(use, part, 0.0) for use, part in zip(wanted, room))
+    elsewhere = sum(np.where(use, 0.0, part) for use, part in zip(wanted, room))
+    raised = np.maximum(offered - np.maximum(need - elsewhere, 0.0), 0.0)
+    raised[np.bincount(place, ~movable, len(pair)) > 0] = 0.0
+    raised[kinds.unbound[kind]] = np.inf
+    up = np.zeros(targets.members.shape[0])
+    np.maximum.at(up, row, raised)
+
+    takes = (others(kinds.spares, np.ones(len(atoms))) > 0) | kinds.unbound[kind]
+    lowered = np.where(movable & takes[place], _above_floor(sums, targets, rows, atoms), 0.0)
+    return np.bincount(rows, lowered, len(up)), up
+
+
+def _above_floor(sums, targets, rows, atoms):
+    """How far an atom can fall in the parts that its target adds up."""
+    use = targets.parts[rows].T
+    value = np.where(use, sums.values[:, atoms], 0.0).sum(0)
+    rest = np.where(use, 0.0, sums.values[:, atoms]).sum(0)
+    return np.maximum(value - np.maximum(sums.least[atoms] - rest, 0.0), 0.0)
+
+
+def _across_a_border(sums, targets, kinds):
+    """Exchange of one piece of a published cell with another piece of it.
+
+    What the piece gains its neighbour across the border loses; on either side withheld atoms
+    make up for it.
+    """
+    count = targets.members.shape[0]
+    down, up = np.zeros(count), np.zeros(count)
+    single = np.flatnonzero(np.diff(targets.members.indptr) == 1)
+    piece = targets.members.indices[targets.members.indptr[single]]
+    cut = kinds.members[np.diff(kinds.members.indptr) > 1]
+    marks = kinds.marks[np.diff(kinds.members.indptr) > 1]
+    by_atom = cut.T.tocsr()
+    for target, atom in zip(single, piece):
+        if kinds.known[atom]:
+            continue
+        for line in by_atom.indices[by_atom.indptr[atom] : by_atom.indptr[atom + 1]]:
+            siblings = cut.indices[cut.indptr[line] : cut.indptr[line + 1]]
+            if len(siblings) > MOST_PIECES:
+                continue
+            beside = kinds.find(kinds.signature[siblings] - marks[line])
+            here = beside[siblings == atom][0]
+            for sibling, there in zip(siblings, beside):
+                if sibling == atom or sums.lone[sibling] or kinds.known[sibling]:
+                    continue
+                if here < 0 or there < 0:
+                    continue
+                use = targets.parts[target]
+                up[target] = max(up[target], _swapped(sums, kinds, use, sibling, here, there))
+                down[target] = max(down[target], _swapped(sums, kinds, use, atom, there, here))
+    return down, up
+
+
+def _swapped(sums, kinds, use, giver, from_kind, to_kind):
+    """How much a piece can lose while withheld atoms lose on one side and gain on the other."""
+    if not (kinds.spares[to_kind] > 0 or kinds.unbound[to_kind]):
+        return 0.0
+    given = sums.values[:, giver]
+    room = kinds.parts[:, from_kind]
+    floor, need = sums.least[giver], kinds.need[from_kind]
+    if kinds.unbound[from_kind]:
+        room, need = np.full(len(given), np.inf), 0.0
+    moved = np.where(use, np.minimum(given, room), 0.0).sum()
+    rest, room_rest = given[~use].sum(), room[~use].sum()
+    limit = min(
+        given[use].sum() - max(floor - rest, 0.0), room[use].sum() - max(need - room_rest, 0.0)
+    )
+    return max(min(moved, limit), 0.0)
+
+
+def complementary_withholding(sums, targets, withheld, cost, fixed, rng, progress=silent):
+    """Withhold further sums until every target is protected.
+
+    Parameters
+    ----------
+    sums : outsider.Sums
+    targets : outsider.Targets
+    withheld : (sums,) bool array
+        Sums that are unsafe by themselves.
+    cost : (sums,) float array
+        What withholding a sum loses: its records.
+    fixed : (sums,) bool array
+        Sums that cannot be withheld, because they are public already.
+    rng : numpy.random.Generator
+    progress : callable
+
+    Returns
+    -------
+    Withholding
+
+    Raises
+    ------
+    InputError
+        If the fixed sums give a target away whatever else is withheld.
+    """
+    published = ~withheld
+    if (withheld & fixed).any():
+        raise InputError(
+            f"{int((withheld & fixed).sum())} totals that are said to be public already are unsafe "
+            "by the rules; they cannot be protected here. Raise it with the data's owner."
+        )
+    costs = cost * np.exp(COST_SPREAD * rng.standard_normal(len(cost)))
+    proofs = Proofs(sums, targets)
+    values = proofs.values
+    total_rounds, unsure = 0, targets.active(published)
+    while True:
+        below, above = unprotected(sums, targets, published, progress, proofs, unsure)
+        gaps = np.where(above, targets.upper - values, np.where(below, values - targets.lower, 0))
+        open_ones = np.flatnonzero(gaps > 0)
+        if not len(open_ones):
+            break
+        # withholding more makes no interval narrower, so what is protected stays so
+        unsure = ~targets.active(published)
+        unsure[open_ones] = True
+        for place in _spread_over_sums(sums, targets, published, open_ones, gaps):
+            total_rounds += 1
+            progress(min(0.9, total_rounds / (total_rounds + 20.0)))
+            direction = 1 if above[place] else -1
+            added = _cheapest_cover(
+                sums, targets, published, fixed, costs, place, direction, gaps[place]
+            )
+            published[added] = False
+    complementary = ~published & ~withheld
+    _publish_what_is_not_needed(proofs, published, complementary, costs, rng, progress)
+    return Withholding(published, ~published & ~withheld)
+
+
+def _spread_over_sums(sums, targets, published, open_ones, gaps):
+    """The widest gaps first, one target for each set of published sums that contain it."""
+    members = sums.members[published]
+    members = members[np.diff(members.indptr) < 0.5 * members.shape[1]]
+    inside = (targets.members[open_ones] @ members.T).tocsr()
+    inside.sort_indices()
+    chosen, seen = [], set()
+    for index in np.argsort(-gaps[open_ones], kind="stable"):
+        touched = inside.indices[inside.indptr[index] : inside.indptr[index + 1]].tolist()
+        if not seen.intersection(touched):
+            chosen.append(open_ones[index])
+        seen.update(touched)
+    return chosen
+
+
+def _cheapest_cover(sums, targets, published, fixed, costs, place, direction, gap):
+    """Sums to withhold so that one target can deviate by its gap."""
+    members = targets.members[place].indices
+    free = ~sums.lone
+    free[members] = True
+    columns = np.flatnonzero(free)
+    rows = np.flatnonzero(published)
+    part_of = sums.members[rows][:, columns]
+    size = np.asarray(sums.members[rows] @ sums.values.sum(0)).ravel()
+    worth = np.clip(size, TOLERANCE, gap)
+    movable = np.flatnonzero(~fixed[rows])
+    slack = sparse.csr_matrix(
+        (np.ones(len(movable)), (movable, np.arange(len(movable)))), (len(rows), len(movable))
+    )
+    equal = sparse.block_diag([sparse.hstack([part_of, slack, -slack])] * sums.parts).tocsr()
+    block = len(columns) + 2 * len(movable)
+    lower, floor, floor_at = floors(sums, columns)
+    lower = lower.reshape(sums.parts, -1)
+    objective = np.zeros((sums.parts, block))
+    price = costs[rows][movable] / worth[movable]
+    objective[:, len(columns) :] = np.concatenate([price, price])
+    bounds = np.zeros((sums.parts, block, 2))
+    bounds[:, :, 1] = np.inf
+    bounds[:, : len(columns), 0] = lower
+    aim = np.zeros((sums.parts, block))
+    aim[
+        np.ix_(targets.parts[place], np.isin(np.arange(block), np.searchsorted(columns, members)))
+    ] = 1
+    unequal = at_most = None
+    if floor is not None:
+        pad = sparse.csr_matrix((len(columns), 2 * len(movable)))
+        unequal = sparse.hstack(
+            [piece for _ in range(sums.parts) for piece in (-sparse.identity(len(columns)), pad)]
+        ).tocsr()
+        at_most = floor_at
+    solution = linprog(
+        objective.ravel(),
+        A_ub=unequal,
+        b_ub=at_most,
+        A_eq=sparse.vstack([equal, sparse.csr_matrix(aim.reshape(1, -1))]).tocsr(),
+        b_eq=np.concatenate([np.zeros(equal.shape[0]), [direction * gap]]),
+        bounds=bounds.reshape(-1, 2),
+        method="highs",
+    )
+    if solution.status != 0:
+        raise InputError(
+            "The totals that are said to be public already give an unsafe cell away whatever else "
+            "is withheld. Choose larger cells, or settle with the data's owner which totals stand."
+        )
+    moved = solution.x.reshape(sums.parts, block)[:, len(columns) :]
+    moved = np.abs(moved[:, : len(movable)] - moved[:, len(movable) :]).max(0)
+    return rows[movable[moved > TOLERANCE]]
+
+
+def _publish_what_is_not_needed(proofs, published, complementary, costs, rng, progress):
+    """Publish again, dearest first, what turns out not to be needed; `published` is changed.
+
+    A few are left withheld at random, so that nobody can reckon that each one was needed.
+    """
+    order = np.flatnonzero(complementary)
+    order = order[np.argsort(-costs[order], kind="stable")][:MOST_RETRIES]
+    for number, candidate in enumerate(order):
+        progress(0.9 + 0.1 * number / len(order))
+        if rng.random() < KEEP_ANYWAY:
+            continue
+        published[candidate] = True
+        below, above = unprotected(
+            proofs.sums, proofs.targets, published, progress, proofs, any_one=True
+        )
+        if below.any() or above.any():
+            published[candidate] = False
