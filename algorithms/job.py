@@ -5,11 +5,12 @@ import os
 import re
 import secrets
 
-from qgis.core import QgsProcessingUtils, QgsProperty, QgsVectorLayer
+from qgis.core import QgsProcessingUtils, QgsProperty, QgsProviderRegistry, QgsVectorLayer
 
-from ..plugin import layers, outputs, rasters, reference_system
+from ..plugin import alignment, layers, outputs, rasters, reference_system
 from ..plugin.host import field_names
 from ..plugin.looks import style_output
+from ..plugin.pictures import drawing_to_png
 from ..plugin.report import versions
 from ..plugin.text import number, tr
 from .numeric.errors import CancelledError, InputError
@@ -234,6 +235,54 @@ class Job:
         except InputError as error:
             raise InputError(f"{self.label(name)}: {error}") from error
 
+    def rasters(self, name, least=2, most=None):
+        """Raster layers on one grid; settles the working CRS.
+
+        Parameters
+        ----------
+        name : str
+            Parameter added with ``add_rasters``.
+        least, most : int
+            Number of layers that make sense.
+
+        Returns
+        -------
+        grid : numeric.grid.Grid
+        list of plugin.alignment.Aligned
+            In the order chosen.
+        """
+        chosen = self.algorithm.parameterAsLayerList(self.parameters, name, self.context)
+        if len(chosen) < least or (most is not None and len(chosen) > most):
+            wanted = f"{least} – {most}" if most is not None else tr("{} or more").format(least)
+            raise InputError(
+                tr("{}: {} layers are wanted; found {}.").format(
+                    self.label(name), wanted, len(chosen)
+                )
+            )
+        followed = chosen[0]
+        if self.given("GRID"):
+            followed = self.algorithm.parameterAsRasterLayer(self.parameters, "GRID", self.context)
+        transform_context = self.context.transformContext()
+        self._working, grid = alignment.common_grid(
+            followed, transform_context, self.real("CELL_SIZE")
+        )
+        alignment.check_overlap(chosen, grid, self._working.crs, transform_context)
+        self.inform(
+            tr("Grid: {} x {} pixels of {} m, as {}; {} ({})").format(
+                number(grid.rows),
+                number(grid.columns),
+                number(grid.cell * self._working.metres),
+                followed.name(),
+                self._working.crs.userFriendlyIdentifier(),
+                self._working.note,
+            )
+        )
+        band = self.whole("BAND")
+        aligned = [alignment.align(layer, grid, self._working.crs, band) for layer in chosen]
+        for layer in aligned:
+            self.inform(tr("{}: {}").format(layer.name, layer.how))
+        return grid, aligned
+
     # writing
 
     def discard(self):
@@ -263,6 +312,12 @@ class Job:
             return
         path = self.algorithm.parameterAsOutputLayer(self.parameters, name, self.context)
         rasters.write_raster(path, grid, self.working.crs, bands, self._check, **how)
+        self._keep(name, path, "raster", look)
+
+    def write_picture(self, name, grid, windows, levels_of, look, progress):
+        """Write a picture with transparency window by window, see `rasters.write_picture`."""
+        path = self.algorithm.parameterAsOutputLayer(self.parameters, name, self.context)
+        rasters.write_picture(path, grid, self.working.crs, windows, levels_of, progress)
         self._keep(name, path, "raster", look)
 
     def write_layer(self, name, columns, geometry, kind, look=None):
@@ -341,6 +396,26 @@ class Job:
         self._written.append(path)
         self.results[name] = path
 
+    def write_drawing(self, name, svg):
+        """Write a drawing and, beside it under the same name, its rendering as PNG."""
+        path = self.algorithm.parameterAsFileOutput(self.parameters, name, self.context)
+        if not path.lower().endswith(".svg"):
+            raise InputError(
+                tr("{}: choose a name that ends in .svg; found {}.").format(
+                    self.label(name), os.path.basename(path)
+                )
+            )
+        self.write_file(name, svg)
+        try:
+            png = drawing_to_png(svg)
+        except ImportError:
+            self.warn(tr("The PNG of the legend is left out: this host cannot render drawings."))
+            return
+        beside = os.path.splitext(path)[0] + ".png"
+        self._written.append(beside)
+        with open(beside, "wb") as file:
+            file.write(png)
+
     def give(self, name, value):
         """Return a number output."""
         self.results[name] = value
@@ -379,7 +454,10 @@ class Job:
         if kind == "field":
             return ", ".join(field_names(self.algorithm, self.parameters, name, self.context))
         if kind == "distance":
-            return f"{self.real(name):g} m"
+            length = self.real(name)
+            return f"{length:g} m" if length else tr("0 m: chosen by the tool")
+        if kind == "boolean":
+            return tr("yes") if self.flag(name) else tr("no")
         if isinstance(value, QgsProperty):
             value = self.algorithm.parameterAsString(self.parameters, name, self.context)
         return os.path.basename(str(value)) if kind in ("file", "folder") else str(value)
@@ -390,4 +468,8 @@ class Job:
         layer = value
         if isinstance(value, str):
             layer = QgsProcessingUtils.mapLayerFromString(value, self.context)
-        return layer.name() if hasattr(layer, "name") else tr("a layer")
+        if not hasattr(layer, "name"):
+            return tr("a layer")
+        parts = QgsProviderRegistry.instance().decodeUri(layer.providerType(), layer.source())
+        table = parts.get("layerName") or ""
+        return layer.name() if table in layer.name() else f"{layer.name()}: {table}"
