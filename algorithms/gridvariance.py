@@ -235,7 +235,7 @@ def simulate(job, study):
             part(job.progress, 0.05, 0.95),
         )
     check_values(job, study, scales)
-    parts, p_above, evidence = lattice_variance.decompose_scales(scales)
+    parts, p_above, evidence, covered = lattice_variance.decompose_scales(scales)
     deviations = {
         name: study.factor * np.sqrt(getattr(parts, name))
         for name in ("scale", "zoning", "counting")
@@ -246,7 +246,7 @@ def simulate(job, study):
         deviations,
         p_above,
         evidence,
-        variance.verdict(p_above, evidence),
+        variance.verdict(p_above, evidence, covered),
         None if halves is None else lattice_variance.allocate(scales, halves),
     )
 

@@ -292,7 +292,9 @@ def method_words(job, study, shape):
             "Biometrika 35:246), averaged over zonings, is at least 1.96 in size. The second "
             "condition is needed because one set of records has chance clusters that show under "
             "nearly every cut; with it, at most about 5 % of places whose true value equals the "
-            "threshold are called settled."
+            "threshold are called settled. A place without a value in more than half of the "
+            "zonings "
+            "is not settled."
         ),
         tr(
             "Averaging squares of one size over shifts is the averaged shifted histogram (Scott "

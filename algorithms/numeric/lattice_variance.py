@@ -141,19 +141,23 @@ def run_scales(
 
 
 def decompose_scales(scales):
-    """Decomposition, p_above and evidence of every place over all cell sizes.
+    """Decomposition of every place over all cell sizes, and what its verdict rests on.
 
     Returns
     -------
-    Decomposition, (places,) array, (places,) array
+    Decomposition
+    p_above, evidence, covered : (places,) arrays
+        As `variance.share_above` and `variance.coverage` return them.
     """
     replicates = [scale.replicates for scale in scales]
+    tallies = [scale.tally for scale in scales]
     parts = variance.decompose(
         [scale.moments for scale in scales],
         replicates,
         [scale.per_scenario(scale.counting) for scale in scales],
     )
-    return (parts, *variance.share_above([scale.tally for scale in scales], replicates))
+    p_above, evidence = variance.share_above(tallies, replicates)
+    return parts, p_above, evidence, variance.coverage(tallies, replicates)
 
 
 def allocate(scales, halves):

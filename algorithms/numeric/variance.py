@@ -22,6 +22,7 @@ DEPENDS = 0
 
 HOLD_SHARE = 0.95
 LEAST_EVIDENCE = 1.96
+LEAST_COVERAGE = 0.5
 
 
 class RunningMoments:
@@ -371,7 +372,22 @@ def share_above(tallies, replicates):
     return (weights * above).sum(axis=0), (weights * evidence).sum(axis=0)
 
 
-def verdict(p_above, evidence, hold_share=HOLD_SHARE, least_evidence=LEAST_EVIDENCE):
+def coverage(tallies, replicates):
+    """Share of all scenarios that gave a place a value, every scale weighing the same.
+
+    Parameters
+    ----------
+    tallies : sequence of ThresholdTally, one a scale
+    replicates : sequence of int
+
+    Returns
+    -------
+    (places...) array, 0 to 1
+    """
+    return np.mean([tally.count / run for tally, run in zip(tallies, replicates)], axis=0)
+
+
+def verdict(p_above, evidence, covered=None, hold_share=HOLD_SHARE, least_evidence=LEAST_EVIDENCE):
     """Does the place stand above or below the threshold under any cut, beyond chance?
 
     Two things are asked. The side must be the same under nearly every cut: p_above is at least
@@ -384,12 +400,15 @@ def verdict(p_above, evidence, hold_share=HOLD_SHARE, least_evidence=LEAST_EVIDE
     each other: with 1.96, at most about 5 % of such places pass by chance, both sides together
     (normal approximation). In simulated towns of constant risk, p_above alone called 3 % to
     12 % of the ground settled, and up to 92 % with one small cell size and few records; with
-    both conditions it was under 1 % on average and 1.3 % at most.
+    both conditions it was under 1 % on average and 1.3 % at most. And where most scenarios
+    gave no value, nothing can be said to hold under any cut.
 
     Parameters
     ----------
     p_above, evidence : (places...) arrays
         As `share_above` returns them.
+    covered : (places...) array, optional
+        As `coverage` returns it; below `LEAST_COVERAGE` a place is not settled.
     hold_share, least_evidence : float
 
     Returns
@@ -403,6 +422,8 @@ def verdict(p_above, evidence, hold_share=HOLD_SHARE, least_evidence=LEAST_EVIDE
     above = (p_above >= hold_share - slack) & (evidence >= least_evidence)
     below = (p_above <= 1 - hold_share + slack) & (evidence <= -least_evidence)
     code = np.where(above, HOLDS_ABOVE, np.where(below, HOLDS_BELOW, DEPENDS)).astype(float)
+    if covered is not None:
+        code = np.where(np.asarray(covered) < LEAST_COVERAGE, DEPENDS, code)
     return np.where(np.isnan(p_above), np.nan, code)
 
 

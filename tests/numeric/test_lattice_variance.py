@@ -138,7 +138,7 @@ def stored_values(study, sizes, shape, replicates, seed, rotate=True):
 def test_running_sums_agree_with_numpy_on_every_stored_scenario():
     study, sizes, replicates = town(6, pixels=15), (400.0, 900.0, 2000.0), 60
     scales = lattice_variance.run_scales(study, sizes, "hexagon", replicates, 12)
-    parts, p_above, _ = lattice_variance.decompose_scales(scales)
+    parts, p_above, _, _ = lattice_variance.decompose_scales(scales)
     values = stored_values(study, sizes, "hexagon", replicates, 12)
     share = np.stack([(~np.isnan(v)).mean(axis=0) for v in values])
     weight = share / share.sum(axis=0)
@@ -218,8 +218,8 @@ def test_on_pure_noise_under_five_percent_of_the_ground_is_called_settled(sizes,
     for seed in range(5):
         study = town(100 + seed, residents=8000, rate=rate)
         scales = lattice_variance.run_scales(study, sizes, "hexagon", 50, seed)
-        _, p_above, evidence = lattice_variance.decompose_scales(scales)
-        code = variance.verdict(p_above, evidence)
+        _, p_above, evidence, covered = lattice_variance.decompose_scales(scales)
+        code = variance.verdict(p_above, evidence, covered)
         known = ~np.isnan(code)
         settled.append(np.mean(code[known] != 0))
         plain.append(np.mean((p_above[known] >= 0.95) | (p_above[known] <= 0.05)))
@@ -240,8 +240,8 @@ def test_a_true_raised_area_is_found_to_hold():
         "share",
     )
     scales = lattice_variance.run_scales(raised, (1000.0, 1500.0, 2000.0), "hexagon", 60, 5)
-    _, p_above, evidence = lattice_variance.decompose_scales(scales)
-    code = variance.verdict(p_above, evidence)
+    _, p_above, evidence, covered = lattice_variance.decompose_scales(scales)
+    code = variance.verdict(p_above, evidence, covered)
     distance = np.hypot(raised.place_x - 5000, raised.place_y - 5000)
     assert np.mean(code[distance < 1000] == 1) > 0.9
     assert np.mean(code[distance > 3500] == 1) < 0.01

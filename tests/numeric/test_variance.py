@@ -203,3 +203,16 @@ def test_verdict_asks_for_one_side_under_nearly_every_cut_and_for_more_than_chan
     np.testing.assert_array_equal(
         variance.verdict(p_above, evidence), [1, 1, 0, 0, -1, -1, 0, 0, np.nan, 1]
     )
+
+
+def test_a_place_that_most_scenarios_leave_without_a_value_is_not_settled():
+    tallies = [variance.ThresholdTally(3), variance.ThresholdTally(3)]
+    for scale, counts in enumerate([(10, 0, 0), (20, 20, 12)]):
+        tallies[scale].count = np.array(counts)
+        tallies[scale].above = np.array(counts, float)
+        tallies[scale].evidence = np.array(counts) * 5.0
+    covered = variance.coverage(tallies, [10, 20])
+    np.testing.assert_allclose(covered, [1.0, 0.5, 0.3])
+    p_above, evidence = variance.share_above(tallies, [10, 20])
+    np.testing.assert_array_equal(p_above, [1, 1, 1])
+    np.testing.assert_array_equal(variance.verdict(p_above, evidence, covered), [1, 1, 0])
