@@ -3,6 +3,8 @@
 import numpy as np
 import pytest
 import shapely
+from scipy.integrate import quad
+from scipy.stats import norm
 from steadfield.algorithms.numeric import edges, surface
 from steadfield.algorithms.numeric.adaptation import adaptive_bandwidths
 from steadfield.algorithms.numeric.errors import InputError
@@ -142,19 +144,17 @@ def test_uniform_pattern_is_flat_by_place_with_an_adaptive_bandwidth():
     assert np.abs(corrected[mask > 0.5] - 1).max() < 0.05
 
 
-def test_uniform_pattern_is_flat_to_the_border_by_record_on_average():
-    # Diggle's correction holds the total, and the mean to the border within a few per cent of
-    # the area just inside and further in
-    polygon = district()
-    x, y, weights, grid, mask = even_records(polygon, 10.0)
+def test_correction_by_record_follows_its_known_course_at_a_straight_border():
+    # of a uniform pattern Diggle's corrected mean at a depth d is the integral over the ground of
+    # phi(d - u) / Phi(u), which is ln 2 on the border itself and 1 further in
+    x, y, weights, grid, mask = even_records(shapely.box(0, 0, 300, 300), 5.0)
     factors = edges.record_factors(x, y, np.full(len(x), 25.0), mask, grid)
     total = surface.adaptive_surface(x, y, weights / factors, 25.0, grid)
-    centre_x, centre_y = grid.centres()
-    depth = shapely.distance(polygon.boundary, shapely.points(centre_x, centre_y))
-    inside = shapely.contains_xy(polygon, centre_x, centre_y)
-    rim, core = inside & (depth < 25.0), inside & (depth > 100.0)
-    assert total[rim].mean() == pytest.approx(1.0, abs=0.05)
-    assert total[core].mean() == pytest.approx(1.0, abs=0.01)
+    found = total[30, :20]
+    depths = grid.x_centres()[:20] / 25.0
+    known = [quad(lambda u, d=d: norm.pdf(d - u) / norm.cdf(u), 0, 9)[0] for d in depths]
+    assert quad(lambda u: norm.pdf(u) / norm.cdf(u), 0, 9)[0] == pytest.approx(np.log(2))
+    assert found == pytest.approx(known, abs=0.01)
 
 
 def test_adaptive_bandwidths_do_not_widen_at_the_border_of_a_uniform_pattern():
