@@ -34,7 +34,7 @@ FULL_FALLS = 6_000
 FULL_UNITS = 900
 FULL_MARSH_RESIDENTS = 260
 WARD_COUNT = 14
-SMALLEST, LARGEST = 0.05, 1.0
+SMALLEST, LARGEST = 0.1, 1.0
 # Invented; given from the market square outwards, but for the works and the marsh at the end.
 WARD_NAMES = (
     "Bell Quay",
@@ -168,7 +168,7 @@ def make_district(seed, size=1.0, progress=silent):
         Not below 0. The same seed and size give the same district, to the bit, on the same versions
         of the libraries.
     size : float
-        Share of the full district, 0.05 to 1: people, falls, units and ground shrink alike, so
+        Share of the full district, 0.1 to 1: people, falls, units and ground shrink alike, so
         densities stay. At 1 there are about 90,000 residents and 6,000 falls, and exactly 900 base
         units; always 14 wards.
     progress : callable

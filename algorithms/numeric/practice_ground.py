@@ -199,8 +199,10 @@ def _river_course(rng, scale):
     for wavelength, amplitude in ((17.0, 1.3), (7.5, 0.75), (4.1, 0.34), (2.3, 0.1)):
         wander += amplitude * np.sin(2 * math.pi * along / wavelength + rng.uniform(0, 2 * math.pi))
     wander -= np.interp(0.0, along, wander)
-    tilt = rng.uniform(-0.08, 0.08)
-    return x, (0.55 + wander + tilt * along) * KILOMETRE * scale
+    # Downstream it runs straighter and to the south, which leaves room for the marsh north of it.
+    downstream = np.clip((along - 3.5) / 4.0, 0.0, 1.0)
+    course = 0.55 + wander * (1.0 - 0.65 * downstream) - 0.9 * downstream
+    return x, course * KILOMETRE * scale
 
 
 def _river_water(x, y, scale):
@@ -228,10 +230,12 @@ def _marsh(rng, scale, boundary, river_line):
     line = shapely.LineString(np.column_stack([x, y]))
     lines = shapely.union_all([boundary.exterior, river_line, line])
     faces = shapely.get_parts(shapely.polygonize(shapely.get_parts(lines)))
-    inside = shapely.contains(boundary, shapely.point_on_surface(faces))
-    faces = faces[inside]
-    beside = shapely.Point(x[12] + 0.9 * KILOMETRE * scale, y[12])
-    return line, faces[np.argmin(shapely.distance(faces, beside))]
+    inner = shapely.point_on_surface(faces)
+    inner_x, inner_y = shapely.get_x(inner), shapely.get_y(inner)
+    downstream = (inner_x - start_x) * math.sin(angle) > (inner_y - start_y) * math.cos(angle)
+    north = inner_y > np.interp(inner_x, river_x, river_y)
+    marsh = shapely.contains(boundary, inner) & north & downstream
+    return line, faces[np.argmax(np.where(marsh, shapely.area(faces), -1.0))]
 
 
 def _industry(rng, scale, river_x, river_y):

@@ -180,8 +180,10 @@ def place_risk(rng, ground, units, ward, ward_polygons, residents, unit_of, fall
     )
     inner = shapely.point_on_surface(units.polygons)
     inner_x, inner_y = shapely.get_x(inner), shapely.get_y(inner)
-    apart = np.hypot(inner_x - x, inner_y - y) > 5.0 * radius
-    allowed = np.flatnonzero(apart & ~np.isin(ward, straddled) & (units.region != MARSH))
+    away = np.hypot(inner_x - x, inner_y - y)
+    elsewhere = ~np.isin(ward, straddled) & (units.region != MARSH)
+    apart = away >= min(5.0 * radius, np.median(away[elsewhere]))
+    allowed = np.flatnonzero(elsewhere & apart)
     at, contained_radius = _contained_area(rng, inner_x, inner_y, ward, allowed, residents, ward_of)
     shape = TrueRisk(
         base=1.0,

@@ -1,0 +1,160 @@
+"""Faults in the fields of point records: repeats, record numbers, weights and missing values."""
+
+import numpy as np
+
+from .record_faults import FAULT, FINE, LOOK, SMALL_NUMBER, Check, of_all
+
+DOMINANT_SHARE = 0.1
+
+
+def check_duplicates(records, content=None):
+    """Records that repeat another one, place and contents alike.
+
+    Parameters
+    ----------
+    records : RawRecords
+    content : (n,) int array, optional
+        A number for each distinct set of field values, the record's own number included. Without it
+        nothing can be told from flats, where people share a place, and nothing is reported.
+
+    Returns
+    -------
+    Check
+        The first of each set of duplicates is not among those found.
+    """
+    found = np.zeros(len(records.x), bool)
+    if content is None:
+        return Check("duplicate", FINE, found, "Without fields, duplicates cannot be told.")
+    placed = np.flatnonzero(records.placed)
+    rows = np.column_stack([records.stored_x, records.stored_y, content])[placed]
+    _, first, inverse = np.unique(rows, axis=0, return_index=True, return_inverse=True)
+    repeated = np.arange(len(placed)) != first[inverse.ravel()]
+    found[placed[repeated]] = True
+    if not found.any():
+        return Check("duplicate", FINE, found, "No record repeats another in place and all fields.")
+    return Check(
+        "duplicate",
+        FAULT,
+        found,
+        f"{of_all(found)} repeat another record, with the same place and the same value in every "
+        f"field.",
+        "Most likely a file was loaded twice; remove the repeats, which would count double.",
+    )
+
+
+def check_keys(keys):
+    """Record numbers that were given twice or are missing.
+
+    Parameters
+    ----------
+    keys : (n,) array
+        Of comparable values; None or NaN where missing.
+
+    Returns
+    -------
+    Check
+        All but the first of each repeated number, and those without one.
+    """
+    missing = null_mask(keys)
+    labels = np.array([str(key) for key in keys], object)
+    _, first, inverse = np.unique(labels.astype(str), return_index=True, return_inverse=True)
+    repeated = (np.arange(len(labels)) != first[inverse.ravel()]) & ~missing
+    found = repeated | missing
+    if not found.any():
+        return Check("record number", FINE, found, "Every record has a number of its own.")
+    return Check(
+        "record number",
+        FAULT,
+        found,
+        f"{of_all(repeated)} have a number that was given before, {of_all(missing)} have none.",
+        "Find out whether a record was loaded twice or two records were given one number.",
+    )
+
+
+def check_weights(weights):
+    """Weights that are null, negative, zero, or carried by one record.
+
+    Parameters
+    ----------
+    weights : (n,) float array
+        NaN for null and for what is not a number.
+
+    Returns
+    -------
+    list of Check
+    """
+    known = np.isfinite(weights)
+    total = weights[known & (weights > 0)].sum()
+    with np.errstate(invalid="ignore"):
+        negative, zero = known & (weights < 0), weights == 0
+        dominant = known & (weights > DOMINANT_SHARE * total) & (known.sum() >= SMALL_NUMBER)
+    return [
+        _weight_check(
+            "null weight",
+            FAULT,
+            ~known,
+            "have no weight or one that is not a number",
+            "Find the weight, or give 1 where a record counts once. They are left out.",
+        ),
+        _weight_check(
+            "negative weight",
+            FAULT,
+            negative,
+            "have a negative weight",
+            "A weight is a number of events or people; correct it. They are left out.",
+        ),
+        _weight_check(
+            "zero weight",
+            LOOK,
+            zero,
+            "have the weight 0",
+            "They count for nothing; make sure that 0 does not stand for “unknown”.",
+        ),
+        _weight_check(
+            "dominant weight",
+            LOOK,
+            dominant,
+            f"have more than {DOMINANT_SHARE:.0%} of the total weight each",
+            "A map of this weight shows these records and little else; check the value.",
+        ),
+    ]
+
+
+def check_nulls(name, values):
+    """Missing values of a field.
+
+    Parameters
+    ----------
+    name : str
+    values : (n,) array
+
+    Returns
+    -------
+    Check
+    """
+    found = null_mask(values)
+    key = f"null {name}"
+    if not found.any():
+        return Check(key, FINE, found, f"The field {name} has a value in every record.")
+    share = found.mean()
+    return Check(
+        key,
+        FAULT,
+        found,
+        f"{of_all(found)} have no value in the field {name} ({share:.1%} of all).",
+        "Records without a group form no group of their own; complete them or count them apart.",
+    )
+
+
+def null_mask(values):
+    """Which values are missing: None, NaN or an empty text, (n,) bool array."""
+    values = np.asarray(values)
+    if values.dtype != object:
+        return np.isnan(values) if values.dtype.kind == "f" else np.zeros(len(values), bool)
+    return np.array([value is None or value != value or value == "" for value in values], bool)
+
+
+def _weight_check(key, severity, found, words, advice):
+    if not found.any():
+        return Check(key, FINE, found, f"No records {words}.")
+    return Check(key, severity, found, f"{of_all(found)} {words}.", advice)
