@@ -78,11 +78,13 @@ class Advice:
     warnings : tuple of str
         What a reader must know of the records, one sentence or two each.
     bandwidths : (m,) array
-        Of the curves, metres.
+        Of the least-squares curve, metres.
     least_squares_curve : (m,) array
         Score, per square metre; small is good.
-    likelihood_curve : (m,) array
-        Mean log density per square metre; large is good. NaN where not asked.
+    likelihood_bandwidths : (k,) array
+        Of the likelihood curve, metres: every second one, as each takes a surface of its own.
+    likelihood_curve : (k,) array
+        Mean log density, the density per square metre; large is good.
     near_boundary : float
         Share of the records within one advised bandwidth of the boundary; NaN without one.
     diagnosis : Diagnosis
@@ -97,6 +99,7 @@ class Advice:
     warnings: tuple
     bandwidths: np.ndarray
     least_squares_curve: np.ndarray
+    likelihood_bandwidths: np.ndarray
     likelihood_curve: np.ndarray
     near_boundary: float
     diagnosis: Diagnosis
@@ -139,10 +142,17 @@ def advise(x, y, weights=None, boundary=None, progress=silent):
         x, y, weights, bandwidths[0], bandwidths[-1], part(progress, 0.05, 0.2)
     )
     squares = least_squares_scores(x, y, bandwidths, weights, spectrum)
-    likelihoods = likelihood_scores(x, y, bandwidths, weights, spectrum, part(progress, 0.2, 1.0))
+    fewer = bandwidths[1::2]
+    likelihoods = likelihood_scores(x, y, fewer, weights, spectrum, part(progress, 0.2, 1.0))
     least_squares = best_inside(bandwidths, -squares)
-    likelihood = best_inside(bandwidths, likelihoods)
+    likelihood = best_inside(fewer, likelihoods)
     advised, reason = _choose(diagnosis, normal, widest, least_squares, likelihood)
+    if advised > max(widest, diagnosis.rounding):
+        advised = max(widest, diagnosis.rounding)
+        reason += (
+            " It is held at the oversmoothed value, the most that any density of this spread asks "
+            "for."
+        )
     near = _near_boundary(x, y, weights, boundary, advised)
     warnings = _warnings(diagnosis, advised, least_squares, likelihood, near)
     return Advice(
@@ -155,6 +165,7 @@ def advise(x, y, weights=None, boundary=None, progress=silent):
         tuple(warnings),
         bandwidths,
         squares,
+        fewer,
         likelihoods,
         near,
         diagnosis,
@@ -213,12 +224,12 @@ def lattice_spacing(nearest):
 
 
 def search_range(x, y, normal, widest, diagnosis):
-    """Bandwidths to examine, up to a quarter above the oversmoothed one.
+    """Bandwidths to examine, up to well above the oversmoothed one.
 
     The lower end is a fortieth of the normal scale, or more where the nearest neighbours, the
     rounding of the coordinates or the size of the lattice allow no narrower ones.
     """
-    highest = 1.25 * max(normal, widest)
+    highest = 1.6 * max(normal, widest)
     lowest = max(
         normal / 40,
         diagnosis.nearest / 2,

@@ -14,7 +14,7 @@ from .progress import silent
 
 NEIGHBOURS = 24
 # A node of a lattice costs as much time as so many pairs of records
-PAIRS_PER_NODE = 8
+PAIRS_PER_NODE = 2
 
 
 def least_squares_scores(x, y, bandwidths, weights=None, spectrum=None, progress=silent):
