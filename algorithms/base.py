@@ -15,13 +15,15 @@ from qgis.core import (
     QgsProcessingParameterFeatureSource,
     QgsProcessingParameterField,
     QgsProcessingParameterFileDestination,
+    QgsProcessingParameterMultipleLayers,
     QgsProcessingParameterNumber,
     QgsProcessingParameterRasterDestination,
+    QgsProcessingParameterRasterLayer,
     QgsProcessingParameterString,
 )
 from qgis.PyQt.QtGui import QIcon
 
-from ..plugin.host import ANY_VECTOR, METRES, POINTS, POLYGONS
+from ..plugin.host import ANY_VECTOR, METRES, POINTS, POLYGONS, RASTERS
 from ..plugin.text import tr
 from .job import Job
 from .numeric.errors import CancelledError, InputError
@@ -150,6 +152,34 @@ class SteadfieldAlgorithm(QgsProcessingAlgorithm):
         """Add BOUNDARY, the optional study area."""
         words = tr("Polygons of the study area; what lies outside gets no value.")
         self.add_polygons("BOUNDARY", tr("Boundary"), help or words, optional=True)
+
+    def add_rasters(self, name, label, help, least=2):
+        """Add a list of rasters, and how they are put on one grid."""
+        parameter = QgsProcessingParameterMultipleLayers(name, label, RASTERS)
+        parameter.setMinimumNumberInputs(least)
+        self.add(parameter, help)
+        self.add(
+            QgsProcessingParameterRasterLayer("GRID", tr("Grid to follow"), optional=True),
+            tr(
+                "A raster whose CRS, extent and cell size the result takes. Empty: the first layer."
+            ),
+            advanced=True,
+        )
+        self.add_length(
+            "CELL_SIZE",
+            tr("Cell size"),
+            tr("Side of a pixel; 0: as in the raster whose grid is followed."),
+            advanced=True,
+        )
+        self.add_number(
+            "BAND",
+            tr("Band"),
+            tr("Which band of each raster is read."),
+            default=1,
+            least=1,
+            whole=True,
+            advanced=True,
+        )
 
     def add_field(self, name, label, parent, help, numeric=True, optional=True, advanced=False):
         """Add a field of a layer."""

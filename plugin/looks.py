@@ -13,6 +13,7 @@ from qgis.core import (
     QgsLineSymbol,
     QgsMapLayer,
     QgsMarkerSymbol,
+    QgsMultiBandColorRenderer,
     QgsPalettedRasterRenderer,
     QgsProcessingLayerPostProcessorInterface,
     QgsProcessingUtils,
@@ -36,6 +37,8 @@ DIVERGING = ("#1f4e79", "#6c9bc0", "#c9d9e3", "#f6f2e8", "#e8c79c", "#c07d3c", "
 # Dark, light, middle grey when printed without colour.
 VERDICTS = {1: "#6b1f3f", 0: "#efe9da", -1: "#7fa6bd"}
 OUTLINE = "#3b3f46"
+# What cannot be told from noise.
+NOISE = "#b9b6b0"
 
 _kept = {}
 
@@ -86,6 +89,34 @@ def ramp(band, stops, unit, clear_below=None):
         renderer.setClassificationMin(stops[0][0])
         renderer.setClassificationMax(stops[-1][0])
         layer.setRenderer(renderer)
+
+    return look
+
+
+def ramp_with_code(band, stops, unit, code, colour, words):
+    """Look: one band in a continuous ramp, and one value below it that stands for something else.
+
+    Parameters
+    ----------
+    band, stops, unit
+        As for ``ramp``.
+    code : float
+        Below the first stop.
+    colour, words : str
+        Of the code.
+    """
+
+    def look(layer):
+        ramp(band, stops, unit)(layer)
+        shading = layer.renderer().shader().rasterShaderFunction()
+        items = list(shading.colorRampItemList())
+        step = 1e-3 * (stops[0][0] - code)
+        marked = [
+            QgsColorRampShader.ColorRampItem(code, QColor(colour), words),
+            QgsColorRampShader.ColorRampItem(code + step, QColor(colour), ""),
+        ]
+        shading.setMinimumValue(code)
+        shading.setColorRampItemList(marked + items)
 
     return look
 
@@ -190,6 +221,13 @@ def steps(field, breaks, colours=SEQUENCE, unit="", width=0.1):
         layer.setRenderer(QgsGraduatedSymbolRenderer(field, ranges))
 
     return look
+
+
+def picture(layer):
+    """Look: red, green, blue and opacity as they are, without any stretch."""
+    renderer = QgsMultiBandColorRenderer(layer.dataProvider(), 1, 2, 3)
+    renderer.setAlphaBand(4)
+    layer.setRenderer(renderer)
 
 
 class _Styler(QgsProcessingLayerPostProcessorInterface):

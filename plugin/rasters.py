@@ -5,7 +5,8 @@ import uuid
 from dataclasses import dataclass
 
 import numpy as np
-from osgeo import gdal
+import shapely
+from osgeo import gdal, ogr, osr
 
 from ..algorithms.numeric.errors import InputError
 from ..algorithms.numeric.grid import Grid
@@ -83,6 +84,139 @@ def write_raster(path, grid, crs, bands, progress, no_data=NO_DATA, kind=gdal.GD
         for left_over in (waiting, waiting + ".aux.xml"):
             if os.path.exists(left_over):
                 os.remove(left_over)
+
+
+def write_picture(path, grid, crs, windows, levels_of, progress):
+    """Write a picture of red, green, blue and opacity, window by window.
+
+    Parameters
+    ----------
+    path : str
+        Where to; appears only when it is whole.
+    grid : Grid
+    crs : QgsCoordinateReferenceSystem
+    windows : sequence of plugin.alignment.Window
+    levels_of : callable
+        Takes a window and returns its (4, rows, columns) uint8 levels.
+    progress : callable
+
+    Raises
+    ------
+    InputError
+        The file cannot be written.
+    """
+    driver = _driver_for(path)
+    waiting = partial_path(path)
+    dataset = None
+    try:
+        dataset = _new_picture(driver, waiting, grid, crs)
+        for position, window in enumerate(windows):
+            levels = np.ascontiguousarray(levels_of(window))
+            place = (window.column, window.row, window.columns, window.rows)
+            if dataset.WriteRaster(*place, levels.tobytes()) != 0:
+                raise OSError(gdal.GetLastErrorMsg())
+            progress((position + 1) / len(windows))
+        if dataset.FlushCache() not in (None, 0):
+            raise OSError(gdal.GetLastErrorMsg())
+        dataset = None
+        os.replace(waiting, path)
+    except (RuntimeError, OSError) as error:
+        raise InputError(
+            tr("The raster {} cannot be written: {}").format(os.path.basename(path), error)
+        ) from error
+    finally:
+        dataset = None
+        for left_over in (waiting, waiting + ".aux.xml"):
+            if os.path.exists(left_over):
+                os.remove(left_over)
+
+
+def _new_picture(driver, path, grid, crs):
+    options = _options(driver, grid.columns, grid.rows)
+    if options:
+        options += ["PHOTOMETRIC=RGB", "ALPHA=YES", "PREDICTOR=2", "ZLEVEL=4"]
+    dataset = driver.Create(path, grid.columns, grid.rows, 4, gdal.GDT_Byte, options=options)
+    if dataset is None:
+        raise OSError(gdal.GetLastErrorMsg() or tr("the format refused"))
+    dataset.SetGeoTransform((grid.left, grid.cell, 0, grid.top, 0, -grid.cell))
+    dataset.SetProjection(crs.toWkt())
+    parts = (
+        (tr("red"), gdal.GCI_RedBand),
+        (tr("green"), gdal.GCI_GreenBand),
+        (tr("blue"), gdal.GCI_BlueBand),
+        (tr("opacity"), gdal.GCI_AlphaBand),
+    )
+    for position, (name, part) in enumerate(parts, start=1):
+        band = dataset.GetRasterBand(position)
+        band.SetDescription(name)
+        band.SetColorInterpretation(part)
+    return dataset
+
+
+def label_polygons(labels, grid):
+    """Outlines of labelled pixels.
+
+    Parameters
+    ----------
+    labels : (rows, columns) int array
+        0: no polygon; pixels of one label may lie apart.
+    grid : Grid
+
+    Returns
+    -------
+    (labels.max(),) object array of shapely multipolygons
+        In the order of the labels 1, 2, ...; along pixel edges.
+    """
+    rows, columns = labels.shape
+    raster = gdal.GetDriverByName("MEM").Create("", columns, rows, 1, gdal.GDT_Int32)
+    raster.SetGeoTransform((grid.left, grid.cell, 0, grid.top, 0, -grid.cell))
+    band = raster.GetRasterBand(1)
+    band.WriteArray(labels.astype(np.int32))
+    table = ogr.GetDriverByName("Memory").CreateDataSource("").CreateLayer("labels")
+    table.CreateField(ogr.FieldDefn("label", ogr.OFTInteger))
+    gdal.Polygonize(band, band, table, 0)
+    parts = [[] for _ in range(int(labels.max(initial=0)))]
+    for feature in table:
+        wkb = bytes(feature.GetGeometryRef().ExportToWkb())
+        parts[feature.GetField(0) - 1].append(shapely.from_wkb(wkb))
+    outlines = np.empty(len(parts), object)
+    outlines[:] = [shapely.multipolygons(found) for found in parts]
+    return outlines
+
+
+def count_on_pixels(geometry, grid):
+    """How many lines or polygons lie on each pixel.
+
+    Parameters
+    ----------
+    geometry : (n,) array of shapely lines or polygons
+    grid : Grid
+
+    Returns
+    -------
+    (rows, columns) float32 array
+        Lines count on every pixel they cross, polygons on those whose centre they hold; a
+        feature counts once on a pixel.
+    """
+    raster = gdal.GetDriverByName("MEM").Create("", grid.columns, grid.rows, 1, gdal.GDT_Float32)
+    raster.SetGeoTransform((grid.left, grid.cell, 0, grid.top, 0, -grid.cell))
+    lines = np.isin(shapely.get_type_id(geometry), (1, 2, 5))
+    plane = osr.SpatialReference()
+    plane.SetLocalCS("plane")
+    raster.SetProjection(plane.ExportToWkt())
+    for chosen, options in ((lines, ["ALL_TOUCHED=TRUE"]), (~lines, [])):
+        if not chosen.any():
+            continue
+        source = ogr.GetDriverByName("Memory").CreateDataSource("")
+        table = source.CreateLayer("features", plane)
+        for wkb in shapely.to_wkb(geometry[chosen]):
+            feature = ogr.Feature(table.GetLayerDefn())
+            feature.SetGeometry(ogr.CreateGeometryFromWkb(wkb))
+            table.CreateFeature(feature)
+        gdal.RasterizeLayer(
+            raster, [1], table, burn_values=[1], options=["MERGE_ALG=ADD", *options]
+        )
+    return raster.ReadAsArray()
 
 
 def _driver_for(path):

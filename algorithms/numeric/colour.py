@@ -248,6 +248,8 @@ def into_gamut(oklab, steps=24):
     oklab = np.array(oklab, float)
     flat = oklab.reshape(-1, 3)
     outside = np.flatnonzero(~in_gamut(flat))
+    if len(outside) == 0:
+        return oklab
     low, high = np.zeros(len(outside)), np.ones(len(outside))
     for _ in range(steps):
         middle = (low + high) / 2

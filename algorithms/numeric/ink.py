@@ -12,6 +12,7 @@ For strengths s_i (0 to 1) of the layers at a pixel:
   straight line from paper over the ink to black.
 """
 
+import re
 from dataclasses import dataclass
 from itertools import combinations
 
@@ -113,6 +114,32 @@ def as_inks(srgb):
     oklab = srgb_to_oklab(np.atleast_2d(srgb))
     oklab[:, 0] = INK_LIGHTNESS
     return np.clip(oklab_to_srgb(into_gamut(oklab)), 0, 1)
+
+
+def own_inks(text, count):
+    """A user's own inks, brought to the common lightness.
+
+    Parameters
+    ----------
+    text : str
+        Colours such as ``#1f82de``, apart by commas, semicolons or spaces.
+    count : int
+        Number of layers.
+
+    Returns
+    -------
+    (count, 3) array
+        Encoded sRGB.
+
+    Raises
+    ------
+    InputError
+        A colour cannot be read, or there is not one for each layer.
+    """
+    pieces = re.split(r"[;,\s]+", text.strip())
+    if len(pieces) != count:
+        raise InputError(f"A colour for each of the {count} layers is needed; found {len(pieces)}.")
+    return as_inks([from_hex(piece) for piece in pieces])
 
 
 def blend(strengths, inks):
