@@ -13,6 +13,7 @@ ICON = Path(__file__).resolve().parent.parent / "icons" / "steadfield.svg"
 ALGORITHMS = {
     # module in algorithms: class
     "practicedistrict": "PracticeDistrict",
+    "inkblend": "InkBlend",
 }
 
 
