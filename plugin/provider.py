@@ -13,7 +13,9 @@ ICON = Path(__file__).resolve().parent.parent / "icons" / "steadfield.svg"
 ALGORITHMS = {
     # module in algorithms: class
     "practicedistrict": "PracticeDistrict",
+    "adaptivedensity": "AdaptiveDensity",
     "inkblend": "InkBlend",
+    "gridvariance": "GridVariance",
 }
 
 

@@ -294,6 +294,14 @@ def round_down(length):
     return power
 
 
+def round_up(length):
+    """Smallest of 1, 2 and 5 times a power of ten that is not below a length."""
+    lower = round_down(length)
+    if lower >= length * (1 - 1e-9):
+        return lower
+    return round_down(lower * 2.6)
+
+
 def automatic_cell(bounds, narrowest, pixels=4_000_000):
     """Cell size that shows the narrowest kernel without more pixels than a map can use.
 
