@@ -1,6 +1,6 @@
 """What is kept of many simulated zonings, and what can be read from it."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Optional
 
 import numpy as np
@@ -13,6 +13,7 @@ from .variance import (
     Decomposition,
     RunningMoments,
     ThresholdTally,
+    coverage,
     decompose,
     share_above,
     verdict,
@@ -126,7 +127,8 @@ class Simulation:
 
     def verdicts(self):
         """1 holds above, -1 holds below, 0 depends, NaN no value; (units,) array."""
-        return verdict(*self.above())
+        tallies = [scale.tally for scale in self.scales]
+        return verdict(*self.above(), coverage(tallies, self.replicates))
 
     def quantiles(self, share):
         """Quantile of every unit's value over all zonings, within a bin's width."""
@@ -160,7 +162,7 @@ def place_official(problem, labels, scales):
     ----------
     problem : Problem
     labels : (units,) int array
-        From 0 up.
+        From 0 up; below 0 for a unit in no official zone, which then counts for nothing.
     scales : sequence of ScaleResult
 
     Returns
@@ -168,8 +170,8 @@ def place_official(problem, labels, scales):
     Official
     """
     labels = np.asarray(labels)
-    row = describe(problem, labels[None]).statistics[0]
-    zone_count = len(np.unique(labels))
+    row = describe(*_covered(problem, labels)).statistics[0]
+    zone_count = len(np.unique(labels[labels >= 0]))
     places = np.full(len(row), np.nan)
     for scale in scales:
         if scale.recipe.zone_count == zone_count:
@@ -179,3 +181,21 @@ def place_official(problem, labels, scales):
             some = (known > 0) & ~np.isnan(row)
             places[some] = (below[some] + equal[some] / 2) / known[some]
     return Official(labels, zone_count, row, places)
+
+
+def _covered(problem, labels):
+    """The problem without what lies in no official zone, and labels that are all at least 0."""
+    covered = labels >= 0
+    if covered.all():
+        return problem, labels[None]
+    emptied = {
+        name: np.where(covered, getattr(problem, name), 0.0) for name in ("counts", "totals")
+    }
+    if problem.half is not None:
+        emptied["half"] = np.where(covered, problem.half, 0.0)
+    pairs = problem.graph.pairs
+    inside = covered[pairs].all(axis=1)
+    emptied["graph"] = replace(
+        problem.graph, pairs=pairs[inside], border=problem.graph.border[inside]
+    )
+    return replace(problem, **emptied), np.where(covered, labels, labels.max() + 1)[None]

@@ -158,7 +158,7 @@ def simulate(
         Zonings of each scale, at least 2.
     seed : int or numpy.random.SeedSequence
     official : (units,) int array, optional
-        Zones of the official zoning, numbered from 0.
+        Zones of the official zoning, numbered from 0; below 0 for a unit in none.
     reference : Recipe, optional
         How to make zonings to compare the official one with, where no scale has its number
         of zones; they count for nothing else.
@@ -271,8 +271,9 @@ class _Collected:
         )
         by_official = None
         if official is not None:
+            covered = np.where(official >= 0, official, official.max() + 1)
             sums = [
-                zone_sums(official[None], int(official.max()) + 1, values)[0]
+                zone_sums(covered[None], int(covered.max()) + 1, values)[0]
                 for values in (half, counts, totals)
             ]
             by_official = held_out_events(*sums, setting.budget)
