@@ -129,7 +129,7 @@ class GridVariance(SteadfieldAlgorithm):
             tr(
                 "Distances between the centres of neighbouring cells, apart by commas. Empty: six "
                 "sizes, "
-                "from about ten records a cell up to a thirtieth of the area."
+                "from about twenty records a cell up to a thirtieth of the area."
             ),
         )
         self.add_choice("SHAPE", tr("Cells"), SHAPES, tr("Shape of the cells."))

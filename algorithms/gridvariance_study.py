@@ -103,8 +103,8 @@ def prepare(algorithm, job):
     )
     index = np.full(grid.shape, -1)
     index[rows, columns] = np.arange(len(rows))
-    event_places = index[grid.pixels(packed.x, packed.y)[:2]]
-    total_places = index[grid.pixels(packed.total_x, packed.total_y)[:2]]
+    event_places = index[pixels_of(grid, packed.x, packed.y)]
+    total_places = index[pixels_of(grid, packed.total_x, packed.total_y)]
     place_total = np.bincount(total_places, weights=packed.total, minlength=len(rows))
     return Study(
         packed, grid, rows, columns, place_total, event_places, total_places, sizes,
@@ -308,7 +308,7 @@ def evaluated_pixels(area, cell, *points):
     y = np.concatenate([one[1] for one in points])
     left, bottom, right, top = area.bounds
     bounds = min(left, x.min()), min(bottom, y.min()), max(right, x.max()), max(top, y.max())
-    grid = covering(bounds, cell, margin=cell * 1e-3)
+    grid = covering(bounds, cell)
     if grid.rows * grid.columns > MOST_PIXELS:
         raise InputError(
             tr("The evaluated pixels would number {}; choose larger ones.").format(
@@ -319,9 +319,14 @@ def evaluated_pixels(area, cell, *points):
     if area.area > 0:
         shapely.prepare(area)
         mask = shapely.contains_xy(area, *grid.centres())
-    rows, columns, inside = grid.pixels(x, y)
-    mask[rows[inside], columns[inside]] = True
+    mask[pixels_of(grid, x, y)] = True
     return (grid, *np.nonzero(mask))
+
+
+def pixels_of(grid, x, y):
+    """Row and column of each point; a point on the outer edge belongs to the last pixel."""
+    rows, columns, _ = grid.pixels(x, y)
+    return np.clip(rows, 0, grid.rows - 1), np.clip(columns, 0, grid.columns - 1)
 
 
 def check_work(job, grid, places, sizes):

@@ -13,6 +13,7 @@ from .progress import silent
 OFFSETS = 24
 LEAST_RECORDS = 10
 MOST_BELOW = 0.25
+READABLE_RECORDS = 20
 
 # Two criteria that differ by more than this factor in size are said to disagree.
 _AGREEMENT = 1.5
@@ -247,8 +248,8 @@ def sizes_for_zonings(x, y, weight, area, generator, shape=HEXAGON, number=6):
     """Cell sizes over which a map of zone values can sensibly be varied.
 
     The largest cell takes about a thirtieth of the study area. The smallest is the one in which
-    half of the records share their cell with at least ten in all (common practice, no source), and
-    at most a quarter of the largest. Sizes between are at equal ratios, rounded to two digits.
+    half of the records share their cell with at least twenty in all (common practice, no source),
+    and at most half of the largest. Sizes between are at equal ratios, rounded to two digits.
 
     Parameters
     ----------
@@ -266,14 +267,14 @@ def sizes_for_zonings(x, y, weight, area, generator, shape=HEXAGON, number=6):
     """
     largest = math.sqrt(area / 30 / cell_area(1.0, shape))
     bounds = (x.min(), y.min(), x.max(), y.max())
-    smallest = largest / 4
-    for candidate in largest / 1.25 ** np.arange(6, 25):
+    smallest = largest / 2
+    for candidate in largest / 1.25 ** np.arange(4, 25):
         block = cell_block(random_tiling(shape, candidate, True, generator), bounds)
         cell = cell_numbers(block, x, y)
         held = np.bincount(cell, weights=weight, minlength=block.cells)[cell]
         order = np.argsort(held, kind="stable")
         reached = np.cumsum(weight[order])
-        if held[order[np.searchsorted(reached, reached[-1] / 2)]] < 10:
+        if held[order[np.searchsorted(reached, reached[-1] / 2)]] < READABLE_RECORDS:
             break
         smallest = candidate
     return np.unique([two_digits(size) for size in np.geomspace(smallest, largest, number)])

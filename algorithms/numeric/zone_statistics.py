@@ -59,8 +59,8 @@ def zone_statistics(count, total, threshold, kind=RATE):
     used = total > 0
     value = zone_values(count, total)
     some = used.any(axis=-1)
-    largest = _or_missing(np.where(used, value, -np.inf).max(axis=-1), some)
-    smallest = _or_missing(np.where(used, value, np.inf).min(axis=-1), some)
+    largest = _or_missing(np.where(used, value, -np.inf).max(axis=-1, initial=-np.inf), some)
+    smallest = _or_missing(np.where(used, value, np.inf).min(axis=-1, initial=np.inf), some)
     whole = np.where(used, total, 0.0).sum(axis=-1)
     above = np.where(used & (value > threshold), total, 0.0).sum(axis=-1)
     return ZoneStatistics(

@@ -56,6 +56,12 @@ def test_a_zoning_without_any_total_has_no_statistics():
     assert found.largest[1] == pytest.approx(0.4) and found.share_above[1] == pytest.approx(0.5)
 
 
+def test_no_zones_at_all_have_no_statistics():
+    found = zone_statistics(np.empty(0), np.empty(0), 0.2, "share")
+    assert np.isnan([found.largest, found.smallest, found.variation, found.share_above]).all()
+    assert found.zones == 0
+
+
 def board(rows, columns):
     """Rook neighbours of a board, each pair once."""
     cell = np.arange(rows * columns).reshape(rows, columns)
