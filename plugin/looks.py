@@ -47,7 +47,7 @@ def verdict_words():
     """The three verdicts in words, by code."""
     return {
         1: tr("holds above the threshold under any cut"),
-        0: tr("depends on the cut"),
+        0: tr("depends on the cut or on small numbers"),
         -1: tr("holds below the threshold under any cut"),
     }
 
