@@ -91,18 +91,22 @@ def answer_words(study, found, steady, per_km2, limit):
     share = np.count_nonzero(steady.inside & reached) / max(np.count_nonzero(reached), 1)
     held = density[steady.inside].sum() / density.sum()
     error = float(found.relative_error[peak])
-    return tr(
+    words = tr(
         "The density is highest at {} per km², give or take {}, and half of the total lies in {} "
-        "of the area. The surface is known to within {} over {} of the area, where {} of the total "
-        "lies; the rest is mostly noise."
+        "of the area."
     ).format(
         number(float(density[peak]) * per_km2),
         percent(error, 0),
         percent(half.pixels / max(np.count_nonzero(found.inside), 1)),
-        percent(limit, 0),
-        percent(share, 0),
-        percent(held, 0),
     )
+    if share > 0.995:
+        return words + tr(" The standard error is below {} nearly everywhere.").format(
+            percent(limit, 0)
+        )
+    return words + tr(
+        " The standard error is below {} over {} of the area, where {} of the total lies; the "
+        "rest is mostly noise."
+    ).format(percent(limit, 0), percent(share, 0), percent(held, 0))
 
 
 def figures_table(report, job, study, found, steady, per_km2, limit):
@@ -120,8 +124,11 @@ def figures_table(report, job, study, found, steady, per_km2, limit):
         (tr("highest density (per km²)"), number(float(density[peak]) * per_km2)),
         (tr("  its relative standard error"), percent(float(found.relative_error[peak]))),
         (tr("  effective records behind it"), number(float(found.effective[peak]))),
-        (tr("  easting of the pixel (m)"), f"{study.grid.x_centres()[peak[1]] * metres:.0f}"),
-        (tr("  northing of the pixel (m)"), f"{study.grid.y_centres()[peak[0]] * metres:.0f}"),
+        (tr("  easting of the pixel (m)"), number(round(study.grid.x_centres()[peak[1]] * metres))),
+        (
+            tr("  northing of the pixel (m)"),
+            number(round(study.grid.y_centres()[peak[0]] * metres)),
+        ),
         (tr("overall bandwidth (m)"), number(study.pilot * metres)),
         (tr("narrowest bandwidth (m)"), number(float(study.bandwidths.min()) * metres)),
         (tr("widest bandwidth (m)"), number(float(study.bandwidths.max()) * metres)),
@@ -186,12 +193,19 @@ def draw_bandwidths(figure, study, metres):
     low, high = float(values.min()) * 0.95, float(values.max()) * 1.05
     axes.hist(values, bins=np.geomspace(low, high, 40), color=SEQUENCE[4])
     axes.axvline(study.pilot * metres, color="#8a5a1c", linewidth=2)
-    axes.set_xscale("log")
-    axes.xaxis.set_major_formatter(lambda value, _: number(value, 2))
-    axes.xaxis.set_minor_formatter(lambda value, _: number(value, 2) if high / low < 30 else "")
-    axes.tick_params(axis="x", which="minor", labelsize=8)
+    plain_logarithmic(axes)
     axes.set_xlabel(tr("bandwidth (m)"))
     axes.set_ylabel(tr("records"))
+
+
+def plain_logarithmic(axes):
+    """Give an axis steps of 1, 2 and 5 times a power of ten, in plain figures."""
+    from matplotlib.ticker import LogLocator, NullLocator
+
+    axes.set_xscale("log")
+    axes.xaxis.set_major_locator(LogLocator(subs=(1.0, 2.0, 5.0)))
+    axes.xaxis.set_minor_locator(NullLocator())
+    axes.xaxis.set_major_formatter(lambda value, _: number(value, 2))
 
 
 def add_curve(report, job, study, progress):
@@ -224,10 +238,7 @@ def draw_curve(figure, widths, scores, normal, study, metres):
     axes.axvline(study.pilot * metres, color="#8a5a1c", linewidth=2, label=tr("used"))
     if not np.isclose(normal, study.pilot * metres):
         axes.axvline(normal, color="#8a5a1c", linestyle="--", label=tr("normal scale"))
-    axes.set_xscale("log")
-    axes.xaxis.set_major_formatter(lambda value, _: number(value, 2))
-    axes.xaxis.set_minor_formatter(lambda value, _: number(value, 2))
-    axes.tick_params(axis="x", which="minor", labelsize=8)
+    plain_logarithmic(axes)
     axes.set_xlabel(tr("bandwidth (m)"))
     axes.set_ylabel(tr("score (per km²)"))
     axes.legend(frameon=False)

@@ -73,14 +73,14 @@ def estimate(
         raise InputError(f"EDGE must be none, record or place; found {edge!r}.")
     edge = "none" if mask is None else edge
     weights = np.broadcast_to(np.asarray(weights, float), np.shape(x))
-    steps = {"none": (0.0, 0.5), "record": (0.3, 0.6), "place": (0.0, 0.3)}[edge]
+    steps = {"none": (0.0, 0.35), "record": (0.3, 0.5), "place": (0.0, 0.25)}[edge]
     if edge == "record":
         report = part(progress, 0.0, steps[0])
         weights = weights / edges.record_factors(x, y, bandwidths, mask, grid, kernel, report)
     records = (x, y, weights, bandwidths)
     density = surface.adaptive_surface(*records, grid, kernel, part(progress, *steps))
     report = part(progress, steps[1], 0.6 if edge == "place" else 1.0)
-    squares = surface.squared_surface(*records, grid, kernel, report)
+    squares = surface.sampling_variance(*records, density, grid, kernel, report)
     if mask is None:
         mass = float(density.sum()) * grid.cell_area
         return Estimate(density, squares, None, np.ones(grid.shape, bool), mass)

@@ -9,7 +9,7 @@ from .errors import InputError
 from .grid import covering
 from .kernels import GAUSSIAN, QUARTIC_RADIUS, kernel_named
 from .ladder import RUNG_RATIOS
-from .progress import silent
+from .progress import part, silent
 from .spectrum import NODES_PER_BANDWIDTH, gaussian_mass, gaussian_sum
 
 
@@ -118,6 +118,41 @@ def squared_surface(x, y, weights, bandwidths, grid, kernel="gaussian", progress
         return np.maximum(squares, 0.0) / grid.cell_area**2
     masses = np.square(weights) * kernel.roughness / np.square(bandwidths)
     return adaptive_surface(x, y, masses, bandwidths / math.sqrt(2.0), grid, "gaussian", progress)
+
+
+# where less than this share of one kernel's peak arrives, only tails meet
+_TAILS = 0.1
+
+
+def sampling_variance(x, y, weights, bandwidths, total, grid, kernel="gaussian", progress=silent):
+    """Variance of a surface under Poisson sampling, with sense in its far tails too.
+
+    squared_surface, but total^2, which is the variance of a lone record, wherever less than a
+    tenth of a single kernel's peak arrives: there the squares are too small to be told from the
+    error of their approximation. The height of a single kernel at a pixel is
+    sum_i (w_i K_i) w_i K_i(0) / sum_i w_i K_i.
+
+    Parameters
+    ----------
+    total : (rows, columns) array
+        The surface of the same arguments.
+    x, y, weights, bandwidths, grid, kernel, progress
+        As for adaptive_surface; weights not negative.
+
+    Returns
+    -------
+    (rows, columns) array
+        Per unit of the CRS to the fourth.
+    """
+    records = (x, y, weights, bandwidths, grid, kernel)
+    squares = squared_surface(*records, part(progress, 0.0, 0.5))
+    peaks = np.asarray(weights) * kernel_named(kernel).peak / np.square(bandwidths)
+    heights = adaptive_surface(
+        x, y, weights * peaks, bandwidths, grid, kernel, part(progress, 0.5, 1.0)
+    )
+    square = np.square(total)
+    # total / (heights / total) compares the surface with the height of one kernel
+    return np.where(square < _TAILS * heights, square, np.minimum(squares, square))
 
 
 def direct_surface(
