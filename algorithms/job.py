@@ -196,6 +196,26 @@ class Job:
             )
         return found
 
+    def table(self, name):
+        """A layer as it is stored, nothing left out: for checks of the data themselves.
+
+        Returns
+        -------
+        source : QgsProcessingFeatureSource
+        geometry : (n,) object array of shapely geometries, None where there is none
+        values : dict of str to (n,) array
+            Every field but the row number of a file.
+        """
+        layer, source = self._source(name)
+        if source.featureCount() == 0:
+            raise InputError(tr("{}: the layer has no features.").format(self.label(name)))
+        numbered = {"fid", "ogc_fid"}
+        if layer is not None:
+            numbered |= {layer.fields().at(i).name() for i in layer.primaryKeyAttributes()}
+        fields = [field.name() for field in source.fields() if field.name() not in numbered]
+        geometry, values, _ = layers.read_table(layer, source, fields)
+        return source, geometry, values
+
     def field(self, name):
         """Name of a chosen field, None where none is chosen."""
         if not self.given(name):

@@ -50,7 +50,7 @@ td.figure, th.figure {{ text-align: right; font-variant-numeric: tabular-nums; }
 
 
 def _looks_like_figure(cell):
-    return bool(cell) and cell[0] in "−–+0123456789"
+    return bool(cell) and cell[0] in "−–+0123456789" and len(cell) < 20
 
 
 class Report:

@@ -147,7 +147,8 @@ def _on_lattice(x, y, step, stored):
     on = on_x.copy()
     on[on_x] = on_y
     share = on.mean()
-    chance = min(stored / step, 1.0) ** 2
+    # Coordinates all stored to this step, or a coarser one, are not there by chance.
+    chance = (stored / step) ** 2 if step > stored * (1 + 1e-9) else 0.0
     error = math.sqrt(max(chance * (1 - chance), 1.0 / len(x) ** 2) / len(x))
     excess = share - chance
     if excess < max(LEAST_SHARE, EVIDENT * error) or on.sum() < LEAST_PLACES:

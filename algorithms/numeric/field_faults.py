@@ -2,7 +2,8 @@
 
 import numpy as np
 
-from .record_faults import FAULT, FINE, LOOK, SMALL_NUMBER, Check, of_all
+from .record_faults import FAULT, FINE, LOOK, SMALL_NUMBER, Check
+from .record_words import of_all, share_words
 
 DOMINANT_SHARE = 0.1
 
@@ -114,7 +115,7 @@ def check_weights(weights):
             "dominant weight",
             LOOK,
             dominant,
-            f"have more than {DOMINANT_SHARE:.0%} of the total weight each",
+            f"have more than {share_words(DOMINANT_SHARE)} of the total weight each",
             "A map of this weight shows these records and little else; check the value.",
         ),
     ]
@@ -141,7 +142,7 @@ def check_nulls(name, values):
         key,
         FAULT,
         found,
-        f"{of_all(found)} have no value in the field {name} ({share:.1%} of all).",
+        f"{of_all(found)} have no value in the field {name} ({share_words(share)} of all).",
         "Records without a group form no group of their own; complete them or count them apart.",
     )
 

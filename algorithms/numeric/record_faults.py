@@ -13,6 +13,7 @@ import shapely
 
 from .coordinate_lattice import find_lattice, resolution
 from .progress import silent
+from .record_words import of_all, plural, share_words, whole
 
 FAULT, LOOK, FINE = "fault", "look", "fine"
 PLACED, MISSING, EMPTY, NOT_FINITE, UNPLACEABLE = range(5)
@@ -107,13 +108,23 @@ def check_geometry(records):
         One for each of the four kinds.
     """
     kinds = (
-        (MISSING, "no geometry", "have no geometry"),
-        (EMPTY, "empty geometry", "have an empty geometry"),
-        (NOT_FINITE, "not finite", "have a coordinate that is not a finite number"),
-        (UNPLACEABLE, "outside the CRS", "lie where their CRS is not defined"),
+        (MISSING, "no geometry", "have no geometry", "Every record has a geometry."),
+        (EMPTY, "empty geometry", "have an empty geometry", "No geometry is empty."),
+        (
+            NOT_FINITE,
+            "not finite",
+            "have a coordinate that is not a finite number",
+            "All coordinates are finite numbers.",
+        ),
+        (
+            UNPLACEABLE,
+            "outside the CRS",
+            "lie where their CRS is not defined",
+            "All places lie where their CRS is defined.",
+        ),
     )
     checks = []
-    for state, key, words in kinds:
+    for state, key, words, fine in kinds:
         found = records.state == state
         if found.any():
             advice = (
@@ -125,7 +136,7 @@ def check_geometry(records):
                 advice = "Check that the CRS set for the layer is the one of its coordinates."
             checks.append(Check(key, FAULT, found, f"{of_all(found)} {words}.", advice))
         else:
-            checks.append(Check(key, FINE, found, f"No records {words}."))
+            checks.append(Check(key, FINE, found, fine))
     return checks
 
 
@@ -134,7 +145,7 @@ def check_number(records):
     count = int(records.placed.sum())
     none = np.zeros(len(records.x), bool)
     if count >= SMALL_NUMBER:
-        return Check("number", FINE, none, f"{count:,} records have a place.")
+        return Check("number", FINE, none, f"{whole(count)} records have a place.")
     return Check(
         "number",
         LOOK,
@@ -172,8 +183,8 @@ def check_stacks(records, largest=0):
         return Check("stacked", FINE, sizes > 0, "No place to look at."), sizes
     spots = _spots(placed)
     summary = (
-        f"{count:,} records lie on {spots:,} {plural(spots, 'spot')}; "
-        f"{np.mean(placed > 1):.0%} share theirs with another."
+        f"{whole(count)} records lie on {whole(spots)} {plural(spots, 'spot')}; "
+        f"{share_words(np.mean(placed > 1))} share theirs with another."
     )
     crowded = sizes > (largest or HOUSE_STACK)
     if count >= SMALL_NUMBER and (
@@ -185,11 +196,14 @@ def check_stacks(records, largest=0):
     if found.any():
         full = _spots(sizes[found])
         words = (
-            f"{of_all(found)} lie on {full:,} {plural(full, 'spot')} of more than {limit:,} "
-            f"records each, the fullest with {sizes.max():,}. {summary}"
+            f"{of_all(found)} lie on {whole(full)} {plural(full, 'spot')} of more than "
+            f"{whole(limit)} "
+            f"records each, the fullest with {whole(sizes.max())}. {summary}"
         )
         return Check("stacked", FAULT, found, words, STACK_ADVICE), sizes
-    words = f"{summary} The fullest spot has {placed.max():,}, as homes, flats or a care home may."
+    words = (
+        f"{summary} The fullest spot has {whole(placed.max())}, as homes, flats or a care home may."
+    )
     return Check("stacked", FINE, found, words), sizes
 
 
@@ -222,20 +236,18 @@ def check_rounding(records, least_step=5.0, progress=silent):
         return Check("rounded", FINE, found, words), 0.0
     found[placed[lattice.on]] = True
     step = lattice.step * records.stored_metres
-    return (
-        Check(
-            "rounded",
-            FAULT,
-            found,
-            f"{of_all(found)} lie on a lattice of about {step:,.4g} m, {lattice.step:.6g} in "
-            f"units of the "
-            f"stored coordinates ({lattice.share:.0%} of all distinct places).",
-            f"Their coordinates were rounded. Choose cells and bandwidths of several times "
-            f"{step:,.4g} m, "
-            "cells not aligned with the lattice, or get the unrounded places.",
-        ),
-        step,
+    ground = f"{step:.4g} m" if step < 1000 else f"{whole(step)} m"
+    if records.stored_metres != 1.0:
+        ground += f" ({lattice.step:.6g} in the units in which they are stored)"
+    words = (
+        f"{of_all(found)} lie on a lattice of {ground}: "
+        f"{share_words(lattice.share)} of all distinct places."
     )
+    advice = (
+        "Their coordinates were rounded. Choose cells and bandwidths of several times that step, "
+        "and cells that are not aligned with it, or get the places before rounding."
+    )
+    return Check("rounded", FAULT, found, words, advice), step
 
 
 def check_boundary(records, boundary, progress=silent):
@@ -267,8 +279,8 @@ def check_boundary(records, boundary, progress=silent):
         "outside",
         FAULT,
         found,
-        f"{of_all(found)} lie outside the boundary, the farthest {away.max():,.0f} m away, "
-        f"half of them within {np.median(away):,.0f} m.",
+        f"{of_all(found)} lie outside the boundary, the farthest {whole(away.max())} m away, "
+        f"half of them within {whole(np.median(away))} m.",
         "Just outside: the boundary may be generalised, or these people came from elsewhere. Far "
         "outside: "
         "look for exchanged or mistyped coordinates. They are left out where a boundary is used.",
@@ -326,16 +338,19 @@ def check_distortion(smallest, largest, count):
             "do.",
         )
     worst = max(abs(smallest - 1.0), abs(largest - 1.0))
-    words = f"In the stored CRS an area appears between {smallest:.4f} and {largest:.4f} times "
-    "its size."
     if worst <= 0.01:
+        words = (
+            f"In the CRS in which they are stored areas are true within {100 * worst:.2f}\u2009%."
+        )
         return Check("distortion", FINE, none, words)
     return Check(
         "distortion",
         LOOK,
         none,
-        words,
-        "Densities taken in this CRS would be off by as much; an equal-area CRS is used instead.",
+        f"In the CRS in which they are stored an area appears {smallest:.3f} to {largest:.3f} "
+        f"times "
+        "its size.",
+        "Densities taken in that CRS would be off by as much; an equal-area CRS is used instead.",
     )
 
 
@@ -369,7 +384,7 @@ def verdict(checks):
     if not faults:
         return f"No fault was found{also}."
     concerned = np.any([check.found for check in faults], axis=0)
-    named = ", ".join(f"{check.key} ({check.count:,})" for check in faults)
+    named = ", ".join(f"{check.key} ({whole(check.count)})" for check in faults)
     return f"{of_all(concerned)} are concerned by faults: {named}{also}."
 
 
@@ -382,12 +397,3 @@ def _usual_limit(sizes):
     """The most records on one spot that homes explain, from the stack sizes of placed records."""
     shared = CARE_HOME_STACK if np.median(sizes) >= 2 else HOUSE_STACK
     return max(shared, int(np.ceil(STACK_SHARE * len(sizes))))
-
-
-def of_all(found):
-    """``1,234 of 5,678 records``."""
-    return f"{int(np.count_nonzero(found)):,} of {len(found):,} records"
-
-
-def plural(count, noun):
-    return noun if count == 1 else noun + "s"

@@ -34,6 +34,15 @@ def test_rounding_of_a_share_of_the_records_is_found_with_its_step(places, step,
         assert abs((value - found + step / 2) % step - step / 2) < 1e-3
 
 
+@pytest.mark.parametrize("step", [5.0, 10.0, 25.0, 250.0, 1000.0])
+def test_coordinates_that_are_all_multiples_of_a_step_are_found(places, step):
+    places = np.round(places / step) * step
+    lattice = find_lattice(*places.T, least_step=5.0)
+    assert lattice.step == pytest.approx(step)
+    assert lattice.on.all()
+    assert (lattice.offset_x, lattice.offset_y) == (0.0, 0.0)
+
+
 @pytest.mark.parametrize("stored", [0.0, 0.01, 1.0])
 def test_places_stored_finely_are_on_no_lattice(stored):
     for seed in range(8):

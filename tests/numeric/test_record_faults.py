@@ -111,7 +111,7 @@ def test_rounded_records_are_found_with_the_step_on_the_ground(falls):
     check, step = record_faults.check_rounding(falls)
     assert (check.severity, step) == (FAULT, pytest.approx(100.0))
     assert np.array_equal(check.found, rounded)
-    assert "100 m" in check.words and "100 m" in check.advice
+    assert "100 m" in check.words
 
 
 def test_records_outside_the_boundary_are_found_with_their_distance(falls, district):
@@ -121,7 +121,7 @@ def test_records_outside_the_boundary_are_found_with_their_distance(falls, distr
     check = record_faults.check_boundary(falls, district.boundary)
     assert rows_of(check) == [4, 90]
     away = district.boundary.distance(shapely.Point(falls.x[4], falls.y[4]))
-    assert f"{away:,.0f} m" in check.words
+    assert f"{away:,.0f} m".replace(",", "\u2009") in check.words
 
 
 def test_exchanged_coordinates_are_far_away(falls):
