@@ -7,6 +7,7 @@ import os
 
 from qgis.core import (
     QgsCategorizedSymbolRenderer,
+    QgsColorRampLegendNodeSettings,
     QgsColorRampShader,
     QgsFillSymbol,
     QgsGraduatedSymbolRenderer,
@@ -83,6 +84,10 @@ def ramp(band, stops, unit, clear_below=None):
         shading = QgsColorRampShader(stops[0][0], stops[-1][0])
         shading.setColorRampType(QgsColorRampShader.Type.Interpolated)
         shading.setColorRampItemList(items)
+        # a list of labelled values; the continuous bar would leave the unit out
+        legend = QgsColorRampLegendNodeSettings()
+        legend.setUseContinuousLegend(False)
+        shading.setLegendSettings(legend)
         shader = QgsRasterShader()
         shader.setRasterShaderFunction(shading)
         renderer = QgsSingleBandPseudoColorRenderer(layer.dataProvider(), band, shader)
@@ -110,13 +115,10 @@ def ramp_with_code(band, stops, unit, code, colour, words):
         ramp(band, stops, unit)(layer)
         shading = layer.renderer().shader().rasterShaderFunction()
         items = list(shading.colorRampItemList())
-        step = 1e-3 * (stops[0][0] - code)
-        marked = [
-            QgsColorRampShader.ColorRampItem(code, QColor(colour), words),
-            QgsColorRampShader.ColorRampItem(code + step, QColor(colour), ""),
-        ]
         shading.setMinimumValue(code)
-        shading.setColorRampItemList(marked + items)
+        shading.setColorRampItemList(
+            [QgsColorRampShader.ColorRampItem(code, QColor(colour), words), *items]
+        )
 
     return look
 
