@@ -12,7 +12,7 @@ from .progress import silent
 
 OFFSETS = 24
 LEAST_RECORDS = 10
-MOST_BELOW = 0.25
+MOST_BELOW = 0.1
 READABLE_RECORDS = 20
 
 # Two criteria that differ by more than this factor in size are said to disagree.
@@ -28,6 +28,7 @@ class Sweep:
     size : distance between centres of neighbouring cells, rising
     cells : number of cells that hold a record
     share_below : share of those that hold fewer records than asked
+    records_below : share of the records that stand in such cells
     counting_error : median over those of the relative counting error, 1 / sqrt(records)
     cross_validation : score of Rudemo (1982), per unit area; smaller is better
     mean_variance : cost of Shimazaki & Shinomoto (2007), per squared unit area; smaller is better
@@ -36,6 +37,7 @@ class Sweep:
     size: np.ndarray
     cells: np.ndarray
     share_below: np.ndarray
+    records_below: np.ndarray
     counting_error: np.ndarray
     cross_validation: np.ndarray
     mean_variance: np.ndarray
@@ -49,7 +51,7 @@ class Advice:
     ----------
     advised : position of the advised size
     by_cross_validation, by_mean_variance : where the two criteria are smallest
-    by_least_records : smallest size with few enough cells below the least count; None: no size
+    by_least_records : smallest size with few enough records in thin cells; None: no size
     agree : whether the two criteria name about the same size
     at_the_end : whether a criterion is smallest at the first or last size, so that the best one may
         lie outside those tried
@@ -176,7 +178,7 @@ def sweep(
     bounds = (x.min(), y.min(), x.max(), y.max())
     if inside is None:
         inside = _inside_box(bounds)
-    figures = np.empty((len(sizes), offsets, 5))
+    figures = np.empty((len(sizes), offsets, 6))
     for row, size in enumerate(sizes):
         for column in range(offsets):
             tiling = random_tiling(shape, size, True, generator)
@@ -186,11 +188,12 @@ def sweep(
 
 
 def advise(found, most_below=MOST_BELOW):
-    """The size that the criteria support and that leaves few enough cells below the least count.
+    """The size that the criteria support and that leaves few enough records in thin cells.
 
     The criteria's size is the larger of the two minima, where they differ; the advice is that
-    size, or the next larger one at which at most `most_below` of the cells that hold records hold
-    too few. That share is common practice, no source.
+    size, or the next larger one at which at most `most_below` of the records stand in cells with
+    fewer than the least count. Records are taken, not cells: a thinly settled fringe has thin cells
+    at any size. The tolerated share is common practice, no source.
 
     Parameters
     ----------
@@ -205,10 +208,10 @@ def advise(found, most_below=MOST_BELOW):
     first = int(np.argmin(found.cross_validation))
     second = int(np.argmin(found.mean_variance))
     wanted = max(first, second)
-    enough = found.share_below <= most_below
+    enough = found.records_below <= most_below
     later = np.flatnonzero(enough[wanted:])
-    # Where too few are left even at the largest size, the one with the fewest such cells.
-    advised = wanted + int(later[0]) if len(later) else int(np.argmin(found.share_below))
+    # Where too few are left even at the largest size, the one with the fewest such records.
+    advised = wanted + int(later[0]) if len(later) else int(np.argmin(found.records_below))
     ratio = found.size[wanted] / found.size[min(first, second)]
     ends = (0, len(found.size) - 1)
     return Advice(
@@ -310,6 +313,7 @@ def _figures(x, y, weight, tiling, bounds, inside, least_records):
     return (
         len(held),
         np.mean(number[held] < least_records),
+        np.mean(number[cell] < least_records),
         np.median(error),
         weighted_cross_validation_score(cell, weight, area),
         mean_variance_cost(total[within], area, squares[within]),

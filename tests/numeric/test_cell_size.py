@@ -62,7 +62,7 @@ def test_sweep_counts_cells_below_the_least_and_their_error(shape):
     np.testing.assert_array_equal(found.size, [300, 900])
     generator = np.random.default_rng(4)
     for row, size in enumerate(found.size):
-        cells, below, errors = [], [], []
+        cells, below, records, errors = [], [], [], []
         for _ in range(3):
             tiling = cell_size.random_tiling(shape, size, True, generator)
             frame = {"origin": tiling.origin, "angle": tiling.angle}
@@ -71,9 +71,11 @@ def test_sweep_counts_cells_below_the_least_and_their_error(shape):
             _, counts = np.unique(np.stack([q, r]), axis=1, return_counts=True)
             cells.append(len(counts))
             below.append(np.mean(counts < 12))
+            records.append(counts[counts < 12].sum() / 400)
             errors.append(np.median(1 / np.sqrt(counts)))
         assert found.cells[row] == pytest.approx(np.mean(cells))
         assert found.share_below[row] == pytest.approx(np.mean(below))
+        assert found.records_below[row] == pytest.approx(np.mean(records))
         assert found.counting_error[row] == pytest.approx(np.mean(errors))
 
 
@@ -92,16 +94,17 @@ def test_criteria_of_normal_records_are_smallest_near_the_closed_form():
     assert advice.agree and not advice.at_the_end
 
 
-def figures(share_below, cross_validation, mean_variance):
-    size = 100.0 * 2.0 ** np.arange(len(share_below))
+def figures(records_below, cross_validation, mean_variance):
+    size = 100.0 * 2.0 ** np.arange(len(records_below))
     rest = np.ones(len(size))
     return cell_size.Sweep(
-        size, rest, np.array(share_below), rest, np.array(cross_validation), np.array(mean_variance)
-    )
+        size, rest, rest, np.array(records_below), rest, np.array(cross_validation),
+        np.array(mean_variance),
+    )  # fmt: skip
 
 
-def test_advice_follows_the_criteria_and_grows_until_few_cells_are_below_the_least():
-    advice = cell_size.advise(figures([0.9, 0.6, 0.2, 0.1], [3, 1, 2, 4], [3, 1, 2, 4]))
+def test_advice_follows_the_criteria_and_grows_until_few_records_stand_in_thin_cells():
+    advice = cell_size.advise(figures([0.9, 0.6, 0.08, 0.05], [3, 1, 2, 4], [3, 1, 2, 4]))
     assert (advice.by_cross_validation, advice.by_mean_variance) == (1, 1)
     assert advice.by_least_records == 2 and advice.advised == 2 and advice.agree
     assert cell_size.advise(figures([0.2, 0.1, 0.1, 0.1], [3, 1, 2, 4], [3, 1, 2, 4])).advised == 1
