@@ -261,6 +261,13 @@ class SteadfieldAlgorithm(QgsProcessingAlgorithm):
             QgsProcessingParameterRasterDestination(name, label, None, optional, not optional), help
         )
 
+    def add_polygon_output(self, name, label, help="", optional=False):
+        """Add a polygon layer output; an optional one is off until asked for."""
+        self.add(
+            QgsProcessingParameterFeatureSink(name, label, POLYGONS, None, optional, not optional),
+            help,
+        )
+
     def add_table(self, name, label, help="", optional=False):
         """Add a table output, a vector output without geometry."""
         self.add(

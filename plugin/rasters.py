@@ -172,7 +172,8 @@ def label_polygons(labels, grid):
     raster.SetGeoTransform((grid.left, grid.cell, 0, grid.top, 0, -grid.cell))
     band = raster.GetRasterBand(1)
     band.WriteArray(labels.astype(np.int32))
-    table = ogr.GetDriverByName("Memory").CreateDataSource("").CreateLayer("labels")
+    source = ogr.GetDriverByName("Memory").CreateDataSource("")
+    table = source.CreateLayer("labels")
     table.CreateField(ogr.FieldDefn("label", ogr.OFTInteger))
     gdal.Polygonize(band, band, table, 0)
     parts = [[] for _ in range(int(labels.max(initial=0)))]
