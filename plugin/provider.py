@@ -15,6 +15,7 @@ ALGORITHMS = {
     "practicedistrict": "PracticeDistrict",
     "adaptivedensity": "AdaptiveDensity",
     "inkblend": "InkBlend",
+    "agreement": "Agreement",
     "gridvariance": "GridVariance",
 }
 
