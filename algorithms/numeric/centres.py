@@ -1,4 +1,4 @@
-"""Where records are centred, how far they spread, and how sure the centre is.
+"""Where records are centred and how far they spread.
 
 Directions are bearings in degrees, clockwise from the north of the map. Weights are above or equal
 to 0 with a positive sum; without them every record counts 1.
@@ -10,9 +10,6 @@ from dataclasses import dataclass
 import numpy as np
 
 from .errors import InputError
-from .progress import silent
-
-RESAMPLED_AT_ONCE = 2_000_000
 
 
 @dataclass(frozen=True)
@@ -76,7 +73,7 @@ def mean_centre(x, y, weights=None):
     -------
     (x, y) : floats
     """
-    x, y, weights = _checked(x, y, weights)
+    x, y, weights = checked_records(x, y, weights)
     total = weights.sum()
     # Taken from the first record: projected coordinates are large against their spread.
     return (
@@ -104,7 +101,7 @@ def standard_distance(x, y, weights=None):
     ----------
     Bachi (1963), Papers of the Regional Science Association 10:83.
     """
-    spread = _covariance(*_checked(x, y, weights))
+    spread = _covariance(*checked_records(x, y, weights))
     return math.sqrt(spread[0, 0] + spread[1, 1])
 
 
@@ -134,9 +131,9 @@ def deviation_ellipse(x, y, weights=None, deviations=1.0):
     Annaler B 53:28; Wang, Shi & Miao (2015), PLoS ONE 10:e0118537, for the eigenvalue form and the
     shares.
     """
-    x, y, weights = _checked(x, y, weights)
+    x, y, weights = checked_records(x, y, weights)
     centre = mean_centre(x, y, weights)
-    return _ellipse(*centre, deviations**2 * _covariance(x, y, weights))
+    return covariance_ellipse(*centre, deviations**2 * _covariance(x, y, weights))
 
 
 def geometric_median(x, y, weights=None):
@@ -161,7 +158,7 @@ def geometric_median(x, y, weights=None):
     ----------
     Weiszfeld (1937), Tohoku Mathematical Journal 43:355. Vardi & Zhang (2000), PNAS 97:1423.
     """
-    x, y, weights = _checked(x, y, weights)
+    x, y, weights = checked_records(x, y, weights)
     centre = np.array(mean_centre(x, y, weights))
     places, inverse = np.unique(np.column_stack([x, y]), axis=0, return_inverse=True)
     weights = np.bincount(inverse.ravel(), weights, len(places))
@@ -184,63 +181,20 @@ def geometric_median(x, y, weights=None):
     return float(centre[0] + at[0]), float(centre[1] + at[1])
 
 
-def confidence_ellipse(
-    x, y, weights=None, contributors=None, level=0.95, draws=999, rng=None, progress=silent
-):
-    """Bootstrap confidence ellipse of the mean centre.
-
-    Contributors (records without them) are drawn with replacement, weights and all. For
-    each draw m* of the centre m the studentised distance T^2 = (m* - m)' V*^-1 (m* - m) is kept, V*
-    being the draw's own linearised covariance of a weighted mean, sum_c r_c r_c' / (sum w)^2 with
-    r_c = sum_{i in c} w_i (x_i - m*). The ellipse holds the places whose T^2 from m, by the data's
-    own V, is at most the ``level`` quantile of the draws.
-
-    Parameters
-    ----------
-    x, y : (n,) arrays
-    weights : (n,) array, optional
-    contributors : (n,) array, optional
-        Labels of who each record belongs to; records of one contributor are drawn together.
-    level : float
-        Between 0 and 1.
-    draws : int
-    rng : numpy.random.Generator
-    progress : callable
-
-    Returns
-    -------
-    Ellipse or None
-        None when the records are too few or lie on one line, so that nothing can be said.
-
-    References
-    ----------
-    Hall (1987), Biometrika 74:481; Efron & Tibshirani (1993), An Introduction to the Bootstrap, ch.
-    12; Cochran (1977), Sampling Techniques, ch. 6, for the linearised covariance.
-    """
-    if not 0.0 < level < 1.0:
-        raise InputError(f"Confidence level must lie between 0 and 1; found {level}.")
-    if rng is None:
-        raise InputError("A bootstrap needs a random generator; pass rng.")
-    x, y, weights = _checked(x, y, weights)
-    centre = np.array(mean_centre(x, y, weights))
-    sums = _contributor_sums(x - centre[0], y - centre[1], weights, contributors)
-    covariance = _mean_covariance(_second_moments(sums).sum(axis=0)[None], np.zeros((1, 2)))[0]
-    if len(sums) < 3 or not _well_conditioned(covariance):
-        return None
-    distances = _studentised_draws(sums, draws, rng, progress)
-    limit = np.partition(distances, _rank(level, draws))[_rank(level, draws)]
-    if not np.isfinite(limit):
-        return None
-    return _ellipse(centre[0], centre[1], limit * covariance)
-
-
 def bearing(from_x, from_y, to_x, to_y):
     """Direction from places to others, 0 to below 360 degrees clockwise from north."""
     east, north = np.subtract(to_x, from_x), np.subtract(to_y, from_y)
     return np.degrees(np.arctan2(east, north)) % 360.0
 
 
-def _checked(x, y, weights):
+def checked_records(x, y, weights):
+    """Places and weights as float arrays, weights of 1 where there are none.
+
+    Raises
+    ------
+    InputError
+        No record, a weight that is not finite or below 0, or weights that add up to 0.
+    """
     x, y = np.asarray(x, float), np.asarray(y, float)
     if x.size == 0:
         raise InputError("A centre needs at least one record; found none.")
@@ -262,7 +216,7 @@ def _covariance(x, y, weights):
     return (deviations * weights) @ deviations.T / weights.sum()
 
 
-def _ellipse(x, y, covariance):
+def covariance_ellipse(x, y, covariance):
     """The ellipse whose squared semi-axes are the eigenvalues of a 2 x 2 matrix."""
     values, vectors = np.linalg.eigh(covariance)
     values = np.maximum(values, 0.0)
@@ -297,72 +251,3 @@ def _median_step(places, weights, at):
         return weiszfeld
     newton = at + np.linalg.solve(curvature, pull)
     return min((weiszfeld, newton), key=lambda place: weights @ np.hypot(*(places - place).T))
-
-
-def _contributor_sums(x, y, weights, contributors):
-    """Sums of w, w x and w y of every contributor, (c, 3) array."""
-    parts = np.column_stack([weights, weights * x, weights * y])
-    if contributors is None:
-        return parts
-    _, label = np.unique(contributors, return_inverse=True)
-    return np.column_stack([np.bincount(label.ravel(), part) for part in parts.T])
-
-
-def _second_moments(sums):
-    """w, wx, wy and their products w w, w wx, w wy, wx wx, wx wy, wy wy, (c, 9) array."""
-    w, wx, wy = sums.T
-    return np.column_stack([w, wx, wy, w * w, w * wx, w * wy, wx * wx, wx * wy, wy * wy])
-
-
-def _mean_covariance(moments, centre):
-    """Linearised covariances of weighted means, (b, 2, 2), from summed moments and the means."""
-    total, _, _, ww, wx, wy, xx, xy, yy = moments.T
-    mean_x, mean_y = centre.T
-    result = np.empty((len(moments), 2, 2))
-    result[:, 0, 0] = xx - 2 * mean_x * wx + mean_x**2 * ww
-    result[:, 1, 1] = yy - 2 * mean_y * wy + mean_y**2 * ww
-    result[:, 0, 1] = xy - mean_x * wy - mean_y * wx + mean_x * mean_y * ww
-    result[:, 1, 0] = result[:, 0, 1]
-    return result / total[:, None, None] ** 2
-
-
-def _well_conditioned(covariance):
-    values = np.linalg.eigvalsh(covariance)
-    return values[0] > 1e-12 * values[1]
-
-
-def _rank(level, draws):
-    """Position of the level quantile among the sorted draws, so that level is not undershot."""
-    return min(math.ceil(level * (draws + 1)), draws) - 1
-
-
-def _studentised_draws(sums, draws, rng, progress):
-    """T^2 of every bootstrap draw around the centre at 0; infinite where a draw has no spread."""
-    count = len(sums)
-    moments = _second_moments(sums)
-    batch = max(1, min(draws, RESAMPLED_AT_ONCE // count))
-    distances = np.empty(draws)
-    for start in range(0, draws, batch):
-        size = min(batch, draws - start)
-        chosen = rng.integers(0, count, (size, count)) + count * np.arange(size)[:, None]
-        times = np.bincount(chosen.ravel(), minlength=size * count).reshape(size, count)
-        drawn = times @ moments
-        distances[start : start + size] = _squared_distances(drawn)
-        progress((start + size) / draws)
-    return distances
-
-
-def _squared_distances(drawn):
-    total = drawn[:, 0]
-    weighed = total > 0
-    distances = np.full(len(drawn), np.inf)
-    drawn = drawn[weighed]
-    centre = drawn[:, 1:3] / drawn[:, :1]
-    covariance = _mean_covariance(drawn, centre)
-    (a, b), (_, d) = covariance.transpose(1, 2, 0)
-    determinant = a * d - b * b
-    x, y = centre.T
-    with np.errstate(divide="ignore", invalid="ignore"):
-        squared = (d * x * x - 2 * b * x * y + a * y * y) / determinant
-    distances[weighed] = np.where(determinant > 1e-12 * (a + d) ** 2, squared, np.inf)
-    return distances

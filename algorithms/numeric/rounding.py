@@ -43,7 +43,7 @@ def keyed_uniforms(key, *columns):
     (n,) float array in [0, 1)
     """
     rows = np.ascontiguousarray(np.stack([np.asarray(c).astype(np.int64) for c in columns], 1))
-    secret = int(key).to_bytes(16, "little", signed=True)
+    secret = int(key).to_bytes(32, "little")
     drawn = np.empty(len(rows), np.uint64)
     for place, row in enumerate(rows):
         digest = hashlib.blake2b(row.tobytes(), digest_size=8, key=secret).digest()

@@ -287,6 +287,13 @@ class _Collected:
         )
 
 
+def bytes_for(units, replicates, scales):
+    """About how much memory a simulation holds: bins of the units, and a row of each zoning."""
+    bins = np.clip(BINNED_VALUES // units, 40, MOST_BINS) + RANK_BINS
+    rows = 8 * 10 * replicates * scales * 2  # once in pieces, once joined
+    return float(8 * units * (bins + 12 * (scales + 1)) + rows + 400e6)
+
+
 def _value_edges(problem, recipes, generator):
     """Edges of the quantile bins: fine where a pilot of zonings puts many values.
 

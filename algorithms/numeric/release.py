@@ -1,0 +1,359 @@
+"""One safe release from confidential records: cells to published values, by one of five methods."""
+
+import secrets
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from .disclosure import Rules
+from .errors import InputError
+from .merging import merge_cells
+from .noise import (
+    bounded_contributions,
+    geometric_noise,
+    not_below_zero,
+    rehearsal_source,
+    system_source,
+)
+from .progress import part, silent
+from .publication import stand_behind, table_of
+from .roundedtotals import rounding_bounds, totals_that_tell
+from .rounding import check_base, controlled_rounding, keyed_uniforms, random_rounding
+from .withholding import complementary_withholding
+
+WITHHOLD, MERGE, ROUND, CONTROLLED, NOISE = "withhold", "merge", "round", "controlled", "noise"
+METHODS = (WITHHOLD, MERGE, ROUND, CONTROLLED, NOISE)
+
+
+@dataclass(frozen=True)
+class Plan:
+    """How to release.
+
+    Attributes
+    ----------
+    method : str
+        One of METHODS.
+    rules : disclosure.Rules
+    region_totals, grand_total : bool
+        Totals that are published beside the cells.
+    totals_stand : bool
+        The totals are public already and cannot be withheld.
+    show_empty : bool
+        Publish empty cells as 0 (withhold, merge). Otherwise they look like withheld ones, so that
+        nobody learns of a withheld cell that it is not empty.
+    base : int
+        Of rounding.
+    epsilon : float
+    contribution_limit : int
+        Most records of one contributor that noise hides.
+    clip : bool
+        Lift negative noisy counts to 0.
+    reach : int
+        Largest distance of two cells of a merged zone, in steps.
+    seed : int or None
+        None: a secret of the system's secure source, which is forgotten.
+    """
+
+    method: str = WITHHOLD
+    rules: Rules = field(default_factory=Rules)
+    region_totals: bool = False
+    grand_total: bool = False
+    totals_stand: bool = False
+    show_empty: bool = False
+    base: int = 10
+    epsilon: float = 1.0
+    contribution_limit: int = 1
+    clip: bool = False
+    reach: int = 5
+    seed: int = None
+
+    def __post_init__(self):
+        if self.method not in METHODS:
+            raise InputError(f"METHOD must be one of {', '.join(METHODS)}; found {self.method}.")
+        if self.method in (ROUND, CONTROLLED):
+            check_base(self.base, self.rules)
+        if self.method == NOISE and self.region_totals:
+            raise InputError(
+                "Noise spends its budget on the cells; region totals besides would cost another. "
+                "Add up the released cells, or choose another method."
+            )
+        if self.method == NOISE and self.totals_stand:
+            raise InputError(
+                "Noise promises nothing for totals that are public already; choose another method."
+            )
+        if self.reach < 1:
+            raise InputError(f"A merged zone must be able to reach 1 step; found {self.reach}.")
+
+
+@dataclass(frozen=True)
+class Records:
+    """The records of a release, (n,) arrays.
+
+    Attributes
+    ----------
+    cells : int
+        Cell of each record in the tiling, negative: outside.
+    weights, numerator : float or None
+    contributors : int or None
+        Codes as from `disclosure.contributor_codes`.
+    regions : int or None
+        Negative: in none.
+    """
+
+    cells: np.ndarray
+    weights: np.ndarray = None
+    numerator: np.ndarray = None
+    contributors: np.ndarray = None
+    regions: np.ndarray = None
+
+    def behind(self, zone_of, zone_count, rules):
+        """What stands behind the zones of cells."""
+        zones = np.where(self.cells >= 0, zone_of[self.cells], -1)
+        return stand_behind(
+            zones, zone_count, rules, self.weights, self.contributors, self.numerator
+        )
+
+
+@dataclass(frozen=True)
+class Release:
+    """What may be published, and what only the custodian may see.
+
+    Attributes
+    ----------
+    zones : (cells,) int array
+        Zone of each cell of the tiling.
+    values : (parts, zones) float array
+        Published: the count, or numerator and rest; NaN where nothing is.
+    region_values : (parts, regions) float array
+    grand_values : (parts,) float array
+        NaN where no such total is published.
+    unsafe, complementary : (zones,) bool arrays
+        Confidential: unsafe by the rules, and withheld to protect others.
+    behind : publication.Behind
+        Confidential: the true figures.
+    left_out : int
+        Records that noise left out to bound contributions.
+    """
+
+    zones: np.ndarray
+    values: np.ndarray
+    region_values: np.ndarray
+    grand_values: np.ndarray
+    unsafe: np.ndarray
+    complementary: np.ndarray
+    behind: object
+    left_out: int = 0
+
+    @property
+    def withheld(self):
+        return np.isnan(self.values[0])
+
+    def count(self):
+        return self.values.sum(0)
+
+    def numerator(self):
+        return self.values[0] if len(self.values) > 1 else None
+
+    def share(self):
+        """Numerator over count of the published figures, NaN where there is none."""
+        if len(self.values) < 2:
+            return None
+        count = self.count()
+        with np.errstate(invalid="ignore"):
+            return np.divide(
+                self.values[0], count, out=np.full(len(count), np.nan), where=count > 0
+            )
+
+
+def release(records, q, r, region_count, plan, progress=silent):
+    """Make the release.
+
+    Parameters
+    ----------
+    records : Records
+    q, r : (cells,) int arrays
+        Axial coordinates of the tiling.
+    region_count : int
+    plan : Plan
+    progress : callable
+
+    Returns
+    -------
+    Release
+    """
+    secret = secrets.randbits(128) if plan.seed is None else plan.seed
+    rng = np.random.default_rng(np.random.SeedSequence(secret))
+    if plan.method == NOISE:
+        return _noisy(records, len(q), region_count, plan, rng, progress)
+    zones = np.arange(len(q))
+    if plan.method == MERGE:
+        zones = _merged(records, q, r, plan, rng, part(progress, 0.0, 0.4))
+        progress = part(progress, 0.4, 1.0)
+    count = int(zones.max(initial=-1)) + 1
+    behind = records.behind(zones, count, plan.rules)
+    of_record = np.where(records.cells >= 0, zones[records.cells], -1)
+    table = table_of(
+        of_record, count, plan.rules, records.weights, records.contributors, records.numerator,
+        records.regions, plan.region_totals, plan.grand_total,
+    )  # fmt: skip
+    rounded = plan.method in (ROUND, CONTROLLED)
+    unsafe = _not_protected_by_rounding(table, behind, plan) if rounded else table.unsafe
+    published, complementary = ~unsafe, np.zeros(len(unsafe), bool)
+    if (plan.region_totals or plan.grand_total) and (unsafe.any() or not rounded):
+        fixed = np.arange(len(unsafe)) >= (len(table.cells) if plan.totals_stand else len(unsafe))
+        withheld = complementary_withholding(
+            table.sums, table.targets, unsafe, table.records.astype(float), fixed, rng,
+            part(progress, 0.0, 0.9),
+        )  # fmt: skip
+        published, complementary = withheld.published, withheld.complementary
+    values = table.sums.totals()
+    if rounded:
+        values, published = _rounded(table, values, published, plan, q, r, secret, rng, progress)
+    empty = 0.0 if plan.show_empty or rounded else np.nan
+    shown = np.where(published, values, np.nan)
+    return Release(
+        zones,
+        np.array([table.spread(one, count, empty) for one in shown]),
+        _regions(table, shown, region_count, plan),
+        shown[:, -1] if table.grand else np.full(len(shown), np.nan),
+        behind.unsafe,
+        table.spread(complementary, count, False),
+        behind,
+    )
+
+
+def _regions(table, shown, region_count, plan):
+    values = np.full((len(shown), region_count), np.nan)
+    if plan.region_totals:
+        first = len(table.cells)
+        values[:, table.regions] = shown[:, first : first + len(table.regions)]
+    return values
+
+
+def _merged(records, q, r, plan, rng, progress):
+    """Zones in which every unsafe cell has found enough company."""
+
+    def unsafe_zones(zones, count):
+        behind = records.behind(zones, count, plan.rules)
+        return behind.unsafe if plan.show_empty else behind.unsafe | (behind.whole.records == 0)
+
+    inside = records.cells[records.cells >= 0]
+    totals = np.bincount(inside, minlength=len(q)).astype(float)
+    zones, _ = merge_cells(q, r, totals, unsafe_zones, plan.reach, rng, progress)
+    return zones
+
+
+def _not_protected_by_rounding(table, behind, plan):
+    """Unsafe sums that stay unsafe when they are rounded."""
+    rows = table.sums
+    safe = np.ones(len(table.unsafe), bool)
+    totals = rows.totals().sum(0)
+    targets = table.targets
+    for target in np.flatnonzero(targets.sum_of >= 0):
+        place = targets.sum_of[target]
+        if not table.unsafe[place]:
+            continue
+        use = targets.parts[target]
+        value = totals[place] if use.all() else rows.totals()[use][:, place].sum()
+        down = np.floor(value / plan.base) * plan.base
+        safe[place] &= targets.lower[target] >= down
+        safe[place] &= targets.upper[target] <= down + plan.base
+    return table.unsafe & ~safe
+
+
+def _rounded(table, values, published, plan, q, r, secret, rng, progress):
+    """Rounded sums, and which of them are published."""
+    first = len(table.cells)
+    if plan.method == CONTROLLED:
+        rounded = np.array([_controlled(table, one, plan.base, rng) for one in table.sums.values])
+        return rounded.astype(float), published
+    names = np.zeros((3, values.shape[1]), np.int64)
+    names[0, :first], names[1, :first] = q[table.cells], r[table.cells]
+    names[0, first : first + len(table.regions)] = table.regions
+    names[2, first:] = 1
+    names[2, first + len(table.regions) :] = 2
+    rounded = np.empty(values.shape)
+    for number, one in enumerate(values):
+        kept = np.rint(one * 1e6)
+        uniforms = keyed_uniforms(secret, *names, np.full(len(one), number), kept)
+        rounded[number] = random_rounding(one, plan.base, uniforms)
+    told = _totals_to_leave_out(table, rounded, published, plan, progress)
+    return rounded, published & ~told
+
+
+def _controlled(table, atoms, base, rng):
+    """Sums of one part that are rounded together and add up."""
+    cell_rows = table.sums.members[: len(table.cells)].tocoo()
+    rows = np.empty(len(atoms), np.int64)
+    rows[cell_rows.col] = cell_rows.row
+    columns = np.full(len(atoms), len(table.regions), np.int64)
+    first = len(table.cells)
+    region_rows = table.sums.members[first : first + len(table.regions)].tocoo()
+    columns[region_rows.col] = region_rows.row
+    return table.sums.members @ controlled_rounding(rows, columns, atoms, base, rng)
+
+
+def _totals_to_leave_out(table, rounded, published, plan, progress):
+    """Totals that would narrow what the rounding of an unsafe cell or piece leaves open."""
+    totals = np.arange(len(published)) >= len(table.cells)
+    told = np.zeros(len(published), bool)
+    if not (totals & published).any():
+        return told
+    targets = table.targets
+    for number, one in enumerate(rounded):
+        lower, upper = rounding_bounds(one, plan.base)
+        lower, upper = np.where(published, lower, 0.0), np.where(published, upper, np.inf)
+        whole = targets.parts.all(axis=1) | targets.parts[:, number]
+        unsafe = np.where(targets.sum_of < 0, True, table.unsafe[targets.sum_of])
+        which = np.flatnonzero(whole & unsafe & ~totals[targets.sum_of])
+        if not len(which):
+            continue
+        own = targets.sum_of[which]
+        low = np.maximum(targets.lower[which], np.where(own < 0, 0.0, lower[own]))
+        high = np.minimum(targets.upper[which] - 1.0, np.where(own < 0, np.inf, upper[own]))
+        told |= totals_that_tell(
+            table.sums.members, lower, upper, targets.members[which],
+            np.column_stack([low, np.maximum(low, high)]), totals & published, progress,
+        )  # fmt: skip
+    return told
+
+
+def _noisy(records, cell_count, region_count, plan, rng, progress):
+    """Counts of records with noise in every cell of the tiling, empty ones too."""
+    if records.weights is not None:
+        raise InputError(
+            "WEIGHT: noise hides persons by counting records; a weight has no bound that it could "
+            "hide. Leave WEIGHT empty or choose another method."
+        )
+    source = system_source() if plan.seed is None else rehearsal_source(rng)
+    kept = bounded_contributions(records.contributors, plan.contribution_limit, source)
+    cells = np.asarray(records.cells)
+    used = cells >= 0 if kept is None else (cells >= 0) & kept
+    behind = records.behind(np.arange(cell_count), cell_count, plan.rules)
+    if records.numerator is None:
+        true = [np.bincount(cells[used], minlength=cell_count)]
+    else:
+        numerator = np.asarray(records.numerator, float)[used]
+        if not np.isin(numerator, (0.0, 1.0)).all():
+            raise InputError("NUMERATOR: noise needs a numerator of 0 or 1 in every record.")
+        true = [
+            np.bincount(cells[used][numerator == answer], minlength=cell_count)
+            for answer in (1.0, 0.0)
+        ]
+    limit = 1 if kept is None else plan.contribution_limit
+    values = []
+    for place, one in enumerate(true):
+        share = part(progress, place / len(true), (place + 1) / len(true))
+        noisy = one + geometric_noise(cell_count, plan.epsilon, limit, source, share)
+        values.append(not_below_zero(noisy) if plan.clip else noisy)
+    values = np.array(values, float)
+    return Release(
+        np.arange(cell_count),
+        values,
+        np.full((len(values), region_count), np.nan),
+        values.sum(1) if plan.grand_total else np.full(len(values), np.nan),
+        behind.unsafe,
+        np.zeros(cell_count, bool),
+        behind,
+        int((cells >= 0).sum() - used.sum()),
+    )
