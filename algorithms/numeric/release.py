@@ -15,6 +15,7 @@ from .noise import (
     rehearsal_source,
     system_source,
 )
+from .outsider import target_values
 from .progress import part, silent
 from .publication import stand_behind, table_of
 from .roundedtotals import rounding_bounds, totals_that_tell
@@ -197,7 +198,7 @@ def release(records, q, r, region_count, plan, progress=silent):
         records.regions, plan.region_totals, plan.grand_total,
     )  # fmt: skip
     rounded = plan.method in (ROUND, CONTROLLED)
-    unsafe = _not_protected_by_rounding(table, behind, plan) if rounded else table.unsafe
+    unsafe = _not_protected_by_rounding(table, plan) if rounded else table.unsafe
     published, complementary = ~unsafe, np.zeros(len(unsafe), bool)
     if (plan.region_totals or plan.grand_total) and (unsafe.any() or not rounded):
         fixed = np.arange(len(unsafe)) >= (len(table.cells) if plan.totals_stand else len(unsafe))
@@ -243,22 +244,20 @@ def _merged(records, q, r, plan, rng, progress):
     return zones
 
 
-def _not_protected_by_rounding(table, behind, plan):
-    """Unsafe sums that stay unsafe when they are rounded."""
-    rows = table.sums
-    safe = np.ones(len(table.unsafe), bool)
-    totals = rows.totals().sum(0)
-    targets = table.targets
-    for target in np.flatnonzero(targets.sum_of >= 0):
-        place = targets.sum_of[target]
-        if not table.unsafe[place]:
-            continue
-        use = targets.parts[target]
-        value = totals[place] if use.all() else rows.totals()[use][:, place].sum()
-        down = np.floor(value / plan.base) * plan.base
-        safe[place] &= targets.lower[target] >= down
-        safe[place] &= targets.upper[target] <= down + plan.base
-    return table.unsafe & ~safe
+def _not_protected_by_rounding(table, plan):
+    """Unsafe sums that stay unsafe when they are rounded.
+
+    Either of the two neighbouring multiples must leave the whole protection range open.
+    """
+    targets, unsafe = table.targets, table.unsafe
+    value = target_values(table.sums, targets)
+    down = np.floor(value / plan.base) * plan.base
+    told = (targets.lower < down) | (targets.upper > down + plan.base)
+    # at its upper end the range is met by the value itself: that column is safe as it is
+    matters = (targets.sum_of >= 0) & (value < targets.upper)
+    kept = np.zeros(len(unsafe), bool)
+    kept[targets.sum_of[told & matters]] = True
+    return unsafe & kept
 
 
 def _rounded(table, values, published, plan, q, r, secret, rng, progress):

@@ -20,24 +20,6 @@ def rounding_bounds(rounded, base):
     return np.maximum(rounded - base + 1.0, 0.0), rounded + base - 1.0
 
 
-def protects(behind, lower, upper, base):
-    """Cells whose protection range lies in what either of the two rounded values would tell.
-
-    Parameters
-    ----------
-    behind : disclosure.Contributions
-    lower, upper : (cells,) float arrays
-        As from `disclosure.protection_range`.
-    base : int
-
-    Returns
-    -------
-    (cells,) bool array
-    """
-    down = np.floor(behind.total / base) * base
-    return (lower >= down) & (upper <= down + base)
-
-
 def totals_that_tell(members, lower, upper, targets, ranges, totals, progress=silent):
     """Totals to leave out so that every target keeps its range.
 
