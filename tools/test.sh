@@ -4,7 +4,7 @@ set -euo pipefail
 cd "$(dirname "$0")/.."
 source tools/setup.sh
 
-host_packages xvfb xdotool imagemagick
+host_packages xvfb xauth imagemagick
 test_environment
 .venv/bin/ruff check .
 .venv/bin/ruff format --check .

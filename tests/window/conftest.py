@@ -66,6 +66,7 @@ def desktop(package, tmp_path):
             "STEADFIELD_NOTES": str(notes),
             "STEADFIELD_PICTURES": str(pictures),
             "STEADFIELD_FOLDER": str(tmp_path),
+            "STEADFIELD_SCRIPTS": str(Path(__file__).parent),
             "HOME": str(tmp_path),
             "LIBGL_ALWAYS_SOFTWARE": "1",
             **settings,
@@ -74,7 +75,7 @@ def desktop(package, tmp_path):
         code += ["--code", str(Path(__file__).parent / script)]
         command = ["xvfb-run", "-a", "-s", "-screen 0 1400x900x24", *code]
         ran = subprocess.run(
-            command, env=environment, capture_output=True, text=True, timeout=240, check=False
+            command, env=environment, capture_output=True, text=True, timeout=150, check=False
         )
         assert notes.exists(), f"{ran.returncode}: {ran.stdout[-3000:]}{ran.stderr[-3000:]}"
         return json.loads(notes.read_text(encoding="utf-8"))

@@ -4,7 +4,7 @@ import os
 import random
 import sys
 
-sys.path.insert(0, os.path.dirname(__file__))
+sys.path.insert(0, os.environ["STEADFIELD_SCRIPTS"])
 
 from inside import FOLDER, notes, picture, start, wait, wait_until
 from qgis.core import (
