@@ -153,11 +153,21 @@ class SteadfieldAlgorithm(QgsProcessingAlgorithm):
         words = tr("Polygons of the study area; what lies outside gets no value.")
         self.add_polygons("BOUNDARY", tr("Boundary"), help or words, optional=True)
 
+    def add_names(self):
+        """Add NAMES, what the layers of a list are called in legends and reports."""
+        self.add_text(
+            "NAMES",
+            tr("Names of the layers"),
+            tr("For legend and report, apart by semicolons. Empty: the layers' own names."),
+            advanced=True,
+        )
+
     def add_rasters(self, name, label, help, least=2):
         """Add a list of rasters, and how they are put on one grid."""
         parameter = QgsProcessingParameterMultipleLayers(name, label, RASTERS)
         parameter.setMinimumNumberInputs(least)
         self.add(parameter, help)
+        self.add_names()
         self.add(
             QgsProcessingParameterRasterLayer("GRID", tr("Grid to follow"), optional=True),
             tr(

@@ -141,6 +141,50 @@ def blend_report(preview, svg, inks, layers, strengths, steps):
     return report
 
 
+def raw_report(preview, svg, inks, names, counts, full):
+    """Report of raw layers as ink.
+
+    Parameters
+    ----------
+    preview, svg, inks
+        As for `blend_report`.
+    names : sequence of str
+    counts : sequence of (rows, columns) arrays
+    full : sequence of int
+        Number of features that nearly fill a pixel.
+    """
+    report = Report(
+        tr("The records of {} layers as they lie").format(len(names)),
+        tr("What do the data look like before anything is smoothed?"),
+        tr("The darker a pixel, the more features overlap on it; its hue says of which layer."),
+        confidential=True,
+    )
+    add_pictures(report, preview, svg)
+    if len(inks) > 1:
+        add_readability(report, inks, names, ink.readability(inks))
+    report.table(
+        tr("Layers"),
+        [
+            tr("no."),
+            tr("layer"),
+            tr("pixels with ink"),
+            tr("most on one pixel"),
+            tr("nearly full at"),
+        ],
+        [
+            (
+                position + 1,
+                name,
+                number(np.count_nonzero(count)),
+                number(float(count.max())),
+                number(most),
+            )
+            for position, (name, count, most) in enumerate(zip(names, counts, full))
+        ],
+    )
+    return report
+
+
 def _readability_answer(found, names):
     worst = min(found[1:], key=lambda one: one.inks)
     first, second = (f"“{names[index]}”" for index in found[0].ink_pair)
@@ -256,6 +300,11 @@ def blend_method(stretch):
     return [strengths[stretch], *MIXING]
 
 
+RAW_METHOD = tr(
+    "Features are counted on square pixels: points on the pixel that holds them, lines on every "
+    "pixel they cross, polygons on those whose middle they hold. Each lays one coat of see-through "
+    "ink, so that n features have the strength 1 − (1 − ink)ⁿ."
+)
 MIXING = [
     tr(
         "Inks have one lightness in the colour space Oklab (Ottosson 2020). At a pixel with "

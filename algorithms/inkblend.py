@@ -72,9 +72,9 @@ class InkBlend(SteadfieldAlgorithm):
         strengths = chosen_strengths(job, len(layers))
         stretch = job.choice("STRETCH", STRETCHES)
         windows = alignment.windows(grid)
-        tables, steps = strength_tables(
-            job, layers, windows, stretch, strengths, part(job.progress, 0.0, 0.4)
-        )
+        reading = part(job.progress, 0.0, 0.4)
+        with alignment.bounded_cache():
+            tables, steps = strength_tables(job, layers, windows, stretch, strengths, reading)
         preview = ink_pages.Preview(grid)
 
         def levels_of(window):
@@ -86,7 +86,8 @@ class InkBlend(SteadfieldAlgorithm):
             return levels
 
         writing = part(job.progress, 0.4, 0.95)
-        job.write_picture("PICTURE", grid, windows, levels_of, looks.picture, writing)
+        with alignment.bounded_cache():
+            job.write_picture("PICTURE", grid, windows, levels_of, looks.picture, writing)
         svg = ink_pages.legend_of(
             inks,
             names,

@@ -4,6 +4,7 @@ import math
 import os
 import re
 import secrets
+from dataclasses import replace
 
 from qgis.core import QgsProcessingUtils, QgsProperty, QgsProviderRegistry, QgsVectorLayer
 
@@ -255,6 +256,27 @@ class Job:
         except InputError as error:
             raise InputError(f"{self.label(name)}: {error}") from error
 
+    def layer_names(self, name):
+        """Names of the layers of a list, for legends and reports; no two are alike.
+
+        The names of NAMES are taken where they are given; otherwise those of the layers, or of
+        their tables when a file of several was named by its path.
+        """
+        found = self.algorithm.parameterAsLayerList(self.parameters, name, self.context)
+        given = self.words("NAMES")
+        names = [piece.strip() for piece in given.split(";")] if given else []
+        if given and (len(names) != len(found) or not all(names)):
+            raise InputError(
+                tr("{}: a name for each of the {} layers is wanted; found {}.").format(
+                    self.label("NAMES"), len(found), len([one for one in names if one])
+                )
+            )
+        names = names or [self._layer_name(layer).split(": ")[-1] for layer in found]
+        return [
+            one if names.count(one) == 1 else f"{one} ({names[: place + 1].count(one)})"
+            for place, one in enumerate(names)
+        ]
+
     def rasters(self, name, least=2, most=None):
         """Raster layers on one grid; settles the working CRS.
 
@@ -298,7 +320,10 @@ class Job:
             )
         )
         band = self.whole("BAND")
-        aligned = [alignment.align(layer, grid, self._working.crs, band) for layer in chosen]
+        aligned = [
+            replace(alignment.align(layer, grid, self._working.crs, band), name=words)
+            for layer, words in zip(chosen, self.layer_names(name))
+        ]
         for layer in aligned:
             self.inform(tr("{}: {}").format(layer.name, layer.how))
         return grid, aligned
@@ -463,7 +488,7 @@ class Job:
             return self._layer_name(value)
         if kind == "multilayer":
             found = self.algorithm.parameterAsLayerList(self.parameters, name, self.context)
-            return ", ".join(layer.name() for layer in found)
+            return ", ".join(self._layer_name(layer) for layer in found)
         if kind == "enum":
             return definition.options()[
                 self.algorithm.parameterAsEnum(self.parameters, name, self.context)

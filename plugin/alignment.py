@@ -1,6 +1,7 @@
 """Rasters that differ in CRS, cell size, extent and type, read on one grid, window by window."""
 
 import math
+from contextlib import contextmanager
 from dataclasses import dataclass
 
 import numpy as np
@@ -13,6 +14,7 @@ from .reference_system import working_crs
 from .text import listed, number, tr
 
 WINDOW_ROWS, WINDOW_COLUMNS = 256, 8192
+MOST_CACHE = 256 * 2**20
 # A finer raster is averaged from this ratio of cell sizes on; bilinear weights would skip pixels.
 AVERAGE_FROM = 1.5
 
@@ -92,6 +94,20 @@ def _tried(function, *arguments, **options):
         return function(*arguments, **options)
     except RuntimeError:
         return None
+
+
+@contextmanager
+def bounded_cache():
+    """Keep the raster library from filling a share of the machine's memory with pixels read once.
+
+    Windows follow the rows of tiles, so that no tile is wanted again later.
+    """
+    before = gdal.GetCacheMax()
+    gdal.SetCacheMax(min(before, MOST_CACHE))
+    try:
+        yield
+    finally:
+        gdal.SetCacheMax(before)
 
 
 def windows(grid):
