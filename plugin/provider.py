@@ -16,6 +16,7 @@ ALGORITHMS = {
     "adaptivedensity": "AdaptiveDensity",
     "inkblend": "InkBlend",
     "agreement": "Agreement",
+    "rawink": "RawInk",
     "gridvariance": "GridVariance",
 }
 
