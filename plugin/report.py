@@ -159,6 +159,15 @@ class Report:
             f"<figcaption>{words}</figcaption></figure>"
         )
 
+    def links(self, title, pairs):
+        """Add links to files beside the page, as pairs (words, file name)."""
+        self._head(title)
+        items = "".join(
+            f'<li><a href="{html.escape(name, quote=True)}">{html.escape(words)}</a></li>'
+            for words, name in pairs
+        )
+        self._parts.append(f"<ul>{items}</ul>")
+
     def html(self):
         """The whole page as text."""
         return PAGE.format(title=html.escape(self.title), body="\n".join(self._parts))

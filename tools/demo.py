@@ -3,7 +3,6 @@
 import sys
 from pathlib import Path
 
-import numpy as np
 from headless import Host
 
 SEED = 1
@@ -43,7 +42,7 @@ def analyse(host, folder):
     )  # fmt: skip
     done["units"] = host.run(
         "unitvariance", UNITS=table + "base_units", COUNT="falls", TOTAL="residents",
-        OFFICIAL_FIELD="ward", BUDGET=0.1, SEED=SEED, UNITS_OUT=out("units_variance.gpkg"),
+        OFFICIAL="ward", LABEL="unit", BUDGET=0.1, SEED=SEED, UNITS_OUT=out("units_variance.gpkg"),
         TABLE=out("units_variance_table.csv"), EXTREMES=out("units_extremes.gpkg"),
         REPORT=out("report_units.html"),
     )  # fmt: skip
