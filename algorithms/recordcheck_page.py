@@ -5,6 +5,7 @@ import numpy as np
 from ..plugin.report import Report
 from ..plugin.text import number, percent, tr
 from .numeric import record_faults
+from .numeric.grouping import reading_order
 from .numeric.record_faults import FAULT, FINE, LOOK
 
 LISTED_GROUPS = 30
@@ -79,16 +80,8 @@ def _group_rows(groups, concerned):
     kept = np.argsort(-sizes, kind="stable")[:LISTED_GROUPS]
     return [
         (names[i], number(sizes[i]), number(hit[i]), percent(hit[i] / sizes[i]))
-        for i in sorted(kept, key=lambda i: _reading_order(names[i]))
+        for i in sorted(kept, key=lambda i: reading_order(names[i]))
     ]
-
-
-def _reading_order(name):
-    """Numbers by size, then words by letter."""
-    try:
-        return 0, float(name), ""
-    except ValueError:
-        return 1, 0.0, name
 
 
 def _draw_map(figure, records, checks):

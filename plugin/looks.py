@@ -282,6 +282,8 @@ def style_output(target, kind, look, aliases, context):
             apply(layer)
             part = QgsMapLayer.StyleCategory
             kinds = QgsMapLayer.StyleCategories(part.Symbology)
+            if not raster and layer.labelsEnabled():
+                kinds |= part.Labeling
             if aliases:
                 kinds |= part.Fields
             layer.saveNamedStyle(os.path.splitext(target)[0] + ".qml", kinds)

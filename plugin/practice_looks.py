@@ -6,17 +6,13 @@ from qgis.core import (
     QgsGraduatedSymbolRenderer,
     QgsLineSymbol,
     QgsMarkerSymbol,
-    QgsPalLayerSettings,
     QgsRendererCategory,
     QgsRendererRange,
     QgsSingleSymbolRenderer,
-    QgsTextBufferSettings,
-    QgsTextFormat,
-    QgsVectorLayerSimpleLabeling,
 )
-from qgis.PyQt.QtGui import QColor
 
-from .looks import OUTLINE, SEQUENCE
+from .labels import labelled
+from .looks import SEQUENCE
 from .text import number, tr
 
 NO_LINE = {"outline_style": "no"}
@@ -62,11 +58,8 @@ def outlines(colour, width, dashed=False, label=None):
                 )
             )
         )
-        if label:
-            layer.setLabeling(_names(label))
-            layer.setLabelsEnabled(True)
 
-    return look
+    return labelled(look, label) if label else look
 
 
 def land_cover(layer):
@@ -128,18 +121,3 @@ def rate_steps(field, breaks):
         layer.setRenderer(QgsGraduatedSymbolRenderer(field, ranges))
 
     return look
-
-
-def _names(field):
-    text = QgsTextFormat()
-    text.setSize(9)
-    text.setColor(QColor(OUTLINE))
-    halo = QgsTextBufferSettings()
-    halo.setEnabled(True)
-    halo.setSize(0.9)
-    halo.setColor(QColor("#fcfbf8"))
-    text.setBuffer(halo)
-    settings = QgsPalLayerSettings()
-    settings.fieldName = field
-    settings.setFormat(text)
-    return QgsVectorLayerSimpleLabeling(settings)
