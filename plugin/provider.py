@@ -12,6 +12,8 @@ ICON = Path(__file__).resolve().parent.parent / "icons" / "steadfield.svg"
 
 ALGORITHMS = {
     # module in algorithms: class
+    "centrespread": "CentreSpread",
+    "recordcheck": "RecordCheck",
     "practicedistrict": "PracticeDistrict",
     "adaptivedensity": "AdaptiveDensity",
     "inkblend": "InkBlend",
