@@ -140,6 +140,9 @@ def split(study, event_places, total_places, budget, generator):
 def _stacked(x, y, weight):
     """Merge points on the same spot, in order of x and then y."""
     x, y, weight = (np.asarray(part, float) for part in (x, y, weight))
-    places, index = np.unique(np.stack([x, y], axis=1), axis=0, return_inverse=True)
-    summed = np.bincount(index.ravel(), weights=weight, minlength=len(places))
-    return np.ascontiguousarray(places[:, 0]), np.ascontiguousarray(places[:, 1]), summed
+    order = np.lexsort((y, x))
+    x, y = x[order], y[order]
+    first = np.ones(len(x), bool)
+    first[1:] = (x[1:] != x[:-1]) | (y[1:] != y[:-1])
+    summed = np.bincount(np.cumsum(first) - 1, weights=weight[order], minlength=first.sum())
+    return x[first], y[first], summed

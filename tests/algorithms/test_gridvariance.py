@@ -7,7 +7,16 @@ import numpy as np
 import pytest
 import shapely
 from osgeo import gdal, ogr
-from qgis.core import QgsProcessingException, QgsVectorLayer
+from qgis.core import (
+    QgsCoordinateTransform,
+    QgsFeature,
+    QgsFeatureRequest,
+    QgsGeometry,
+    QgsProcessingException,
+    QgsProject,
+    QgsRasterLayer,
+    QgsVectorLayer,
+)
 
 LEFT, BOTTOM = 4_000_000.0, 3_000_000.0
 
@@ -132,8 +141,6 @@ def test_without_a_background_values_are_records_per_square_kilometre(simulate, 
 
 
 def box_layer(polygon, crs="EPSG:3035"):
-    from qgis.core import QgsFeature, QgsGeometry
-
     layer = QgsVectorLayer(f"Polygon?crs={crs}", "box", "memory")
     feature = QgsFeature()
     feature.setGeometry(QgsGeometry.fromWkt(polygon.wkt))
@@ -282,3 +289,31 @@ def test_north_carolina_counties_keep_their_published_totals(simulate, tmp_path)
         CELL_SIZES="80000, 150000", EVALUATION_CELL=10_000,
     )  # fmt: skip
     assert results["THRESHOLD_USED"] == pytest.approx(1000 * 667 / 329_962, rel=1e-9)
+
+
+def test_the_mean_over_zonings_peaks_at_the_broad_street_pump(simulate, tmp_path):
+    # Snow (1855): the deaths of 1854 gather around the pump of Broad Street, here the one that is
+    # nearest to the most deaths.
+    people_at, pumps_at = (
+        QgsVectorLayer(example("snow_maps", f"Soho{name}.shp"), name, "ogr")
+        for name in ("People", "Water")
+    )
+    copy = people_at.materialize(QgsFeatureRequest())
+    bands, results, _ = simulate(
+        RECORDS=copy, COUNT="Count", CELL_SIZES="50, 80", REPLICATES=50, EVALUATION_CELL=5
+    )
+    raster = QgsRasterLayer(results["VARIANCE"], "variance")
+    extent = raster.extent()
+    row, column = np.unravel_index(np.nanargmax(bands["mean"]), bands["mean"].shape)
+    peak = extent.xMinimum() + 5 * (column + 0.5), extent.yMaximum() - 5 * (row + 0.5)
+
+    def placed(layer):
+        move = QgsCoordinateTransform(layer.crs(), raster.crs(), QgsProject.instance())
+        found = [move.transform(one.geometry().asPoint()) for one in layer.getFeatures()]
+        return np.array([(point.x(), point.y()) for point in found])
+
+    places, pumps = placed(people_at), placed(pumps_at)
+    deaths = np.array([feature["Count"] for feature in people_at.getFeatures()], float)
+    nearest = np.hypot(*(places[:, None] - pumps).transpose(2, 0, 1)).argmin(axis=1)
+    broad_street = pumps[np.bincount(nearest, weights=deaths).argmax()]
+    assert np.hypot(*(broad_street - peak)) < 60
