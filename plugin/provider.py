@@ -20,6 +20,7 @@ ALGORITHMS = {
     "agreement": "Agreement",
     "rawink": "RawInk",
     "gridvariance": "GridVariance",
+    "cellsize": "CellSize",
 }
 
 
