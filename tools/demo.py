@@ -20,7 +20,7 @@ def analyse(host, folder):
     def out(name):
         return str(folder / name)
 
-    done = {"table": table}
+    done = {"table": table, "least count": LEAST_COUNT}
     done["check"] = host.run(
         "recordcheck", RECORDS=falls, BOUNDARY=boundary, FLAGGED=out("flagged_records.gpkg"),
         REPORT=out("report_records.html"),

@@ -1,4 +1,4 @@
-"""Maps, project and the page that walks from the question to the answer, from the demo's results."""
+"""Maps, project and the page from question to answer, made from the demo's results."""
 
 from collections import Counter
 from pathlib import Path
@@ -143,13 +143,10 @@ def _maps(folder, project, layers):
 def _verdicts_by_ward(done):
     """Residents in base units that hold above, by ward, and how many lie in true risk areas."""
     units = ogr.Open(done["units"]["UNITS_OUT"])
-    path, name = done["table"].split("|layername=")
-    truth_source = ogr.Open(path)
-    areas = [
-        feature.GetGeometryRef().Clone() for feature in truth_source.GetLayer("true_risk_areas")
-    ]
+    district = ogr.Open(done["table"].split("|layername=")[0])
+    areas = [feature.GetGeometryRef().Clone() for feature in district.GetLayer("true_risk_areas")]
     wards, inside, holding = Counter(), 0, 0
-    source = truth_source.GetLayer("base_units")
+    source = district.GetLayer("base_units")
     ward_of = {feature["unit"]: (feature["ward"], feature["residents"]) for feature in source}
     for feature in units.GetLayer(0):
         if feature["verdict"] != 1:
@@ -167,11 +164,12 @@ def _index(folder, done, pictures):
     first = [f"{ward} ({number(people)} residents)" for ward, people in wards.most_common(4)]
     grid, units, safe, audit = done["grid"], done["units"], done["safe"], done["audit"]
     between = units.get("EVENTS_BETWEEN_ZONINGS")
+    open_share = percent(1 - grid["SHARE_ABOVE"] - grid["SHARE_BELOW"])
     answer = (
         f"Visits should go first to the places that stand above the district's "
         f"{number(units['THRESHOLD_USED'])} falls per 1000 residents however lines are drawn: in "
-        f"{listed(first) or 'no ward'}. For {percent(1 - grid['SHARE_ABOVE'] - grid['SHARE_BELOW'])} of "
-        f"the residents the map depends on the cut or on small numbers."
+        f"{listed(first) or 'no ward'}. For {open_share} of the residents the map depends on the "
+        "cut or on small numbers."
     )
     page = Report(
         "Ostermoor: from question to publication",
@@ -187,7 +185,7 @@ def _index(folder, done, pictures):
     show(
         "1. What the official wards say",
         "wards",
-        "The usual map. The ward in the marsh looks worst; it is small, and chance alone put it there.",
+        "The usual map. The ward in the marsh looks worst; it is small, and chance put it there.",
     )
     show(
         "2. Where falls happen, and is it more than people living there",
@@ -214,13 +212,14 @@ def _index(folder, done, pictures):
         page.text(
             "",
             f"With visits for a tenth of the residents, choosing by the value averaged over all "
-            f"zonings reaches {number(units['EVENTS_REACHED'])} falls of the held-out half; between an "
-            f"unlucky and a lucky single zoning (5 % and 95 %) lie {number(between)} falls.",
+            f"zonings reaches {number(units['EVENTS_REACHED'])} falls of the held-out half; between "
+            f"an unlucky and a lucky single zoning (5 % and 95 %) lie {number(between)} falls.",
         )
     show(
         "4. Falls together with unlit and icy paths",
         "blend",
-        "The darker a place, the more is there; the hue says of what. Outlined: zones where layers agree.",
+        "The darker a place, the more is there; the hue says of what. Outlined: zones where "
+        "the layers agree.",
     )
     legend = Path(done["blend"]["LEGEND"]).with_suffix(".png")
     if legend.exists():
@@ -228,14 +227,14 @@ def _index(folder, done, pictures):
     show(
         "5. What may be published",
         "release",
-        f"Counts of falls by hexagon with a least count of {_least(done)}: {safe_words(safe)}.",
+        f"Counts of falls by hexagon with a least count of {done['least count']}: {safe_words(safe)}.",
     )
     show("", "safe surface", "A density surface none of whose peaks betrays an address.")
     clean = audit.get("DISCLOSED_REGIONS", 0) == 0
     page.text(
         "",
-        "The audit of the hexagons against the official ward counts found no place where subtraction "
-        "discloses a small count."
+        "The audit of the hexagons against the official ward counts found no place where "
+        "subtraction discloses a small count."
         if clean
         else f"The audit of the hexagons against the official ward counts found "
         f"{audit['DISCLOSED_REGIONS']} places where subtraction discloses a small count: do not "
@@ -246,12 +245,6 @@ def _index(folder, done, pictures):
     page.table("Software", ["part", "version"], versions())
     page.text("Cautions", *CAUTIONS, kind="caution")
     (folder / "index.html").write_text(page.html(), encoding="utf-8")
-
-
-def _least(done):
-    from demo import LEAST_COUNT
-
-    return LEAST_COUNT
 
 
 def safe_words(results):
