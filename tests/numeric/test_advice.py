@@ -75,14 +75,16 @@ def test_advised_value_comes_close_to_the_least_possible_error_on_clusters():
     assert squared_error(found.normal_scale, x, y, centres, widths) > 2 * min(errors)
 
 
-def test_likelihood_that_lonely_records_pull_wide_is_not_followed():
+def test_cross_validations_that_differ_are_named_and_averaged():
     generator = np.random.default_rng(8)
     sharp = generator.normal((1000, 1000), 80, (400, 2))
     x, y = np.vstack([sharp, generator.normal(0, 3000, (600, 2))]).T
     found = advice.advise(x, y)
     assert found.likelihood > 2 * found.least_squares
-    assert found.advised == found.least_squares
-    assert "least-squares value is advised" in found.reason
+    assert found.advised == pytest.approx(math.sqrt(found.likelihood * found.least_squares))
+    factor = found.likelihood / found.least_squares
+    assert f"differ by a factor of {factor:.1f}" in found.reason
+    assert "geometric mean is advised" in found.reason
 
 
 def test_few_records_get_the_oversmoothed_value_and_are_told():
