@@ -29,7 +29,8 @@ _WIDEST = _NODES_PER_RADIUS * _COARSE_RATIO
 # ratio of radii that share a running sum: columns reach some three times it, in radii of the
 # smallest, and rounding errors grow with twice the power of that
 _SUM_RATIO = {2: 5.0, 4: 2.0}
-_EVENTS = 1 << 17
+_CHORDS = 1 << 17
+_ROWS = 64
 
 
 @dataclass(frozen=True)
@@ -39,13 +40,19 @@ class Chords:
     Attributes
     ----------
     records : (n,) int array
+    starts : (n,) int array
+        Number of each record's first chord.
+    rows : slice
+        Rows that the chords lie in.
     ends : sparse matrix
-        Nodes of the strip x chords: 1 where a chord begins, -1 where it has ended.
+        Nodes of those rows x chords: 1 where a chord begins, -1 where it has ended.
     coefficients : (chords, terms) array
-        Of the polynomial in the column counted from the middle of the strip; n chords a row.
+        Of the polynomial in the column counted from the middle of the strip.
     """
 
     records: np.ndarray
+    starts: np.ndarray
+    rows: slice
     ends: csc_matrix
     coefficients: np.ndarray
 
@@ -59,49 +66,47 @@ def _squared(terms):
     return product
 
 
-def _chords(row, column, radius, power, chosen, height, first_column, width):
-    """Chords of the chosen records; rows are counted from the top of the strip's canvas."""
-    half = math.ceil(float(radius[chosen].max()))
-    offsets = np.arange(-half, half + 1)
-    node = np.rint(row[chosen])
-    apart = (node - row[chosen])[:, None] + offsets
-    squared = np.square(radius[chosen])[:, None] - np.square(apart)
-    line = node.astype(np.int64)[:, None] + offsets
-    squared[(squared <= 0) | (line < 0) | (line >= height)] = 0.0
+def _chords(row, column, radius, power, records, height, first_column, width):
+    """Chords of some records; columns are counted from the first one of the strip."""
+    first = np.maximum(np.ceil(row[records] - radius[records]), 0)
+    last = np.minimum(np.floor(row[records] + radius[records]), height - 1)
+    counts = np.maximum(last - first + 1, 0).astype(np.int64)
+    starts = np.cumsum(counts) - counts
+    owner = np.repeat(np.arange(len(records)), counts)
+    line = np.arange(len(owner)) + (first - starts)[owner]
+    place = (column[records] - first_column)[owner]
+    scale = np.square(radius[records])[owner]
+    squared = np.maximum(scale - np.square(line - row[records][owner]), 0.0)
     reach = np.sqrt(squared)
-    place = (column[chosen] - first_column)[:, None]
     begin = np.ceil(place - reach)
     # the rim itself has no value, so that it does not matter on which side it falls
     end = np.maximum(np.floor(place + reach) + 1, begin)
-    inside = squared > 0
-    base = np.clip(line, 0, height - 1) * (width + 1)
-    index = np.stack([base + np.where(inside, begin, 0), base + np.where(inside, end, 0)], axis=-1)
-    place = np.broadcast_to(place - width // 2, squared.shape)
-    scale = np.square(radius[chosen])[:, None]
+    low, high = int(line.min()), int(line.max()) + 1
+    base = (line - low) * (width + 1)
+    index = np.stack([base + begin, base + end], axis=-1).astype(np.int32)
+    place -= width // 2
     terms = [(squared - np.square(place)) / scale, 2 * place / scale, -1.0 / scale]
     for _ in range(int(math.log2(power))):
         terms = _squared(terms)
-    terms = [np.broadcast_to(term, squared.shape) for term in terms]
     # counts of the kernels at work are whole numbers, so nothing is left where none is
-    terms.append(np.ones(squared.shape))
-    chords = squared.size
+    terms.append(np.ones(len(owner)))
     ends = csc_matrix(
         (
-            np.tile([1.0, -1.0], chords),
-            index.astype(np.int32).ravel(),
-            np.arange(chords + 1, dtype=np.int32) * 2,
+            np.tile([1.0, -1.0], len(owner)),
+            index.ravel(),
+            np.arange(len(owner) + 1, dtype=np.int32) * 2,
         ),
-        shape=(height * (width + 1), chords),
+        shape=((high - low) * (width + 1), len(owner)),
     )
-    return Chords(chosen, ends, np.stack(terms, axis=-1).reshape(chords, len(terms)))
+    return Chords(records, starts, slice(low, high), ends, np.stack(terms, axis=-1))
 
 
 def _strips(row, column, radius, power, shape, progress):
-    """Strips of columns with the chords in them: (first column, width, chords of one block)."""
+    """Strips of columns with the chords in them: first column, width, and blocks of chords."""
     half = math.ceil(float(radius.max()))
+    # a record whose disc meets no row of pixels has no chord
     kept = np.flatnonzero(
-        (row > -radius)
-        & (row < shape[0] - 1 + radius)
+        (np.maximum(np.ceil(row - radius), 0) <= np.minimum(np.floor(row + radius), shape[0] - 1))
         & (column > -radius)
         & (column < shape[1] - 1 + radius)
     )
@@ -109,29 +114,39 @@ def _strips(row, column, radius, power, shape, progress):
         return
     step = 2 * half + 1
     order = kept[row_order(row[kept])]
-    # records of like radius share a block, so that few of its rows are empty
-    order = order[row_order(np.log(radius[order]) * 4)]
     order = order[row_order(column[order] / step)]
     strip = np.floor(column[order] / step).astype(np.int64)
+    rows_so_far = np.cumsum(2 * radius[order] + 1)
     ends = np.append(np.flatnonzero(np.diff(strip)) + 1, len(order))
     start = 0
     for end in ends:
         first, width = int(strip[start]) * step - half, step + 2 * half + 1
-        blocks = []
-        while start < end:
-            size = 2 * math.ceil(float(radius[order[start]])) + 1
-            stop = min(start + max(1, _EVENTS // size), end)
-            blocks.append(order[start:stop])
-            start = stop
+        # so many records at once that their chords fit into the processor's cache
+        share = np.floor((rows_so_far[start:end] - rows_so_far[start]) / _CHORDS)
+        cuts = start + np.flatnonzero(np.diff(share, prepend=-1))
         yield (
             first,
             width,
-            (
-                _chords(row, column, radius, power, block, shape[0], first, width)
-                for block in blocks
-                if progress(start / len(order)) is None
+            _blocks(
+                row,
+                column,
+                radius,
+                power,
+                order,
+                np.append(cuts, end),
+                shape[0],
+                first,
+                width,
+                progress,
             ),
         )
+        start = end
+
+
+def _blocks(row, column, radius, power, order, cuts, height, first, width, progress):
+    for begin, end in zip(cuts[:-1], cuts[1:]):
+        progress(begin / len(order))
+        yield _chords(row, column, radius, power, order[begin:end], height, first, width)
 
 
 def _overlap(first, width, columns):
@@ -140,22 +155,28 @@ def _overlap(first, width, columns):
     return slice(low - first, max(high, low) - first), slice(low, max(high, low))
 
 
+def _powers(own, width, power):
+    """Powers of the columns counted from the middle of the strip, (columns, terms) array."""
+    place = (np.arange(own.start, own.stop) - width // 2)[:, None]
+    return place ** np.arange(2.0 * power + 1)
+
+
 def _sum_by_chords(row, column, weights, radius, power, shape, progress):
     total = np.zeros(shape)
     for first, width, blocks in _strips(row, column, radius, power, shape, progress):
-        sums = np.zeros((shape[0] * (width + 1), 2 * power + 2))
+        sums = np.zeros((shape[0], width + 1, 2 * power + 2))
         for chords in blocks:
-            rows = len(chords.coefficients) // len(chords.records)
-            chords.coefficients[:, :-1] *= np.repeat(weights[chords.records], rows)[:, None]
-            sums += chords.ends @ chords.coefficients
+            counts = np.diff(chords.starts, append=len(chords.coefficients))
+            chords.coefficients[:, :-1] *= np.repeat(weights[chords.records], counts)[:, None]
+            window = sums[chords.rows]
+            window += (chords.ends @ chords.coefficients).reshape(window.shape)
         own, target = _overlap(first, width, shape[1])
-        sums = np.cumsum(sums.reshape(shape[0], width + 1, -1), axis=1)[:, own]
-        place = np.arange(own.start, own.stop) - width // 2
-        value = sums[:, :, 2 * power].copy()
-        for term in range(2 * power - 1, -1, -1):
-            value *= place
-            value += sums[:, :, term]
-        total[:, target] += np.where(sums[:, :, -1] > 0.5, value, 0.0)
+        powers = _powers(own, width, power)
+        for start in range(0, shape[0], _ROWS):
+            rows = slice(start, start + _ROWS)
+            running = np.cumsum(sums[rows, : own.stop], axis=1)[:, own.start :]
+            value = np.einsum("rct,ct->rc", running[:, :, :-1], powers)
+            total[rows, target] += np.where(running[:, :, -1] > 0.5, value, 0.0)
     return total
 
 
@@ -163,16 +184,15 @@ def _gather_by_chords(row, column, radius, power, raster, progress):
     collected = np.zeros(len(row))
     for first, width, blocks in _strips(row, column, radius, power, raster.shape, progress):
         own, source = _overlap(first, width, raster.shape[1])
-        place = (np.arange(own.start, own.stop) - width // 2)[:, None]
         moments = np.zeros((raster.shape[0], width + 1, 2 * power + 1))
-        values = raster[:, source, None] * place ** np.arange(2.0 * power + 1)
+        values = raster[:, source, None] * _powers(own, width, power)
         # a chord sums from where it begins up to where it ends: the difference of two sums
         moments[:, own.start + 1 : own.stop + 1] = -np.cumsum(values, axis=1)
         moments[:, own.stop + 1 :] = moments[:, own.stop : own.stop + 1]
-        moments = moments.reshape(-1, 2 * power + 1)
         for chords in blocks:
-            held = np.einsum("ct,ct->c", chords.ends.T @ moments, chords.coefficients[:, :-1])
-            collected[chords.records] = held.reshape(len(chords.records), -1).sum(axis=1)
+            window = moments[chords.rows].reshape(-1, 2 * power + 1)
+            held = np.einsum("ct,ct->c", chords.ends.T @ window, chords.coefficients[:, :-1])
+            collected[chords.records] = np.add.reduceat(held, chords.starts)
     return collected
 
 
