@@ -286,5 +286,11 @@ def write_zones(job, findings):
         columns,
         findings.outlines,
         "polygon",
-        looks.steps("held", HELD_STEPS, unit=tr("of weightings"), width=0.3),
+        zones_look,
     )
+
+
+def zones_look(layer):
+    """Zones by how often they hold, with the map below showing."""
+    looks.steps("held", HELD_STEPS, unit=tr("of weightings"), width=0.3)(layer)
+    layer.setOpacity(0.75)

@@ -271,7 +271,7 @@ class Job:
                     self.label("NAMES"), len(found), len([one for one in names if one])
                 )
             )
-        names = names or [self._layer_name(layer).split(": ")[-1] for layer in found]
+        names = names or [table_name(layer) for layer in found]
         return [
             one if names.count(one) == 1 else f"{one} ({names[: place + 1].count(one)})"
             for place, one in enumerate(names)
@@ -515,6 +515,12 @@ class Job:
             layer = QgsProcessingUtils.mapLayerFromString(value, self.context)
         if not hasattr(layer, "name"):
             return tr("a layer")
-        parts = QgsProviderRegistry.instance().decodeUri(layer.providerType(), layer.source())
-        table = parts.get("layerName") or ""
+        table = table_name(layer)
         return layer.name() if table in layer.name() else f"{layer.name()}: {table}"
+
+
+def table_name(layer):
+    """Name of a layer, or of its table where a file of several was named by its path."""
+    parts = QgsProviderRegistry.instance().decodeUri(layer.providerType(), layer.source())
+    table = parts.get("layerName") or ""
+    return layer.name() if table in layer.name() else table

@@ -30,6 +30,10 @@ FORMATS = {
 }
 
 
+# The layers' own making must not show in the peak memory.
+gdal.SetCacheMax(128 * 2**20)
+
+
 def make_layer(path, side, cell, shift, options):
     """A smooth density with some noise, written by strips."""
     dataset = gdal.GetDriverByName("GTiff").Create(
