@@ -130,9 +130,10 @@ def _read_stream(layer, fields):
     names = [definition.GetFieldDefn(i).GetName() for i in range(definition.GetFieldCount())]
     table.SetIgnoredFields([name for name in names if name not in fields])
     geometry_name = table.GetGeometryColumn() or "wkb_geometry"
+    # the host shows the column of ids as a field of the layer
+    identifier = table.GetFIDColumn() or "OGC_FID"
     wkb, ids, columns = [], [], {name: [] for name in fields}
     for batch in table.GetArrowStreamAsNumPy(options=["INCLUDE_FID=YES"]):
-        identifier = next(name for name in batch if name not in columns and name != geometry_name)
         ids.append(np.asarray(batch[identifier], np.int64))
         wkb.append(_filled(batch[geometry_name], None))
         for name in fields:

@@ -39,12 +39,14 @@ def _table(done, name, title, look=None):
     return layer
 
 
-def _output(path, title):
+def _output(path, title, look=None):
     is_vector = path.endswith((".gpkg", ".csv"))
     kind = QgsVectorLayer if is_vector else QgsRasterLayer
     layer = kind(path, title, "ogr" if is_vector else "gdal")
     if not layer.isValid():
         raise RuntimeError(f"{Path(path).name} did not open")
+    if look is not None:
+        look(layer)
     return layer
 
 
@@ -54,7 +56,12 @@ def _layers(done):
         "district": _table(done, "district", "District", looks.single("transparent")),
         "land cover": _table(done, "land_cover", "Land cover"),
         "streets": _table(done, "streets", "Streets"),
-        "wards": _table(done, "care_wards", "Care wards: falls per 1000 residents"),
+        "wards": _table(
+            done,
+            "care_wards",
+            "Care wards",
+            looks.steps("rate", [60, 64, 68, 72, 76, 80], unit="falls per 1000", width=0.3),
+        ),
         "outlines": _table(
             done, "care_wards", "Borders of care wards", looks.single("transparent", width=0.35)
         ),
@@ -72,7 +79,11 @@ def _layers(done):
         "verdict": _output(done["grid"]["VARIANCE"], "Under other cells"),
         "units": _output(done["units"]["UNITS_OUT"], "Under other zones"),
         "blend": _output(done["blend"]["PICTURE"], "Falls, unlit paths and icy paths"),
-        "zones": _output(done["agreement"]["ZONES"], "Zones where layers agree"),
+        "zones": _output(
+            done["agreement"]["ZONES"],
+            "Zones where layers agree",
+            looks.single("transparent", "#b4281f", 0.5),
+        ),
         "release": _output(done["safe"]["RELEASE"], "Release: falls by hexagon"),
         "safe surface": _output(done["safe surface"]["DENSITY"], "Release: falls per km²"),
     }
@@ -86,12 +97,15 @@ def _project(folder, layers):
     root = project.layerTreeRoot()
     shown = {"verdict", "outlines", "district"}
     groups = [
-        ("Where, and is it real", ["truth", "outlines", "ratio outlines", "ratio", "density", "error"]),
+        (
+            "Where, and is it real",
+            ["truth", "outlines", "ratio outlines", "ratio", "density", "error"],
+        ),
         ("How much depends on the cut", ["verdict", "units", "wards"]),
         ("Layers together", ["zones", "blend"]),
         ("To publish", ["release", "safe surface"]),
         ("Ground and records", ["falls", "streets", "land cover", "district"]),
-    ]  # fmt: skip
+    ]
     for title, names in groups:
         group = root.addGroup(title)
         for name in names:
@@ -134,7 +148,7 @@ def _maps(folder, project, layers):
     for name, (title, over, under) in sheets.items():
         path = folder / f"map_{name.replace(' ', '_')}.png"
         drawn = [layers[one] for one in [*over, *under, "district"]]
-        legend = [layers[one] for one in over]
+        legend = [layers[one] for one in over if one != "blend"]
         map_sheet(project, drawn, title, str(path), extent, legend)
         pictures[name] = path
     return pictures
@@ -212,8 +226,8 @@ def _index(folder, done, pictures):
         page.text(
             "",
             f"With visits for a tenth of the residents, choosing by the value averaged over all "
-            f"zonings reaches {number(units['EVENTS_REACHED'])} falls of the held-out half; between "
-            f"an unlucky and a lucky single zoning (5 % and 95 %) lie {number(between)} falls.",
+            f"zonings reaches {number(units['EVENTS_REACHED'])} falls of the held-out half; "
+            f"between an unlucky and a lucky single zoning (5 % and 95 %) lie {number(between)}.",
         )
     show(
         "4. Falls together with unlit and icy paths",
@@ -227,7 +241,8 @@ def _index(folder, done, pictures):
     show(
         "5. What may be published",
         "release",
-        f"Counts of falls by hexagon with a least count of {done['least count']}: {safe_words(safe)}.",
+        f"Counts of falls by hexagon with a least count of {done['least count']}: "
+        f"{safe_words(safe)}.",
     )
     show("", "safe surface", "A density surface none of whose peaks betrays an address.")
     clean = audit.get("DISCLOSED_REGIONS", 0) == 0

@@ -1,7 +1,7 @@
 """Maps drawn by the host: a sheet with title, map, legend and scale bar as PNG."""
 
+from osgeo import gdal
 from qgis.core import (
-    QgsLayerTree,
     QgsLayoutExporter,
     QgsLayoutItemLabel,
     QgsLayoutItemLegend,
@@ -9,14 +9,20 @@ from qgis.core import (
     QgsLayoutItemScaleBar,
     QgsLayoutPoint,
     QgsLayoutSize,
+    QgsLegendStyle,
     QgsPrintLayout,
     QgsRectangle,
     QgsUnitTypes,
 )
 from qgis.PyQt.QtGui import QColor, QFont
 
+LEGEND_PARTS = [
+    QgsLegendStyle.Style.Group,
+    QgsLegendStyle.Style.Subgroup,
+    QgsLegendStyle.Style.SymbolLabel,
+]
 MILLIMETRES = QgsUnitTypes.LayoutUnit.LayoutMillimeters
-WIDTH, HEIGHT, LEGEND_WIDTH, TITLE_HEIGHT = 230, 150, 62, 14
+WIDTH, HEIGHT, LEGEND_WIDTH, TITLE_HEIGHT = 245, 150, 77, 14
 
 
 def _place(item, layout, x, y, width, height):
@@ -66,7 +72,10 @@ def map_sheet(project, layers, title, path, extent, legend_of=None, dpi=120):
     _add_scale(layout, drawn, extent.width())
     settings = QgsLayoutExporter.ImageExportSettings()
     settings.dpi = dpi
+    # the host tries to note the map's place inside the PNG, which that format cannot hold
+    gdal.PushErrorHandler("CPLQuietErrorHandler")
     written = QgsLayoutExporter(layout).exportToImage(path, settings)
+    gdal.PopErrorHandler()
     if written != QgsLayoutExporter.ExportResult.Success:
         raise RuntimeError(f"the map {path} was not written ({written})")
 
@@ -89,16 +98,17 @@ def _add_legend(layout, drawn, layers):
     legend = QgsLayoutItemLegend(layout)
     legend.setLinkedMap(drawn)
     legend.setAutoUpdateModel(False)
-    tree = QgsLayerTree()
+    tree = legend.model().rootGroup()
+    tree.removeAllChildren()
     for layer in layers:
         tree.addLayer(layer)
-    legend.model().setRootGroup(tree)
-    legend.setWrapString("|")
+    for part in LEGEND_PARTS:
+        legend.setStyleFont(part, QFont("Noto Sans", 8))
+    legend.setSymbolWidth(5)
+    legend.setSymbolHeight(3.5)
     legend.setResizeToContents(True)
     _place(legend, layout, WIDTH - LEGEND_WIDTH - 3, TITLE_HEIGHT, LEGEND_WIDTH, 100)
     legend.adjustBoxSize()
-    # the legend's own copy must outlive this function
-    layout.setProperty("legend tree", tree)
 
 
 def _add_scale(layout, drawn, width):

@@ -44,7 +44,7 @@ def mixed_layer(point_layer, save_layer):
     return save_layer(layer)
 
 
-FIELDS = ["words", "counts", "sizes", "plain"]
+FIELDS = ["words", "counts", "sizes", "plain", "fid"]
 
 
 def assert_same(first, second):
