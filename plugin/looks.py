@@ -38,6 +38,7 @@ DIVERGING = ("#1f4e79", "#6c9bc0", "#c9d9e3", "#f6f2e8", "#e8c79c", "#c07d3c", "
 # Dark, light, middle grey when printed without colour.
 VERDICTS = {1: "#6b1f3f", 0: "#efe9da", -1: "#7fa6bd"}
 OUTLINE = "#3b3f46"
+MISSING = "#ecebe6"
 # What cannot be told from noise.
 NOISE = "#b9b6b0"
 
@@ -221,6 +222,27 @@ def steps(field, breaks, colours=SEQUENCE, unit="", width=0.1):
             symbol = _symbol(layer, colours[round(place)], width=width)
             ranges.append(QgsRendererRange(breaks[index], breaks[index + 1], symbol, words))
         layer.setRenderer(QgsGraduatedSymbolRenderer(field, ranges))
+
+    return look
+
+
+def steps_or_missing(field, breaks, missing, colours=SEQUENCE, unit="", width=0.1):
+    """Look: a number of a field in steps, and what has none in pale grey.
+
+    Parameters
+    ----------
+    field, breaks, colours, unit
+        As for `steps`; the last limit belongs to the last step.
+    missing : str
+        What no value means, in words.
+    """
+
+    def look(layer):
+        steps(f'coalesce("{field}", -1e300)', breaks, colours, unit, width)(layer)
+        renderer = layer.renderer().clone()
+        symbol = _symbol(layer, MISSING, outline="#a8a497", width=width)
+        renderer.addClassRange(QgsRendererRange(-2e300, -0.5e300, symbol, missing))
+        layer.setRenderer(renderer)
 
     return look
 

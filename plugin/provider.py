@@ -21,6 +21,8 @@ ALGORITHMS = {
     "rawink": "RawInk",
     "gridvariance": "GridVariance",
     "cellsize": "CellSize",
+    "safehexagons": "SafeHexagons",
+    "safesurface": "SafeSurface",
 }
 
 

@@ -41,7 +41,7 @@ def joined(one, other):
     )
 
 
-def merge_cells(q, r, totals, unsafe_zones, limit, rng, progress=silent):
+def merge_cells(q, r, totals, unsafe_zones, limit, rng, progress=silent, apart=None):
     """Merge unsafe cells into zones, each of them connected and at most so far across.
 
     In rounds, every unsafe zone joins the neighbour that costs least: the loss of detail (squared
@@ -61,6 +61,8 @@ def merge_cells(q, r, totals, unsafe_zones, limit, rng, progress=silent):
         Largest distance between two cells of a zone, in steps from cell to neighbouring cell.
     rng : numpy.random.Generator
     progress : callable
+    apart : (cells,) bool array or None
+        Cells that merge with none.
 
     Returns
     -------
@@ -75,7 +77,7 @@ def merge_cells(q, r, totals, unsafe_zones, limit, rng, progress=silent):
         for cell, (total, place) in enumerate(zip(totals, places))
     }
     zone_of = np.arange(len(q))
-    neighbours = _neighbours(q, r)
+    neighbours = _neighbours(q, r, np.zeros(len(q), bool) if apart is None else apart)
     unsafe = unsafe_zones(zone_of, len(q))
     stuck = set()
     open_zones = set(np.flatnonzero(unsafe).tolist())
@@ -92,13 +94,16 @@ def merge_cells(q, r, totals, unsafe_zones, limit, rng, progress=silent):
     return _numbered(zones, len(q), unsafe_zones)
 
 
-def _neighbours(q, r):
-    """Cells next to each cell, as a list of lists."""
-    place = {pair: cell for cell, pair in enumerate(zip(q.tolist(), r.tolist()))}
+def _neighbours(q, r, apart):
+    """Cells next to each cell, as a list of lists; none for those that stay apart."""
+    pairs = list(zip(q.tolist(), r.tolist()))
+    place = {pairs[cell]: cell for cell in np.flatnonzero(~apart)}
     steps = HEXAGON_NEIGHBOURS.tolist()
     return [
         [place[(a + da, b + db)] for da, db in steps if (a + da, b + db) in place]
-        for a, b in zip(q.tolist(), r.tolist())
+        if (a, b) in place
+        else []
+        for a, b in pairs
     ]
 
 

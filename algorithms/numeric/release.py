@@ -1,7 +1,7 @@
 """One safe release from confidential records: cells to published values, by one of five methods."""
 
 import secrets
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
@@ -166,7 +166,7 @@ class Release:
             )
 
 
-def release(records, q, r, region_count, plan, progress=silent):
+def release(records, q, r, region_count, plan, progress=silent, apart=None):
     """Make the release.
 
     Parameters
@@ -177,6 +177,8 @@ def release(records, q, r, region_count, plan, progress=silent):
     region_count : int
     plan : Plan
     progress : callable
+    apart : (cells,) bool array or None
+        Cells that are merged with none.
 
     Returns
     -------
@@ -188,7 +190,7 @@ def release(records, q, r, region_count, plan, progress=silent):
         return _noisy(records, len(q), region_count, plan, rng, progress)
     zones = np.arange(len(q))
     if plan.method == MERGE:
-        zones = _merged(records, q, r, plan, rng, part(progress, 0.0, 0.4))
+        zones = _merged(records, q, r, plan, rng, part(progress, 0.0, 0.4), apart)
         progress = part(progress, 0.4, 1.0)
     count = int(zones.max(initial=-1)) + 1
     behind = records.behind(zones, count, plan.rules)
@@ -212,7 +214,7 @@ def release(records, q, r, region_count, plan, progress=silent):
         values, published = _rounded(table, values, published, plan, q, r, secret, rng, progress)
     empty = 0.0 if plan.show_empty or rounded else np.nan
     shown = np.where(published, values, np.nan)
-    return Release(
+    made = Release(
         zones,
         np.array([table.spread(one, count, empty) for one in shown]),
         _regions(table, shown, region_count, plan),
@@ -220,6 +222,28 @@ def release(records, q, r, region_count, plan, progress=silent):
         behind.unsafe,
         table.spread(complementary, count, False),
         behind,
+    )
+    return _apart_where_withheld(made, records, plan) if plan.method == MERGE else made
+
+
+def _apart_where_withheld(made, records, plan):
+    """Withheld zones fall apart into cells: their shapes would tell which were safe."""
+    old, withheld = made.zones, made.withheld
+    names = np.where(withheld[old], withheld.size + np.arange(len(old)), old)
+    first = np.unique(names, return_index=True)[1]
+    order = np.argsort(first, kind="stable")
+    rank = np.empty(len(first), np.int64)
+    rank[order] = np.arange(len(first))
+    zones = rank[np.unique(names, return_inverse=True)[1].reshape(-1)]
+    before = old[np.unique(zones, return_index=True)[1]]
+    behind = records.behind(zones, len(before), plan.rules)
+    return replace(
+        made,
+        zones=zones,
+        values=made.values[:, before],
+        unsafe=behind.unsafe,
+        complementary=made.complementary[before],
+        behind=behind,
     )
 
 
@@ -231,7 +255,7 @@ def _regions(table, shown, region_count, plan):
     return values
 
 
-def _merged(records, q, r, plan, rng, progress):
+def _merged(records, q, r, plan, rng, progress, apart):
     """Zones in which every unsafe cell has found enough company."""
 
     def unsafe_zones(zones, count):
@@ -240,19 +264,22 @@ def _merged(records, q, r, plan, rng, progress):
 
     inside = records.cells[records.cells >= 0]
     totals = np.bincount(inside, minlength=len(q)).astype(float)
-    zones, _ = merge_cells(q, r, totals, unsafe_zones, plan.reach, rng, progress)
+    zones, _ = merge_cells(q, r, totals, unsafe_zones, plan.reach, rng, progress, apart)
     return zones
 
 
 def _not_protected_by_rounding(table, plan):
     """Unsafe sums that stay unsafe when they are rounded.
 
-    Either of the two neighbouring multiples must leave the whole protection range open.
+    Either of the two neighbouring multiples must leave the whole protection range open. A plain
+    count below the base may come out as 0, which tells no more than that few records are there.
     """
     targets, unsafe = table.targets, table.unsafe
     value = target_values(table.sums, targets)
     down = np.floor(value / plan.base) * plan.base
-    told = (targets.lower < down) | (targets.upper > down + plan.base)
+    plain = (table.sums.least > 0).all()
+    above = targets.upper > down + plan.base
+    told = (targets.lower < down) | (above & ((down > 0) | (not plain)))
     # at its upper end the range is met by the value itself: that column is safe as it is
     matters = (targets.sum_of >= 0) & (value < targets.upper)
     kept = np.zeros(len(unsafe), bool)

@@ -83,6 +83,21 @@ def test_merging_hides_which_cells_are_empty_unless_they_are_to_be_shown():
     assert np.isfinite(shown.count()).all()
 
 
+def test_a_withheld_zone_does_not_show_by_its_shape_that_it_had_been_merged():
+    seen = 0
+    for seed in range(40):
+        records, count, regions = practice(seed)
+        made = run(
+            records, count, regions, method="merge", region_totals=True, grand_total=True,
+            seed=seed,
+        )  # fmt: skip
+        sizes = np.bincount(made.zones)
+        assert (sizes[made.withheld] == 1).all()
+        assert len(sizes) == len(made.unsafe) == len(made.count())
+        seen += made.complementary.any()
+    assert seen > 5
+
+
 def rounded_case(made, count, records, base, region_totals, grand_total):
     """What an outsider knows of a rounded release: every figure lies within the base."""
     pieces = np.unique(np.column_stack([records.cells, records.regions]), axis=0)

@@ -1,0 +1,474 @@
+"""Disclosure-safe hexagons: counts of confidential records that nobody can be picked out of."""
+
+import numpy as np
+import shapely
+
+from ..plugin import looks
+from ..plugin.outputs import Column
+from ..plugin.text import number, tr
+from .base import SteadfieldAlgorithm
+from .numeric import hexagons
+from .numeric.errors import InputError
+from .numeric.loss import hellinger_distance, rank_correlation
+from .numeric.merging import zone_polygons
+from .numeric.progress import part
+from .numeric.release import NOISE, ROUND, WITHHOLD, release
+from .safehexagons_page import write_page
+from .safehexagons_study import METHODS, ORIENTATIONS, TOTALS, prepare
+
+
+class SafeHexagons(SteadfieldAlgorithm):
+    """Count records in hexagons and release only what gives nobody away."""
+
+    ID = "safehexagons"
+    NAME = tr("Disclosure-safe hexagons")
+    GROUP = "release"
+    QUESTION = "safe"
+    TAGS = (
+        tr("disclosure"),
+        tr("confidential"),
+        tr("privacy"),
+        tr("suppression"),
+        tr("rounding"),
+        tr("differential privacy"),
+    )
+    HELP = tr(
+        "Counts confidential records in hexagons and releases the figures by one of five methods: "
+        "withhold what is unsafe, merge it with neighbours, round in two ways, or add noise. The "
+        "release carries no true figure of an unsafe hexagon and does not tell why a hexagon was "
+        "withheld. Where totals are published too, further hexagons are withheld until linear "
+        "programmes show that none can be worked out. The least count protects from being singled "
+        "out; dominance and p % from estimates of a large contribution; the share rules from "
+        "learning what everybody in a hexagon has in common. None protects from what somebody "
+        "knows already, or from several releases compared: check those with Release audit. "
+        "Thresholds are set by the data's owner and by law, not by this tool."
+    )
+
+    def define(self):
+        self._add_records()
+        self._add_rules()
+        self._add_method()
+        self.add_number(
+            "SEED",
+            tr("Secret seed"),
+            tr(
+                "The same seed gives the same release to the bit, and rounds a hexagon alike in "
+                "every release; who knows it can undo part of the protection, so keep it like a "
+                "key. Empty: a secret of the system is used once and forgotten. With noise, a seed "
+                "makes a rehearsal that is not for release."
+            ),
+            least=0,
+            most=2**31 - 1,
+            whole=True,
+            optional=True,
+            advanced=True,
+        )
+        self.add_working_crs()
+        self.add_polygon_output(
+            "RELEASE",
+            tr("Release"),
+            tr("Hexagons, or merged hexagons, with what may be published."),
+        )
+        self.add_polygon_output(
+            "TOTALS_OUT",
+            tr("Published totals"),
+            tr("The totals that go with the release; no others may be published."),
+            optional=True,
+        )
+        self.add_polygon_output(
+            "CUSTODIAN",
+            tr("For the custodian (not for release)"),
+            tr("True figures and reasons of every hexagon. Confidential."),
+            optional=True,
+        )
+        self.add_report()
+        self.add_numbers(
+            HEXAGON_SIZE_USED=tr("Hexagon size used (m)"),
+            CELLS_RELEASED=tr("Hexagons released on their own"),
+            CELLS_MERGED=tr("Hexagons released in merged zones"),
+            CELLS_WITHHELD=tr("Hexagons withheld, empty ones among them"),
+            RECORDS_RELEASED=tr("Records in hexagons released on their own (confidential)"),
+            RECORDS_MERGED=tr("Records in merged zones (confidential)"),
+            RECORDS_WITHHELD=tr("Records in withheld hexagons (confidential)"),
+            HELLINGER=tr("Hellinger distance to the true counts (confidential)"),
+            RANK_CORRELATION=tr("Rank correlation with the true counts (confidential)"),
+        )
+
+    def _add_records(self):
+        self.add_points("RECORDS", tr("Records"), tr("One point for each confidential record."))
+        self.add_length(
+            "HEXAGON_SIZE",
+            tr("Hexagon size"),
+            tr(
+                "Distance between the centres of neighbouring hexagons. 0: a round size that holds "
+                "four times the least count on average."
+            ),
+        )
+        self.add_field(
+            "CONTRIBUTOR",
+            tr("Contributor"),
+            "RECORDS",
+            tr(
+                "Who is protected, such as the person or the household. Empty: every record is a "
+                "contributor of its own."
+            ),
+            numeric=False,
+        )
+        self.add_field(
+            "NUMERATOR",
+            tr("Numerator of a share"),
+            "RECORDS",
+            tr("What is released as a share of the count: 1 or 0, or a number up to the weight."),
+        )
+        self.add_field(
+            "WEIGHT",
+            tr("Weight"),
+            "RECORDS",
+            tr("What a record contributes. Empty: 1 each."),
+        )
+        self.add_boundary(
+            tr(
+                "Study area, public. Hexagons that meet it are released; records outside are left "
+                "out. Empty: the rectangle around the published hexagons."
+            )
+        )
+        self.add_polygons(
+            "REGIONS",
+            tr("Regions"),
+            tr("Polygons whose totals are published too, such as official zones."),
+            optional=True,
+        )
+        self.add_field(
+            "REGION_NAME",
+            tr("Name of a region"),
+            "REGIONS",
+            tr("Carried to the published totals."),
+            numeric=False,
+            advanced=True,
+        )
+        self.add_choice(
+            "TOTALS",
+            tr("Totals that are published besides"),
+            TOTALS,
+            tr("Say what a reader will have: a withheld hexagon must not be had by subtraction."),
+        )
+        self.add_flag(
+            "TOTALS_STAND",
+            tr("These totals are public already"),
+            tr("Then they cannot be withheld, and the run is refused where they give away."),
+            advanced=True,
+        )
+        self.add_choice(
+            "ORIENTATION",
+            tr("Orientation"),
+            ORIENTATIONS,
+            tr("Which way a corner of the hexagons points."),
+            advanced=True,
+        )
+
+    def _add_rules(self):
+        self.add_number(
+            "LEAST_COUNT",
+            tr("Least count"),
+            tr("Fewest distinct contributors behind a figure. In use: 3, 5, 10 and more."),
+            default=10,
+            least=1,
+            whole=True,
+        )
+        self.add_number(
+            "DOMINANCE_N",
+            tr("Dominance: number of largest contributors"),
+            tr("A total is unsafe when so many contributors hold more than the share. 0: off."),
+            default=0,
+            least=0,
+            whole=True,
+        )
+        self.add_number(
+            "DOMINANCE_SHARE",
+            tr("Dominance: largest share (%)"),
+            tr("Keep it secret: it helps to estimate a large contribution."),
+            default=85.0,
+            least=0.0,
+            most=100.0,
+        )
+        self.add_number(
+            "P_PERCENT",
+            tr("p % rule"),
+            tr(
+                "A total is unsafe when it lets the second largest contributor estimate the "
+                "largest to within so many per cent. 0: off. Keep it secret."
+            ),
+            default=0.0,
+            least=0.0,
+        )
+        self.add_flag(
+            "NONE_IS_GROUP",
+            tr("A share of none is unsafe too"),
+            tr("A share of all always is: it tells the answer of everybody in the hexagon."),
+            advanced=True,
+        )
+
+    def _add_method(self):
+        self.add_choice("METHOD", tr("Method"), METHODS, tr("What is done about unsafe hexagons."))
+        self.add_flag(
+            "SHOW_EMPTY",
+            tr("Show empty hexagons as 0"),
+            tr(
+                "Then a withheld hexagon is known to hold somebody, which can give a lone house "
+                "away. Off: empty hexagons look like withheld ones. Concerns withholding, merging."
+            ),
+            advanced=True,
+        )
+        self.add_number(
+            "MERGE_REACH",
+            tr("Farthest reach of a merged zone (hexagons)"),
+            tr("Largest distance between two hexagons of a zone; what stays unsafe is withheld."),
+            default=5,
+            least=1,
+            whole=True,
+            advanced=True,
+        )
+        self.add_number(
+            "ROUNDING_BASE",
+            tr("Rounding base"),
+            tr("Not below the least count. 0: the least count."),
+            default=0,
+            least=0,
+            whole=True,
+        )
+        self.add_number(
+            "EPSILON",
+            tr("Privacy budget (epsilon)"),
+            tr(
+                "Of noise: how much more likely one person's records may make any outcome, as "
+                "exp(epsilon). Budgets of several releases add up."
+            ),
+            default=1.0,
+            least=0.0,
+        )
+        self.add_number(
+            "CONTRIBUTION_LIMIT",
+            tr("Records of one contributor that noise hides"),
+            tr("More are left out at random; twice the limit needs twice the noise."),
+            default=1,
+            least=1,
+            whole=True,
+            advanced=True,
+        )
+        self.add_flag(
+            "NO_NEGATIVES",
+            tr("Lift negative noisy counts to 0"),
+            tr("Easier to read, but sums over many hexagons come out too large."),
+            advanced=True,
+        )
+
+    def work(self, job):
+        study = prepare(job)
+        made = release(
+            study.records, study.q, study.r, len(study.regions), study.plan,
+            part(job.progress, 0.15, 0.9), study.apart(),
+        )  # fmt: skip
+        shown = zones_to_show(study, made)
+        polygons = hexagons.hexagon_polygons(study.q, study.r, study.size, study.orientation)
+        shapes = zone_polygons(polygons, made.zones, len(made.unsafe))
+        if study.plan.method == NOISE and study.plan.seed is not None:
+            job.warn(tr("A seed was given: the noise can be repeated. Rehearsal, not for release."))
+        write_release(job, study, made, shown, shapes)
+        write_totals(job, study, made)
+        write_custodian(job, study, made, shapes)
+        loss = give_numbers(job, study, made, shown)
+        write_page(self, job, study, made, shown, shapes, loss)
+
+
+def zones_to_show(study, made):
+    """Zones that go into the release, in the order of the tiling.
+
+    Without a given area it is the rectangle of hexagons around the published ones: the outline of
+    the records themselves would show where the outermost lie.
+    """
+    zones = np.arange(len(made.unsafe))
+    if study.area is not None:
+        return zones
+    count = made.count()
+    safe = ~made.unsafe & (made.behind.whole.records > 0) & np.isfinite(count)
+    public = np.isfinite(count) & (count > 0 if study.plan.method == ROUND else safe)
+    if not public.any():
+        raise InputError(
+            tr(
+                "No hexagon of {} m can be published on its own; choose larger hexagons, or give "
+                "the boundary."
+            ).format(number(study.size))
+        )
+    kept = study.around(public[made.zones])
+    whole = np.bincount(made.zones, kept) == np.bincount(made.zones)
+    return zones[whole | public]
+
+
+def _names(study, made):
+    """Name of each zone: axial coordinates of its first hexagon."""
+    first = np.unique(made.zones, return_index=True)[1]
+    return [f"{q} {r}" for q, r in zip(study.q[first].tolist(), study.r[first].tolist())]
+
+
+def _inside_area(study, shapes):
+    """Area of each zone inside the study area, square units of the CRS."""
+    areas = shapely.area(shapes)
+    if study.area is not None:
+        edge = np.flatnonzero(~shapely.contains_properly(study.area, shapes))
+        areas[edge] = shapely.area(shapely.intersection(shapes[edge], study.area))
+    return areas
+
+
+def figure_columns(study, count, numerator, share, kilometres):
+    """Columns of published figures."""
+    kind = "int" if study.records.weights is None else "float"
+    columns = [Column("count", kind, count, tr("Count"))]
+    if numerator is not None:
+        numerator_kind = kind if _whole(study.records.numerator) else "float"
+        columns.append(Column("numerator", numerator_kind, numerator, tr("Numerator")))
+        columns.append(Column("share", "float", share, tr("Share (0 to 1)")))
+    with np.errstate(divide="ignore", invalid="ignore"):
+        density = np.where(kilometres > 0, count / kilometres, np.nan)
+    columns.append(Column("per_km2", "float", density, tr("Count (per km²)")))
+    columns.append(Column("area_km2", "float", kilometres, tr("Area inside (km²)")))
+    return columns
+
+
+def _whole(values):
+    return bool(np.array_equal(values, np.rint(values)))
+
+
+def write_release(job, study, made, shown, shapes):
+    """Write RELEASE: published figures, and nothing that depends on others."""
+    kilometres = _inside_area(study, shapes) * job.working.square_kilometres
+    names, sizes = _names(study, made), np.bincount(made.zones)
+    count, numerator, share = made.count(), made.numerator(), made.share()
+    status = np.where(made.withheld, tr("withheld"), tr("released"))
+    columns = [
+        Column("cell", "text", [names[zone] for zone in shown], tr("Hexagon (axial q r)")),
+        *figure_columns(
+            study,
+            count[shown],
+            None if numerator is None else numerator[shown],
+            None if share is None else share[shown],
+            kilometres[shown],
+        ),
+        Column("cells", "int", sizes[shown], tr("Hexagons merged")),
+        Column("status", "text", status[shown], tr("Status")),
+    ]
+    if study.plan.method == NOISE and study.plan.seed is not None:
+        words = [tr("rehearsal: not for release")] * len(shown)
+        columns.append(Column("note", "text", words, tr("Note")))
+    field = "count" if share is None else "share"
+    look = looks.steps_or_missing(
+        field, breaks_of(count if share is None else share), tr("withheld")
+    )
+    job.write_layer("RELEASE", columns, shapes[shown], "polygon", look)
+
+
+def breaks_of(values):
+    """Limits of classes, from published figures only."""
+    known = values[np.isfinite(values)]
+    if not len(known):
+        return [0.0, 1.0]
+    limits = np.unique(np.quantile(known, np.linspace(0, 1, 7)))
+    return limits.tolist() if len(limits) > 1 else [float(limits[0]), float(limits[0]) + 1.0]
+
+
+def write_totals(job, study, made):
+    """Write TOTALS_OUT: the totals that go with the release."""
+    if not job.wanted("TOTALS_OUT"):
+        return
+    values = [made.region_values] if study.plan.region_totals else []
+    names = list(study.region_names) if study.plan.region_totals else []
+    shapes = list(study.regions) if study.plan.region_totals else []
+    if study.plan.grand_total:
+        values.append(made.grand_values[:, None])
+        names.append(tr("whole area"))
+        shapes.append(study.area)
+    if not names:
+        raise InputError(
+            tr("{}: no totals are published; leave this output out or choose totals.").format(
+                job.label("TOTALS_OUT")
+            )
+        )
+    values = np.concatenate(values, axis=1)
+    count = values.sum(0)
+    areas = np.array([np.nan if shape is None else shape.area for shape in shapes])
+    numerator = share = None
+    if len(values) > 1:
+        numerator = values[0]
+        share = np.divide(numerator, count, out=np.full(len(count), np.nan), where=count > 0)
+    columns = [
+        Column("region", "text", names, tr("Region")),
+        *figure_columns(study, count, numerator, share, areas * job.working.square_kilometres),
+        Column("status", "text", np.where(np.isnan(count), tr("withheld"), tr("released"))),
+    ]
+    packed = np.empty(len(shapes), object)
+    packed[:] = shapes
+    job.write_layer("TOTALS_OUT", columns, packed, "polygon", looks.single("transparent"))
+
+
+def write_custodian(job, study, made, shapes):
+    """Write CUSTODIAN: true figures and reasons, not for release."""
+    if not job.wanted("CUSTODIAN"):
+        return
+    behind = made.behind
+    whole, values = behind.whole, behind.values()
+    reasons = np.select(
+        [made.unsafe, made.complementary, whole.records == 0],
+        [tr("unsafe by the rules"), tr("withheld to protect others"), tr("empty")],
+        tr("safe"),
+    )
+    columns = [
+        Column("cell", "text", _names(study, made), tr("Hexagon (axial q r)")),
+        Column("true_count", "float", values.sum(0), tr("True count (confidential)")),
+        Column("records", "int", whole.records, tr("Records (confidential)")),
+        Column("contributors", "int", whole.contributors, tr("Contributors (confidential)")),
+        Column("largest", "float", whole.largest, tr("Largest contribution (confidential)")),
+        Column("released", "float", made.count(), tr("Released count")),
+        Column("reason", "text", reasons, tr("Reason (confidential)")),
+    ]
+    if behind.parts:
+        columns.insert(
+            2, Column("true_numerator", "float", values[0], tr("True numerator (confidential)"))
+        )
+    classes = [
+        (tr("safe"), looks.SEQUENCE[2], tr("safe")),
+        (tr("unsafe by the rules"), "#6b1f3f", tr("unsafe by the rules")),
+        (tr("withheld to protect others"), "#c9a978", tr("withheld to protect others")),
+        (tr("empty"), "#f6f2e8", tr("empty")),
+    ]
+    job.write_layer("CUSTODIAN", columns, shapes, "polygon", looks.categories("reason", classes))
+
+
+def give_numbers(job, study, made, shown):
+    """Number outputs; returns (Hellinger distance, rank correlation)."""
+    sizes = np.bincount(made.zones)
+    out = np.ones(len(sizes), bool)
+    out[shown] = False
+    withheld = made.withheld | out
+    merged = ~withheld & (sizes > 1)
+    alone = ~withheld & (sizes == 1)
+    records = made.behind.whole.records
+    for name, which in (("RELEASED", alone), ("MERGED", merged), ("WITHHELD", withheld)):
+        job.give(f"CELLS_{name}", int(sizes[which & ~out].sum()))
+        job.give(f"RECORDS_{name}", int(records[which].sum()))
+    job.give("HEXAGON_SIZE_USED", study.size * job.working.metres)
+    weights = study.records.weights
+    inside = study.records.cells >= 0
+    true = np.bincount(
+        study.records.cells[inside], None if weights is None else weights[inside], len(study.q)
+    )
+    readable = (np.where(withheld, 0.0, made.count()) / sizes)[made.zones]
+    occupied = (true > 0) | (readable > 0)
+    loss = hellinger_distance(true, readable), rank_correlation(true[occupied], readable[occupied])
+    job.give("HELLINGER", loss[0])
+    job.give("RANK_CORRELATION", loss[1])
+    if study.plan.method == WITHHOLD and made.complementary.any():
+        job.inform(
+            tr("{} hexagons were withheld to protect others (confidential).").format(
+                number(made.complementary.sum())
+            )
+        )
+    return loss
