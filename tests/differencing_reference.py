@@ -44,7 +44,7 @@ def disclosed_unions(membership, lower, upper, tables, least_count):
     zones = [frozenset(np.flatnonzero(row)) for row in membership]
     said = {}
     for zone, low, high in zip(zones, lower, upper):
-        if high < least_count and (low == 0 or (low <= 1 and high >= least_count - 1)):
+        if high < least_count and (low == 0 or (low == 1 < high and high >= least_count - 1)):
             said.setdefault(zone - empty, []).append((low, high))
     certain, at_most = set(), set()
     for union, (low, high) in intervals.items():

@@ -263,7 +263,7 @@ def _is_stated(stated, columns, finding, least_count, empty):
         low, high = stated.lower[row], stated.upper[row]
         if finding.lower > low or finding.upper < high:
             narrowed = True
-        elif low == 0 or (low <= 1 and high >= least_count - 1):
+        elif low == 0 or (low == 1 < high and high >= least_count - 1):
             return True
     return finding.lower == 0 and not narrowed and all(len(rows) for rows in around.values())
 
@@ -292,7 +292,7 @@ def _forced(stated, searched, quiet, least_count):
     if not quiet:
         return [], np.empty(0, int)
     quiet = np.array(sorted(quiet))
-    own = (stated.upper < least_count) & (stated.lower <= 1)
+    own = (stated.upper < least_count) & (stated.lower == 1) & (stated.upper > 1)
     counts = replace(searched, lower=np.where(own, 0.0, searched.lower))
     findings, seen, waiting, spent = [], set(), [frozenset()], 0
     while waiting:

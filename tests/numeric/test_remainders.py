@@ -84,7 +84,7 @@ def compare(counts, source, truth, least_count, table):
     risks = [risk for risk in risks if risk.upper > 0]
     for risk in risks:
         assert (risk.lower, risk.upper) == intervals[risk.unknowns]
-    found = {risk.unknowns for risk in risks if risk.lower >= 1}
+    found = {risk.unknowns - empty for risk in risks if risk.lower >= 1}
     whole_range = (1, least_count - 1)
     assert all(intervals[union] == whole_range for union in found - certain)
     assert found or not certain
