@@ -45,7 +45,9 @@ class Chords:
     rows : slice
         Rows that the chords lie in.
     ends : sparse matrix
-        Nodes of those rows x chords: 1 where a chord begins, -1 where it has ended.
+        Nodes of those rows x chords: the weight where a chord begins, less it where it has ended.
+    change : (nodes,) int array
+        Chords that begin at each node, less those that have ended.
     coefficients : (chords, terms) array
         Of the polynomial in the column counted from the middle of the strip.
     """
@@ -54,6 +56,7 @@ class Chords:
     starts: np.ndarray
     rows: slice
     ends: csc_matrix
+    change: np.ndarray
     coefficients: np.ndarray
 
 
@@ -66,7 +69,7 @@ def _squared(terms):
     return product
 
 
-def _chords(row, column, radius, power, records, height, first_column, width):
+def _chords(row, column, radius, weights, power, records, height, first_column, width):
     """Chords of some records; columns are counted from the first one of the strip."""
     first = np.maximum(np.ceil(row[records] - radius[records]), 0)
     last = np.minimum(np.floor(row[records] + radius[records]), height - 1)
@@ -82,26 +85,28 @@ def _chords(row, column, radius, power, records, height, first_column, width):
     # the rim itself has no value, so that it does not matter on which side it falls
     end = np.maximum(np.floor(place + reach) + 1, begin)
     low, high = int(line.min()), int(line.max()) + 1
+    nodes = (high - low) * (width + 1)
     base = (line - low) * (width + 1)
-    index = np.stack([base + begin, base + end], axis=-1).astype(np.int32)
+    begin, end = (base + begin).astype(np.int32), (base + end).astype(np.int32)
     place -= width // 2
     terms = [(squared - np.square(place)) / scale, 2 * place / scale, -1.0 / scale]
     for _ in range(int(math.log2(power))):
         terms = _squared(terms)
-    # counts of the kernels at work are whole numbers, so nothing is left where none is
-    terms.append(np.ones(len(owner)))
+    weight = weights[records][owner]
     ends = csc_matrix(
         (
-            np.tile([1.0, -1.0], len(owner)),
-            index.ravel(),
+            np.column_stack([weight, -weight]).ravel(),
+            np.column_stack([begin, end]).ravel(),
             np.arange(len(owner) + 1, dtype=np.int32) * 2,
         ),
-        shape=((high - low) * (width + 1), len(owner)),
+        shape=(nodes, len(owner)),
     )
-    return Chords(records, starts, slice(low, high), ends, np.stack(terms, axis=-1))
+    # whole numbers, so that nothing at all is left where no kernel is at work
+    change = np.bincount(begin, minlength=nodes) - np.bincount(end, minlength=nodes)
+    return Chords(records, starts, slice(low, high), ends, change, np.stack(terms, axis=-1))
 
 
-def _strips(row, column, radius, power, shape, progress):
+def _strips(row, column, radius, weights, power, shape, progress):
     """Strips of columns with the chords in them: first column, width, and blocks of chords."""
     half = math.ceil(float(radius.max()))
     # a record whose disc meets no row of pixels has no chord
@@ -124,29 +129,14 @@ def _strips(row, column, radius, power, shape, progress):
         # so many records at once that their chords fit into the processor's cache
         share = np.floor((rows_so_far[start:end] - rows_so_far[start]) / _CHORDS)
         cuts = start + np.flatnonzero(np.diff(share, prepend=-1))
-        yield (
-            first,
-            width,
-            _blocks(
-                row,
-                column,
-                radius,
-                power,
-                order,
-                np.append(cuts, end),
-                shape[0],
-                first,
-                width,
-                progress,
-            ),
+        cuts = np.append(cuts, end)
+        blocks = (
+            _chords(row, column, radius, weights, power, order[begin:stop], shape[0], first, width)
+            for begin, stop in zip(cuts[:-1], cuts[1:])
+            if progress(begin / len(order)) is None
         )
+        yield first, width, blocks
         start = end
-
-
-def _blocks(row, column, radius, power, order, cuts, height, first, width, progress):
-    for begin, end in zip(cuts[:-1], cuts[1:]):
-        progress(begin / len(order))
-        yield _chords(row, column, radius, power, order[begin:end], height, first, width)
 
 
 def _overlap(first, width, columns):
@@ -163,11 +153,11 @@ def _powers(own, width, power):
 
 def _sum_by_chords(row, column, weights, radius, power, shape, progress):
     total = np.zeros(shape)
-    for first, width, blocks in _strips(row, column, radius, power, shape, progress):
-        sums = np.zeros((shape[0], width + 1, 2 * power + 2))
+    for first, width, blocks in _strips(row, column, radius, weights, power, shape, progress):
+        sums = np.zeros((shape[0], width + 1, 2 * power + 1))
+        counts = np.zeros((shape[0], width + 1), np.int64)
         for chords in blocks:
-            counts = np.diff(chords.starts, append=len(chords.coefficients))
-            chords.coefficients[:, :-1] *= np.repeat(weights[chords.records], counts)[:, None]
+            counts[chords.rows] += chords.change.reshape(-1, width + 1)
             window = sums[chords.rows]
             window += (chords.ends @ chords.coefficients).reshape(window.shape)
         own, target = _overlap(first, width, shape[1])
@@ -175,14 +165,15 @@ def _sum_by_chords(row, column, weights, radius, power, shape, progress):
         for start in range(0, shape[0], _ROWS):
             rows = slice(start, start + _ROWS)
             running = np.cumsum(sums[rows, : own.stop], axis=1)[:, own.start :]
-            value = np.einsum("rct,ct->rc", running[:, :, :-1], powers)
-            total[rows, target] += np.where(running[:, :, -1] > 0.5, value, 0.0)
+            value = np.einsum("rct,ct->rc", running, powers)
+            covered = np.cumsum(counts[rows, : own.stop], axis=1)[:, own.start :] > 0
+            total[rows, target] += np.where(covered, value, 0.0)
     return total
 
 
 def _gather_by_chords(row, column, radius, power, raster, progress):
-    collected = np.zeros(len(row))
-    for first, width, blocks in _strips(row, column, radius, power, raster.shape, progress):
+    collected, ones = np.zeros(len(row)), np.ones(len(row))
+    for first, width, blocks in _strips(row, column, radius, ones, power, raster.shape, progress):
         own, source = _overlap(first, width, raster.shape[1])
         moments = np.zeros((raster.shape[0], width + 1, 2 * power + 1))
         values = raster[:, source, None] * _powers(own, width, power)
@@ -191,7 +182,7 @@ def _gather_by_chords(row, column, radius, power, raster, progress):
         moments[:, own.stop + 1 :] = moments[:, own.stop : own.stop + 1]
         for chords in blocks:
             window = moments[chords.rows].reshape(-1, 2 * power + 1)
-            held = np.einsum("ct,ct->c", chords.ends.T @ window, chords.coefficients[:, :-1])
+            held = np.einsum("ct,ct->c", chords.ends.T @ window, chords.coefficients)
             collected[chords.records] = np.add.reduceat(held, chords.starts)
     return collected
 
