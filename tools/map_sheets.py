@@ -117,9 +117,9 @@ def _add_scale(layout, drawn, width):
     scale.setStyle("Line Ticks Up")
     scale.setUnits(QgsUnitTypes.DistanceUnit.DistanceKilometers)
     scale.setUnitLabel("km")
-    scale.setNumberOfSegments(2)
+    scale.setNumberOfSegments(1)
     scale.setNumberOfSegmentsLeft(0)
-    scale.setUnitsPerSegment(_round_length(width / 8000))
+    scale.setUnitsPerSegment(_round_length(width / 6000))
     scale.update()
     _place(scale, layout, WIDTH - LEGEND_WIDTH - 2, HEIGHT - 18, LEGEND_WIDTH, 12)
 
