@@ -31,7 +31,8 @@ def _records(x, y, weights, bandwidths):
     return x, y, weights, bandwidths
 
 
-def _in_pixels(x, y, bandwidths, grid):
+def in_pixels(x, y, bandwidths, grid):
+    """Row, column and bandwidth in pixels, 0 at the centre of the first pixel; three arrays."""
     row = (grid.top - y) / grid.cell - 0.5
     column = (x - grid.left) / grid.cell - 0.5
     return row, column, bandwidths / grid.cell
@@ -72,7 +73,7 @@ def adaptive_surface(x, y, weights, bandwidths, grid, kernel="gaussian", progres
     """
     kernel = kernel_named(kernel)
     x, y, weights, bandwidths = _records(x, y, weights, bandwidths)
-    row, column, widths = _in_pixels(x, y, bandwidths, grid)
+    row, column, widths = in_pixels(x, y, bandwidths, grid)
     if kernel is GAUSSIAN:
         total = gaussian_sum(row, column, weights, widths, grid.shape, progress)
     else:
@@ -111,7 +112,7 @@ def squared_surface(x, y, weights, bandwidths, grid, kernel="gaussian", progress
     kernel = kernel_named(kernel)
     x, y, weights, bandwidths = _records(x, y, weights, bandwidths)
     if kernel is not GAUSSIAN:
-        row, column, widths = _in_pixels(x, y, bandwidths, grid)
+        row, column, widths = in_pixels(x, y, bandwidths, grid)
         heights = np.square(weights * kernel.peak / np.square(widths))
         radius = QUARTIC_RADIUS * widths
         squares = disc_sum(row, column, heights, radius, 4, grid.shape, progress)
@@ -205,7 +206,7 @@ def kernel_mass(x, y, bandwidths, mask, grid, kernel="gaussian", progress=silent
     """
     kernel = kernel_named(kernel)
     x, y, _, bandwidths = _records(x, y, 1.0, bandwidths)
-    row, column, widths = _in_pixels(x, y, bandwidths, grid)
+    row, column, widths = in_pixels(x, y, bandwidths, grid)
     mask = np.asarray(mask, float)
     if kernel is GAUSSIAN:
         return gaussian_mass(row, column, widths, mask, progress)

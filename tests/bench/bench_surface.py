@@ -62,7 +62,7 @@ def convolution(period):
 def one_spreading(case, period):
     """Seconds of spreading the records once over the padded grid."""
     x, y, _, bandwidths, grid = case
-    row, column, _ = surface._in_pixels(x, y, bandwidths, grid)
+    row, column, _ = surface.in_pixels(x, y, bandwidths, grid)
     ones = np.ones((len(x), 1))
     return seconds(lambda: spreading.spread(row % period[0], column % period[1], ones, period))
 
@@ -82,7 +82,7 @@ def measure(records, pixels, narrowest, widest, kernel="gaussian"):
     found = surface.adaptive_surface(*case, kernel)
     own = seconds(lambda: surface.adaptive_surface(*case, kernel))
     x, y, _, bandwidths, grid = case
-    period = spectrum.plan(*surface._in_pixels(x, y, bandwidths, grid), grid.shape).period
+    period = spectrum.plan(*surface.in_pixels(x, y, bandwidths, grid), grid.shape).period
     base = convolution(period) + one_spreading(case, period)
     error = error_of(case, kernel, found)
     print(
