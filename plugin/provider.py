@@ -16,13 +16,19 @@ ALGORITHMS = {
     "recordcheck": "RecordCheck",
     "practicedistrict": "PracticeDistrict",
     "adaptivedensity": "AdaptiveDensity",
+    "bandwidthadvice": "BandwidthAdvice",
+    "densityratio": "DensityRatio",
+    "densityoutlines": "DensityOutlines",
     "inkblend": "InkBlend",
     "agreement": "Agreement",
     "rawink": "RawInk",
     "gridvariance": "GridVariance",
+    "unitvariance": "UnitVariance",
+    "correlationspread": "CorrelationSpreadAlgorithm",
     "cellsize": "CellSize",
     "safehexagons": "SafeHexagons",
     "safesurface": "SafeSurface",
+    "releaseaudit": "ReleaseAudit",
 }
 
 
