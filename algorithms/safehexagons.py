@@ -12,7 +12,7 @@ from .numeric.errors import InputError
 from .numeric.loss import hellinger_distance, rank_correlation
 from .numeric.merging import zone_polygons
 from .numeric.progress import part
-from .numeric.release import NOISE, ROUND, WITHHOLD, release
+from .numeric.release import MERGE, NOISE, ROUND, WITHHOLD, release
 from .safehexagons_page import write_page
 from .safehexagons_study import METHODS, ORIENTATIONS, TOTALS, prepare
 
@@ -359,19 +359,22 @@ def write_release(job, study, made, shown, shapes):
     if study.plan.method == NOISE and study.plan.seed is not None:
         words = [tr("rehearsal: not for release")] * len(shown)
         columns.append(Column("note", "text", words, tr("Note")))
-    field = "count" if share is None else "share"
-    look = looks.steps_or_missing(
-        field, breaks_of(count if share is None else share), tr("withheld")
-    )
+    field, values, unit = "count", count, ""
+    if share is not None:
+        field, values = "share", share
+    elif study.plan.method == MERGE:
+        # zones differ in size, so their counts cannot be compared by colour
+        field, values, unit = "per_km2", count / kilometres, tr("per km²")
+    look = looks.steps_or_missing(field, breaks_of(values), tr("withheld"), unit=unit)
     job.write_layer("RELEASE", columns, shapes[shown], "polygon", look)
 
 
 def breaks_of(values):
-    """Limits of classes, from published figures only."""
-    known = values[np.isfinite(values)]
+    """Limits of classes, from published figures only: as many distinct values in each."""
+    known = np.unique(values[np.isfinite(values)])
     if not len(known):
         return [0.0, 1.0]
-    limits = np.unique(np.quantile(known, np.linspace(0, 1, 7)))
+    limits = np.unique(known[np.rint(np.linspace(0, len(known) - 1, 7)).astype(int)])
     return limits.tolist() if len(limits) > 1 else [float(limits[0]), float(limits[0]) + 1.0]
 
 
@@ -402,7 +405,12 @@ def write_totals(job, study, made):
     columns = [
         Column("region", "text", names, tr("Region")),
         *figure_columns(study, count, numerator, share, areas * job.working.square_kilometres),
-        Column("status", "text", np.where(np.isnan(count), tr("withheld"), tr("released"))),
+        Column(
+            "status",
+            "text",
+            np.where(np.isnan(count), tr("withheld"), tr("released")),
+            tr("Status"),
+        ),
     ]
     packed = np.empty(len(shapes), object)
     packed[:] = shapes

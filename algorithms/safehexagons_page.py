@@ -34,7 +34,7 @@ def write_page(algorithm, job, study, made, shown, shapes, loss):
     )
     report.plot(
         tr("What is released"),
-        lambda figure: draw_release(figure, study, made, shown, shapes),
+        lambda figure: draw_release(figure, job, study, made, shown, shapes),
         tr(
             "Published figures only; grey hexagons carry none. Which of those are unsafe, empty or "
             "withheld to protect others is not shown here and must not be told."
@@ -251,6 +251,8 @@ def caution_words(study):
                 "Where few people live that alone can tell whom."
             )
         )
+    if study.plan.method in (ROUND, CONTROLLED):
+        words.append(tr("A rounded figure above 0 tells that somebody is there."))
     if study.plan.method == ROUND and study.plan.seed is None:
         words.append(
             tr(
@@ -263,13 +265,18 @@ def caution_words(study):
     return words
 
 
-def draw_release(figure, study, made, shown, shapes):
+def draw_release(figure, job, study, made, shown, shapes):
     """Map of published figures with a legend bar."""
     from matplotlib.collections import PolyCollection
     from matplotlib.colors import LinearSegmentedColormap
 
     share = made.share()
-    values = (made.count() if share is None else share)[shown]
+    values, label = made.count()[shown], tr("count")
+    if share is not None:
+        values, label = share[shown], tr("share")
+    elif study.plan.method == MERGE:
+        areas = shapely.area(shapes[shown]) * job.working.square_kilometres
+        values, label = values / areas, tr("count per km²")
     axes = figure.add_subplot()
     rings = [shapely.get_coordinates(shape.exterior) for shape in shapes[shown]]
     colours = LinearSegmentedColormap.from_list("sequence", SEQUENCE)
@@ -283,5 +290,4 @@ def draw_release(figure, study, made, shown, shapes):
     axes.autoscale_view()
     axes.set_aspect("equal")
     axes.set_axis_off()
-    label = tr("count") if share is None else tr("share")
     figure.colorbar(drawn, ax=axes, shrink=0.6, label=label)

@@ -7,7 +7,7 @@ import numpy as np
 import shapely
 
 from .hexagons import HEXAGON_NEIGHBOURS
-from .progress import silent
+from .progress import part, silent
 
 COST_SPREAD = 0.25
 
@@ -83,8 +83,11 @@ def merge_cells(q, r, totals, unsafe_zones, limit, rng, progress=silent, apart=N
     open_zones = set(np.flatnonzero(unsafe).tolist())
     start = max(len(open_zones), 1)
     while open_zones:
-        progress(1.0 - len(open_zones) / start)
-        changed = _merge_round(zones, zone_of, neighbours, open_zones, stuck, limit, rng)
+        done = 1.0 - len(open_zones) / start
+        progress(done)
+        changed = _merge_round(
+            zones, zone_of, neighbours, open_zones, stuck, limit, rng, part(progress, done, done)
+        )
         if not changed:
             break
         names = np.array(sorted(zones))
@@ -107,13 +110,15 @@ def _neighbours(q, r, apart):
     ]
 
 
-def _merge_round(zones, zone_of, neighbours, open_zones, stuck, limit, rng):
+def _merge_round(zones, zone_of, neighbours, open_zones, stuck, limit, rng, progress):
     """Let every unsafe zone join a neighbour that was not touched in this round."""
     touched = set()
     chances = rng.random(len(open_zones))
     queue = [(zones[name].total, chance, name) for name, chance in zip(sorted(open_zones), chances)]
     heapq.heapify(queue)
     while queue:
+        if len(queue) % 200 == 0:
+            progress(0.5)
         _, _, name = heapq.heappop(queue)
         if name in touched:
             continue

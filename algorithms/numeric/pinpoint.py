@@ -12,9 +12,11 @@ from scipy.ndimage import center_of_mass, gaussian_filter, label, maximum_filter
 from scipy.spatial import cKDTree
 from scipy.stats import poisson
 
-from .progress import silent
+from .progress import part, silent
 
-ROUNDS = 40
+ROUNDS = 25
+# a deconvolution needs no more pixels to a bandwidth than this
+FINE = 3
 MOVES = 20
 CHANCE = 1e-3
 
@@ -87,9 +89,9 @@ def sharpened(surface, bandwidth, rounds=ROUNDS, progress=silent):
     estimate = seen + 1e-12 * seen.max(initial=0.0)
     for step in range(rounds):
         progress(step / rounds)
-        blurred = gaussian_filter(estimate, bandwidth, mode="constant", truncate=5)
+        blurred = gaussian_filter(estimate, bandwidth, mode="constant", truncate=4)
         ratio = np.divide(seen, blurred, out=np.zeros_like(seen), where=blurred > 0)
-        estimate = estimate * gaussian_filter(ratio, bandwidth, mode="constant", truncate=5)
+        estimate = estimate * gaussian_filter(ratio, bandwidth, mode="constant", truncate=4)
     return estimate
 
 
@@ -123,8 +125,14 @@ def attack(surface, grid, bandwidths, x, y, contributors, tolerance, rng, progre
     -------
     Attack
     """
-    views = [surface, *(sharpened(surface, h / grid.cell, progress=progress) for h in bandwidths)]
-    places = [peaks(view) for view in views] + [holes(surface)]
+    places = [peaks(surface), holes(surface)]
+    for number, h in enumerate(bandwidths):
+        factor = max(1, int(h / grid.cell / FINE))
+        coarse = _in_blocks(surface, factor)
+        width = h / grid.cell / factor
+        share = part(progress, number / len(bandwidths), (number + 1) / len(bandwidths))
+        found = peaks(sharpened(coarse, width, progress=share))
+        places.append(tuple((line + 0.5) * factor - 0.5 for line in found))
     rows, columns = (np.concatenate(column) for column in zip(*places))
     candidates = np.column_stack(
         [grid.left + (columns + 0.5) * grid.cell, grid.top - (rows + 0.5) * grid.cell]
@@ -145,6 +153,15 @@ def attack(surface, grid, bandwidths, x, y, contributors, tolerance, rng, progre
         moved = candidates + length[:, None] * np.column_stack([np.cos(angle), np.sin(angle)])
         chance.append(hits(moved))
     return Attack(len(alone), hits(candidates), float(np.mean(chance)))
+
+
+def _in_blocks(surface, factor):
+    """Sums over square blocks of pixels, 0 where there is no value."""
+    filled = np.where(np.isfinite(surface), surface, 0.0)
+    rows, columns = (-(-size // factor) for size in filled.shape)
+    padded = np.zeros((rows * factor, columns * factor))
+    padded[: filled.shape[0], : filled.shape[1]] = filled
+    return padded.reshape(rows, factor, columns, factor).sum(axis=(1, 3))
 
 
 def _alone(x, y, contributors, distance):

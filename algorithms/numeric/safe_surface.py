@@ -114,7 +114,7 @@ def safe_surface(
             "No pixel has enough contributors behind it; choose a larger BANDWIDTH or a lower "
             "LEAST_COUNT that the data's owner allows."
         )
-    tried = np.unique(np.round([bandwidth, 2 * bandwidth, np.median(widths)], 6))
+    tried = np.unique([bandwidth, max(np.median(widths), 1.5 * bandwidth)])
     result = attack(
         density, grid, tried, x, y, contributors, max(bandwidth / 3, grid.cell), rng,
         part(progress, 0.55, 1.0),

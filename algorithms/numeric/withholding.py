@@ -103,7 +103,7 @@ def unprotected(sums, targets, published, progress=silent, proofs=None, among=No
     proofs = Proofs(sums, targets) if proofs is None else proofs
     active = targets.active(published) & (True if among is None else among)
     programmes = Deviations(sums, published)
-    exchange = _exchange(sums, targets, published)
+    exchange = _exchange(sums, targets, published, active)
     failing = []
     for direction, within in zip((-1, 1), exchange):
         end = targets.upper if direction > 0 else targets.lower
@@ -170,14 +170,14 @@ class _Kinds:
         return np.where(self.signatures[place] == signature, place, -1)
 
 
-def _exchange(sums, targets, published):
+def _exchange(sums, targets, published, active):
     """How far targets can deviate down and up by simple exchanges, for all of them at once.
 
     A lower bound of what the linear programmes allow.
     """
     kinds = _Kinds(sums, published)
     down, up = _within_kind(sums, targets, kinds)
-    swap_down, swap_up = _across_a_border(sums, targets, kinds)
+    swap_down, swap_up = _across_a_border(sums, targets, kinds, active)
     return np.maximum(down, swap_down), np.maximum(up, swap_up)
 
 
@@ -217,7 +217,7 @@ def _above_floor(sums, targets, rows, atoms):
     return np.maximum(value - np.maximum(sums.least[atoms] - rest, 0.0), 0.0)
 
 
-def _across_a_border(sums, targets, kinds):
+def _across_a_border(sums, targets, kinds, active):
     """Exchange of one piece of a published cell with another piece of it.
 
     What the piece gains its neighbour across the border loses; on either side withheld atoms
@@ -225,7 +225,7 @@ def _across_a_border(sums, targets, kinds):
     """
     count = targets.members.shape[0]
     down, up = np.zeros(count), np.zeros(count)
-    single = np.flatnonzero(np.diff(targets.members.indptr) == 1)
+    single = np.flatnonzero((np.diff(targets.members.indptr) == 1) & active)
     piece = targets.members.indices[targets.members.indptr[single]]
     cut = kinds.members[np.diff(kinds.members.indptr) > 1]
     marks = kinds.marks[np.diff(kinds.members.indptr) > 1]

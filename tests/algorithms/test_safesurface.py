@@ -137,12 +137,8 @@ def test_the_file_carries_no_statistics_or_names_of_the_records(made, tmp_path):
 def test_bandwidth_and_cell_size_are_chosen_and_said(made):
     results, watcher = made(BANDWIDTH=0, CELL_SIZE=0)
     assert results["BANDWIDTH_USED"] > results["CELL_SIZE_USED"] > 0
-    assert (
-        f"{results['BANDWIDTH_USED']:.1e}"
-        == f"{results['BANDWIDTH_USED']:e}"[:3]
-        + "e"
-        + (f"{results['BANDWIDTH_USED']:e}".split("e")[1])
-    )
+    # two digits: a bandwidth in full would carry the spread of the records
+    assert float(f"{results['BANDWIDTH_USED']:.1e}") == results["BANDWIDTH_USED"]
     assert any("chosen" in words for words in watcher.informed)
 
 
