@@ -5,10 +5,10 @@ from itertools import combinations
 import numpy as np
 import pytest
 import shapely
-from steadfield.algorithms.numeric import contrast
+from steadfield.algorithms.numeric import contrast, practice
 from steadfield.algorithms.numeric.edges import boundary_mask
 from steadfield.algorithms.numeric.errors import CancelledError, InputError
-from steadfield.algorithms.numeric.grid import Grid
+from steadfield.algorithms.numeric.grid import Grid, covering
 from steadfield.algorithms.numeric.relabelling import KernelSums, relabelled_values
 from steadfield.algorithms.numeric.surface import direct_surface
 
@@ -268,3 +268,23 @@ def test_cancelling_stops_the_relabelling():
     found = contrast.density_contrast(pooled_clouds(), GRID, 400.0)
     with pytest.raises(CancelledError):
         contrast.relabel(found, 500, np.random.default_rng(1), cancel)
+
+
+def test_both_true_areas_of_the_practice_district_are_found_and_nothing_else():
+    # tests/bench/bench_contrast.py does the same at full size
+    district = practice.make_district(1, 0.6)
+    groups = district.falls, district.residents
+    pooled = contrast.pool(*[(group.x, group.y, None) for group in groups])
+    bandwidth = contrast.common_bandwidth(pooled)
+    grid = covering(district.boundary.bounds, bandwidth / 4)
+    mask = boundary_mask(district.boundary, grid)
+    found = contrast.density_contrast(pooled, grid, bandwidth, mask=mask)
+    result = contrast.relabel(found, 99, np.random.default_rng(2))
+    sure = result.p_raised_anywhere <= 0.05
+    x, y = grid.centres()
+    areas = district.risk.areas()
+    for area in areas:
+        assert sure[shapely.contains_xy(area, x, y)].mean() > 0.2
+    near = shapely.union_all(shapely.buffer(areas, 2 * bandwidth))
+    assert shapely.contains_xy(near, x[sure], y[sure]).all()
+    assert not (result.p_lowered_anywhere <= 0.01).any()
