@@ -1,0 +1,214 @@
+"""The layers that one run reads, in one working CRS."""
+
+from dataclasses import replace
+
+from qgis.core import QgsVectorLayer
+
+from ..plugin import alignment, layers, reference_system
+from ..plugin.host import field_names
+from ..plugin.text import number, tr
+from .numeric.errors import InputError
+from .settings import Settings, table_name
+
+
+class Inputs(Settings):
+    """Reads layers; the first one settles the working CRS."""
+
+    @property
+    def working(self):
+        """The working CRS, once the first layer was read."""
+        if self._working is None:
+            raise RuntimeError("the working CRS is known only after a layer was read")
+        return self._working
+
+    def _source(self, name):
+        """The source, and the layer behind it when only its own filter narrows it."""
+        source = self.algorithm.parameterAsSource(self.parameters, name, self.context)
+        if source is None:
+            raise InputError(tr("{}: the layer cannot be read.").format(self.label(name)))
+        value = self.parameters[name]
+        whole_layer = isinstance(value, (str, QgsVectorLayer))
+        layer = None
+        if whole_layer:
+            layer = self.algorithm.parameterAsVectorLayer(self.parameters, name, self.context)
+        return layer, source
+
+    def choose_working_crs(self, name):
+        """Settle the working CRS on the layer of a parameter, unless it is settled or given."""
+        if self._working is not None:
+            return self._working
+        _, source = self._source(name)
+        transform_context = self.context.transformContext()
+        given = self.algorithm.parameterDefinition("WORKING_CRS") and self.given("WORKING_CRS")
+        try:
+            if given:
+                crs = self.algorithm.parameterAsCrs(self.parameters, "WORKING_CRS", self.context)
+                self._working = reference_system.chosen_crs(crs)
+            else:
+                self._working = reference_system.working_crs(
+                    source.sourceCrs(), source.sourceExtent(), transform_context
+                )
+        except InputError as error:
+            raise InputError(f"{self.label(name)}: {error}") from error
+        self.inform(
+            tr("Working CRS: {} ({})").format(
+                self._working.crs.userFriendlyIdentifier(), self._working.note
+            )
+        )
+        return self._working
+
+    def take_working_crs(self, working):
+        """Settle the working CRS from outside, for algorithms that start from rasters."""
+        self._working = working
+
+    def _read(self, read, name, **fields):
+        layer, source = self._source(name)
+        if source.featureCount() == 0:
+            raise InputError(tr("{}: the layer has no features.").format(self.label(name)))
+        working = self.choose_working_crs(name)
+        self.progress(0.0)
+        found = read(layer, source, working.crs, self.context.transformContext(), **fields)
+        for reason, count in found.skipped.items():
+            self.warn(
+                tr("{}: {} features {} were left out.").format(
+                    self.label(name), number(count), reason
+                )
+            )
+        if len(found) == 0:
+            raise InputError(
+                tr("{}: no usable feature is left; check geometry, weights and filter.").format(
+                    self.label(name)
+                )
+            )
+        return found
+
+    def table(self, name):
+        """A layer as it is stored, nothing left out: for checks of the data themselves.
+
+        Returns
+        -------
+        source : QgsProcessingFeatureSource
+        geometry : (n,) object array of shapely geometries, None where there is none
+        values : dict of str to (n,) array
+            Every field but the row number of a file.
+        """
+        layer, source = self._source(name)
+        if source.featureCount() == 0:
+            raise InputError(tr("{}: the layer has no features.").format(self.label(name)))
+        numbered = {"fid", "ogc_fid"}
+        if layer is not None:
+            numbered |= {layer.fields().at(i).name() for i in layer.primaryKeyAttributes()}
+        fields = [field.name() for field in source.fields() if field.name() not in numbered]
+        geometry, values, _ = layers.read_table(layer, source, fields)
+        return source, geometry, values
+
+    def field(self, name):
+        """Name of a chosen field, None where none is chosen."""
+        if not self.given(name):
+            return None
+        chosen = field_names(self.algorithm, self.parameters, name, self.context)
+        return chosen[0] if chosen else None
+
+    def records(self, name, weight=None, fields=()):
+        """Point records in the working CRS.
+
+        Parameters
+        ----------
+        name : str
+            Parameter of the layer.
+        weight : str or None
+            Parameter of the weight field.
+        fields : sequence of str
+            Names of further fields of the layer.
+
+        Returns
+        -------
+        plugin.layers.Records
+        """
+        weight_field = self.field(weight) if weight else None
+        return self._read(layers.read_records, name, weight=weight_field, fields=fields)
+
+    def polygons(self, name, fields=()):
+        """Polygon features in the working CRS, as `plugin.layers.Polygons`."""
+        return self._read(layers.read_polygons, name, fields=fields)
+
+    def boundary(self, name="BOUNDARY"):
+        """The study area as one valid geometry in the working CRS, None where none is given."""
+        if not self.given(name):
+            return None
+        try:
+            return layers.union_of(self.polygons(name))
+        except InputError as error:
+            raise InputError(f"{self.label(name)}: {error}") from error
+
+    def layer_names(self, name):
+        """Names of the layers of a list, for legends and reports; no two are alike.
+
+        The names of NAMES are taken where they are given; otherwise those of the layers, or of
+        their tables when a file of several was named by its path.
+        """
+        found = self.algorithm.parameterAsLayerList(self.parameters, name, self.context)
+        given = self.words("NAMES")
+        names = [piece.strip() for piece in given.split(";")] if given else []
+        if given and (len(names) != len(found) or not all(names)):
+            raise InputError(
+                tr("{}: a name for each of the {} layers is wanted; found {}.").format(
+                    self.label("NAMES"), len(found), len([one for one in names if one])
+                )
+            )
+        names = names or [table_name(layer) for layer in found]
+        return [
+            one if names.count(one) == 1 else f"{one} ({names[: place + 1].count(one)})"
+            for place, one in enumerate(names)
+        ]
+
+    def rasters(self, name, least=2, most=None):
+        """Raster layers on one grid; settles the working CRS.
+
+        Parameters
+        ----------
+        name : str
+            Parameter added with ``add_rasters``.
+        least, most : int
+            Number of layers that make sense.
+
+        Returns
+        -------
+        grid : numeric.grid.Grid
+        list of plugin.alignment.Aligned
+            In the order chosen.
+        """
+        chosen = self.algorithm.parameterAsLayerList(self.parameters, name, self.context)
+        if len(chosen) < least or (most is not None and len(chosen) > most):
+            wanted = f"{least} – {most}" if most is not None else tr("{} or more").format(least)
+            raise InputError(
+                tr("{}: {} layers are wanted; found {}.").format(
+                    self.label(name), wanted, len(chosen)
+                )
+            )
+        followed = chosen[0]
+        if self.given("GRID"):
+            followed = self.algorithm.parameterAsRasterLayer(self.parameters, "GRID", self.context)
+        transform_context = self.context.transformContext()
+        self._working, grid = alignment.common_grid(
+            followed, transform_context, self.real("CELL_SIZE")
+        )
+        alignment.check_overlap(chosen, grid, self._working.crs, transform_context)
+        self.inform(
+            tr("Grid: {} x {} pixels of {} m, as {}; {} ({})").format(
+                number(grid.rows),
+                number(grid.columns),
+                number(grid.cell * self._working.metres),
+                followed.name(),
+                self._working.crs.userFriendlyIdentifier(),
+                self._working.note,
+            )
+        )
+        band = self.whole("BAND")
+        aligned = [
+            replace(alignment.align(layer, grid, self._working.crs, band), name=words)
+            for layer, words in zip(chosen, self.layer_names(name))
+        ]
+        for layer in aligned:
+            self.inform(tr("{}: {}").format(layer.name, layer.how))
+        return grid, aligned
