@@ -14,7 +14,7 @@ from .densityratio_study import WEIGHTS_MEAN, prepare
 from .numeric.contrast import density_contrast, relabel
 from .numeric.errors import InputError
 from .numeric.progress import part
-from .numeric.tolerance import tolerance_areas
+from .numeric.tolerance import check_levels, tolerance_areas
 
 # factors that the colours of a ratio may reach either way
 FACTORS = (1.25, 1.5, 2.0, 3.0, 4.0, 6.0, 10.0, 20.0, 100.0)
@@ -159,6 +159,7 @@ class DensityRatio(SteadfieldAlgorithm):
         )
 
     def work(self, job):
+        count, levels = job.whole("RELABELLINGS"), asked_levels(job)
         study = prepare(job)
         found = density_contrast(
             study.pooled,
@@ -172,16 +173,10 @@ class DensityRatio(SteadfieldAlgorithm):
         )
         say_what_was_held(job, study, found)
         relabelling = areas = None
-        levels = asked_levels(job)
-        if job.whole("RELABELLINGS"):
+        if count:
             generator = np.random.default_rng(job.seed())
-            relabelling = relabel(
-                found, job.whole("RELABELLINGS"), generator, part(job.progress, 0.2, 0.9)
-            )
-            try:
-                areas = tolerance_areas(found, relabelling, levels)
-            except InputError as error:
-                raise InputError(f"{job.label('LEVELS')}: {error}") from error
+            relabelling = relabel(found, count, generator, part(job.progress, 0.2, 0.9))
+            areas = tolerance_areas(found, relabelling, levels)
         give_numbers(job, study, found, relabelling, areas)
         write_ratio(job, study, found)
         write_p_values(job, study, relabelling)
@@ -190,12 +185,25 @@ class DensityRatio(SteadfieldAlgorithm):
 
 
 def asked_levels(job):
-    """The levels of LEVELS, 0 to 1; nothing to be relabelled and no levels is fine."""
+    """The levels of LEVELS, 0 to 1, checked against the number of relabellings."""
+    count = job.whole("RELABELLINGS")
+    for output in ("P_VALUE", "OUTLINES"):
+        if job.wanted(output) and not count:
+            raise InputError(
+                tr("{}: {} needs relabellings; ask for 199 or more.").format(
+                    job.label("RELABELLINGS"), job.label(output)
+                )
+            )
     levels = [level / 100 for level in dict.fromkeys(job.numbers("LEVELS"))]
     if not levels:
         raise InputError(
             tr("{}: at least one percentage is expected; found none.").format(job.label("LEVELS"))
         )
+    if count:
+        try:
+            check_levels(levels, count)
+        except InputError as error:
+            raise InputError(f"{job.label('LEVELS')}: {error}") from error
     return levels
 
 
@@ -257,15 +265,9 @@ def ratio_stops(found):
 
 
 def write_p_values(job, study, relabelling):
-    """Write P_VALUE where it is wanted and labels were drawn."""
+    """Write P_VALUE where it is wanted."""
     if not job.wanted("P_VALUE"):
         return
-    if relabelling is None:
-        raise InputError(
-            tr("{}: p-values need relabellings; ask for 199 or more.").format(
-                job.label("RELABELLINGS")
-            )
-        )
     bands = [
         Band(name, getattr(relabelling, name))
         for name in ("p_raised", "p_lowered", "p_raised_anywhere", "p_lowered_anywhere")
@@ -280,12 +282,6 @@ def write_areas(job, study, areas):
     """Write OUTLINES where they are wanted."""
     if not job.wanted("OUTLINES"):
         return
-    if areas is None:
-        raise InputError(
-            tr("{}: outlines need relabellings; ask for 199 or more.").format(
-                job.label("RELABELLINGS")
-            )
-        )
     polygons = np.empty(areas.side.size, object)
     for labels in areas.labels:
         own = np.unique(labels[labels > 0]) - 1

@@ -10,7 +10,7 @@ from scipy.spatial.distance import cdist
 from .bandwidth import checked_records
 from .errors import InputError
 from .pairsums import pair_sums, reading_lattice, record_spectrum, smoothed_at_records
-from .progress import silent
+from .progress import part, silent
 
 NEIGHBOURS = 24
 # A node of a lattice costs as much time as so many pairs of records
@@ -93,10 +93,12 @@ def likelihood_scores(x, y, bandwidths, weights=None, spectrum=None, progress=si
         spectrum = record_spectrum(x, y, weights, bandwidths.min(), bandwidths.max())
     sums = _LeaveOneOutSums(x, y, weights, spectrum)
     scores = np.empty(bandwidths.size)
+    count = bandwidths.size
     for place, bandwidth in enumerate(bandwidths):
-        logs = sums.logs(bandwidth, progress) - np.log(spectrum.total - weights)
+        report = part(progress, place / count, (place + 1) / count)
+        logs = sums.logs(bandwidth, report) - np.log(spectrum.total - weights)
         scores[place] = weights @ logs / spectrum.total
-        progress((place + 1) / bandwidths.size)
+        report(1.0)
     return scores
 
 

@@ -1,5 +1,6 @@
 """Areas where a density ratio lies beyond what labels at random give."""
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -79,15 +80,7 @@ def tolerance_areas(contrast, relabelling, levels):
     ----------
     Kelsall & Diggle (1995), Statistics in Medicine 14:2335-2342 (tolerance contours).
     """
-    least = 1.0 / (relabelling.count + 1)
-    for level in levels:
-        if not 0 < level < 0.5:
-            raise InputError(f"Levels must lie above 0 and below 50 %; found {100 * level:g} %.")
-        if level < least:
-            raise InputError(
-                f"A level of {100 * level:g} % needs at least {round(1 / level) - 1} relabellings; "
-                f"found {relabelling.count}."
-            )
+    check_levels(levels, relabelling.count)
     found, labels, count = [], [], 0
     weights = _weights_on_pixels(contrast)
     for everywhere in (False, True):
@@ -110,6 +103,18 @@ def tolerance_areas(contrast, relabelling, levels):
     columns = list(zip(*found)) if found else [()] * 12
     kinds = (int, bool, float, int, float, float, float, float, float, float, int, int)
     return ToleranceAreas(*(np.array(column, kind) for column, kind in zip(columns, kinds)), labels)
+
+
+def check_levels(levels, relabellings):
+    """Raise InputError for levels out of range or out of reach of so many relabellings."""
+    for level in levels:
+        if not 0 < level < 0.5:
+            raise InputError(f"Levels must lie above 0 and below 50 %; found {100 * level:g} %.")
+        if level * (relabellings + 1) < 1 - 1e-9:
+            raise InputError(
+                f"A level of {100 * level:g} % needs at least {math.ceil(1 / level - 1e-9) - 1} "
+                f"relabellings; found {relabellings}."
+            )
 
 
 def _weights_on_pixels(contrast):
