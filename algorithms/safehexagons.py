@@ -365,17 +365,15 @@ def write_release(job, study, made, shown, shapes):
     elif study.plan.method == MERGE:
         # zones differ in size, so their counts cannot be compared by colour
         field, values, unit = "per_km2", count / kilometres, tr("per km²")
-    look = looks.steps_or_missing(field, breaks_of(values), tr("withheld"), unit=unit)
+    look = looks.groups_or_missing(field, groups_of(values), tr("withheld"), unit=unit)
     job.write_layer("RELEASE", columns, shapes[shown], "polygon", look)
 
 
-def breaks_of(values):
-    """Limits of classes, from published figures only: as many distinct values in each."""
+def groups_of(values, most=6):
+    """Classes of the map from published figures only: as many distinct values in each."""
     known = np.unique(values[np.isfinite(values)])
-    if not len(known):
-        return [0.0, 1.0]
-    limits = np.unique(known[np.rint(np.linspace(0, len(known) - 1, 7)).astype(int)])
-    return limits.tolist() if len(limits) > 1 else [float(limits[0]), float(limits[0]) + 1.0]
+    parts = np.array_split(known, min(most, len(known))) if len(known) else []
+    return [(float(some[0]), float(some[-1])) for some in parts]
 
 
 def write_totals(job, study, made):

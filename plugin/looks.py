@@ -226,23 +226,31 @@ def steps(field, breaks, colours=SEQUENCE, unit="", width=0.1):
     return look
 
 
-def steps_or_missing(field, breaks, missing, colours=SEQUENCE, unit="", width=0.1):
-    """Look: a number of a field in steps, and what has none in pale grey.
+def groups_or_missing(field, groups, missing, colours=SEQUENCE, unit="", width=0.1):
+    """Look: groups of a number's values, and what has no value in pale grey.
 
     Parameters
     ----------
-    field, breaks, colours, unit
-        As for `steps`; the last limit belongs to the last step.
+    field : str
+    groups : sequence of (float, float)
+        Lowest and highest value of each group, rising, both belonging to it.
     missing : str
         What no value means, in words.
+    colours : sequence of str
+        At least as many as groups; taken evenly.
+    unit : str
     """
 
     def look(layer):
-        steps(f'coalesce("{field}", -1e300)', breaks, colours, unit, width)(layer)
-        renderer = layer.renderer().clone()
-        symbol = _symbol(layer, MISSING, outline="#a8a497", width=width)
-        renderer.addClassRange(QgsRendererRange(-2e300, -0.5e300, symbol, missing))
-        layer.setRenderer(renderer)
+        ranges = [
+            QgsRendererRange(-2e300, -0.5e300, _symbol(layer, MISSING, "#a8a497", width), missing)
+        ]
+        for index, (low, high) in enumerate(groups):
+            place = index * (len(colours) - 1) / max(len(groups) - 1, 1)
+            words = number(low) if low == high else f"{number(low)} – {number(high)}"
+            symbol = _symbol(layer, colours[round(place)], width=width)
+            ranges.append(QgsRendererRange(low, high, symbol, f"{words} {unit}".strip()))
+        layer.setRenderer(QgsGraduatedSymbolRenderer(f'coalesce("{field}", -1e300)', ranges))
 
     return look
 
