@@ -71,7 +71,7 @@ def analyse(host, folder):
     )  # fmt: skip
     done["audit"] = host.run(
         "releaseaudit", RELEASES=[done["safe"]["RELEASE"], table + "care_wards"],
-        COUNT_FIELDS="records, falls", RECORDS=falls, LEAST_COUNT=LEAST_COUNT,
+        COUNT_FIELDS="count; falls", RECORDS=falls, LEAST_COUNT=LEAST_COUNT,
         RISKS=out("audit_risks.gpkg"), REPORT=out("report_audit.html"),
     )  # fmt: skip
     return done
