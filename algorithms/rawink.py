@@ -22,7 +22,8 @@ from .numeric.grid import covering
 from .numeric.progress import part
 
 PIXELS_ACROSS = 800
-MOST_PIXELS = 60_000_000
+# Pixels of all layers together; each takes about 20 bytes.
+MOST_PIXELS = 120_000_000
 CAUTIONS = [
     tr(
         "This picture shows where features lie, so it is as confidential as they are: a lone mark "
@@ -200,12 +201,13 @@ def picture_grid(job, features):
         longer = max(bounds[2] - bounds[0], bounds[3] - bounds[1]) or 100.0 / job.working.metres
         size = cell / job.working.metres or two_digits(longer / PIXELS_ACROSS)
         grid = covering(bounds, size, margin=size)
-    pixels = grid.rows * grid.columns
+    pixels = grid.rows * grid.columns * len(features)
     if pixels > MOST_PIXELS:
         workable = grid.cell * (pixels / MOST_PIXELS) ** 0.5 * job.working.metres
         raise InputError(
-            tr("{}: {} x {} pixels are too many to hold; choose {} m or more.").format(
+            tr("{}: {} layers of {} x {} pixels are too many to hold; choose {} m or more.").format(
                 job.label("CELL_SIZE"),
+                len(features),
                 number(grid.rows),
                 number(grid.columns),
                 number(two_digits(workable * 1.05)),
