@@ -4,7 +4,7 @@ import numpy as np
 
 from ..plugin.report import Report
 from ..plugin.text import listed, number, percent, tr
-from .unitvariance_plots import FANNED, draw_fans, draw_maps, draw_source_maps
+from .unitvariance_plots import FANNED, draw_fans, draw_maps, draw_source_maps, map_height
 from .zoning_pages import (
     VALUES,
     allocation_words,
@@ -62,7 +62,7 @@ def _maps(report, study, metres):
             "Left: value averaged over all zonings ({}). Right: units that stand above or below "
             "{} {} under at least 95 of 100 zonings and beyond what chance alone would do."
         ).format(study.rate.unit, number(study.threshold), study.rate.unit),
-        size=(9.5, 5.2),
+        size=(9.5, map_height(study, 9.0, 2, 1.9)),
     )
 
 
@@ -90,7 +90,7 @@ def _sources(report, study, metres):
             "of zones to another, from one zoning to another of the same number, and by chance "
             "under one fixed zoning."
         ).format(study.rate.unit),
-        size=(9.5, 4.0),
+        size=(9.5, map_height(study, 8.4, 3, 0.9)),
     )
     report.plot(
         "",
@@ -145,6 +145,14 @@ def movement_words(study):
             "and {} {} over the whole area."
         ).format(number(low), number(high), unit, number(len(largest)), number(study.overall), unit)
     ]
+    small = total_of_highest(study)
+    if small is not None and small * run.problem.overall < 5:
+        words.append(
+            tr(
+                "The highest zone of all holds only {} of the total, so few that chance alone "
+                "makes such values; tree-cut zones with a least total keep them out."
+            ).format(number(small))
+        )
     typical = typical_deviations(study)
     total = typical["scale"] ** 2 + typical["zoning"] ** 2
     if total > 0:
@@ -159,6 +167,18 @@ def movement_words(study):
             )
         )
     return words
+
+
+def total_of_highest(study):
+    """Total of the highest zone in the zoning with the highest; None when others were kept."""
+    run = study.run
+    if run.statistic != "largest" or run.largest is None:
+        return None
+    labels = run.largest.labels
+    counts = np.bincount(labels, study.rate.counts)
+    totals = np.bincount(labels, study.rate.totals)
+    used = totals > 0
+    return float(totals[used][np.argmax(counts[used] / totals[used])])
 
 
 def typical_deviations(study):

@@ -80,7 +80,7 @@ def examine(job):
     units = read_units(job)
     rate = read_rate(job, units, "COUNT", "TOTAL")
     official, names, straddling = read_official(job, units)
-    counts = zone_counts(job, units, None if official is None else len(names))
+    counts = zone_counts(job, units)
     generator = np.random.default_rng(np.random.SeedSequence(job.seed(), spawn_key=(1,)))
     threshold = job.real("THRESHOLD")
     setting = problem(

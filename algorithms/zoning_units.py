@@ -76,7 +76,7 @@ def add_zones(algorithm, replicates):
         tr("Numbers of zones"),
         tr(
             "How many zones the units are grouped into, apart by commas; each number is a scale. "
-            "Empty: five numbers from about a hundredth to a quarter of the units."
+            "Empty: five numbers from about a thirtieth to a quarter of the units."
         ),
     )
     algorithm.add_choice(
@@ -237,14 +237,8 @@ def _usable(job, units, name):
     return np.where(bad, 0.0, values), bad
 
 
-def zone_counts(job, units, beside=None):
-    """The numbers of zones asked for, or chosen and said.
-
-    Parameters
-    ----------
-    beside : int, optional
-        A number that is added when the numbers are chosen, that of the official zoning.
-    """
+def zone_counts(job, units):
+    """The numbers of zones asked for, or chosen and said."""
     asked = job.numbers("ZONE_COUNTS")
     if asked:
         odd = [value for value in asked if value != int(value) or value < 1]
@@ -257,14 +251,11 @@ def zone_counts(job, units, beside=None):
         return sorted({int(value) for value in asked})
     many = units.graph.units
     parts = units.graph.components()[0]
-    low = max(3, parts, round(many / 100))
+    low = max(3, parts, round(many / 30))
     high = max(low, many // 4)
-    chosen = {round(value) for value in np.geomspace(low, high, 5)}
-    if beside is not None and beside >= parts:
-        chosen.add(int(beside))
-    chosen = sorted(min(value, many) for value in chosen)
+    chosen = sorted({min(round(value), many) for value in np.geomspace(low, high, 5)})
     job.inform(tr("Numbers of zones chosen: {}").format(", ".join(map(str, chosen))))
-    return sorted(set(chosen))
+    return chosen
 
 
 def builder_words(job):

@@ -31,22 +31,29 @@ CORE = __package__
 MOST_WORKERS = 8
 START_SECONDS = 2.5  # until a worker has imported what it needs
 PROBE_SECONDS = 20
+SCHEDULER_SECONDS = 10.0
 
-# Runs by itself in another Python: takes the core from the archive unless it is there already.
+# Runs by itself in another Python. The core comes from the archive, so that a worker never
+# computes with another version than the one that asks; a process that runs the asking copy itself
+# (a scheduler inside it) keeps that.
 ARRIVAL = """
 def steadfield_arrival(archive, package, payload):
-    import importlib, pickle, sys
-    try:
-        importlib.import_module(package)
-    except ImportError:
+    import hashlib, importlib, pickle, sys
+    digest = hashlib.sha256(archive).hexdigest()
+    known = sys.modules.get(package)
+    if known is None or getattr(known, "archive_digest", digest) != digest:
         import atexit, os, shutil, tempfile
+        root = package.split(".")[0]
+        for name in [n for n in sys.modules if n == root or n.startswith(root + ".")]:
+            del sys.modules[name]
         folder = tempfile.mkdtemp(prefix="steadfield-core-")
         atexit.register(shutil.rmtree, folder, True)
         path = os.path.join(folder, "core.zip")
         with open(path, "wb") as file:
             file.write(archive)
-        sys.path.append(path)
+        sys.path.insert(0, path)
         importlib.invalidate_caches()
+        importlib.import_module(package).archive_digest = digest
     function, arguments = pickle.loads(payload)
     return pickle.dumps(function(*arguments), protocol=4)
 """
@@ -264,7 +271,7 @@ class SchedulerExecutor(Executor):
     ----------
     address : str
         Such as ``tcp://host:8786``.
-    seconds : float
+    seconds : float, optional
         How long to wait for the scheduler.
 
     Raises
@@ -273,7 +280,7 @@ class SchedulerExecutor(Executor):
         The package is missing, or no scheduler answers there, or it has no workers.
     """
 
-    def __init__(self, address, seconds=10.0):
+    def __init__(self, address, seconds=None):
         try:
             from distributed import Client
         except ImportError as error:
@@ -283,7 +290,9 @@ class SchedulerExecutor(Executor):
                 "distributed - or leave the address empty to work on this machine."
             ) from error
         try:
-            self._client = Client(address, timeout=seconds, set_as_default=False)
+            self._client = Client(
+                address, timeout=seconds or SCHEDULER_SECONDS, set_as_default=False
+            )
         except (OSError, ValueError, TimeoutError) as error:
             raise InputError(
                 f"SCHEDULER: no Dask scheduler answers at {address}; check the address, or leave "

@@ -245,7 +245,10 @@ def test_crossing_outlines_islands_and_duplicates_are_counted(run, given):
         ({"REPLICATES": 5_000_000, "ZONE_COUNTS": "5,6,7,8,9"}, {}, "GB; choose"),
     ],
 )
-def test_what_cannot_be_done_is_refused_in_words(run, given, parameters, columns, words):
+def test_what_cannot_be_done_is_refused_in_words(
+    run, given, parameters, columns, words, monkeypatch
+):
+    monkeypatch.setattr("steadfield.algorithms.numeric.workers.SCHEDULER_SECONDS", 0.5)
     if words == "TOTAL":
         columns = {"events": [None] * 64, "people": [1] * 64}
         words = "no unit has a usable number"

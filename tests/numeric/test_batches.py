@@ -1,13 +1,18 @@
+import base64
+import io
 import os
+import pickle
 import signal
 import subprocess
 import sys
 import threading
+import zipfile
 from concurrent.futures import Executor, Future, ThreadPoolExecutor
 
 import numpy as np
 import pytest
 from steadfield.algorithms.numeric import workers
+from steadfield.algorithms.numeric.allocation import check_budget
 from steadfield.algorithms.numeric.batches import plan_batches, run_batches
 from steadfield.algorithms.numeric.contiguity import from_pairs
 from steadfield.algorithms.numeric.correlation import relation, simulate_correlation
@@ -198,31 +203,45 @@ def test_short_work_starts_no_processes(monkeypatch):
     assert workers.local_workers(1.0) is None
 
 
-def test_the_core_travels_to_a_python_that_does_not_have_it():
+def ask_elsewhere(*archives):
+    """Send one question with each archive to a bare Python; returns what it prints."""
     code = "\n".join(
         [
             "import base64, pickle, sys",
             workers.ARRIVAL,
-            "archive = base64.b64decode(sys.stdin.readline())",
-            "payload = base64.b64decode(sys.stdin.readline())",
-            f"answer = steadfield_arrival(archive, {workers.CORE!r}, payload)",
-            "print(pickle.loads(answer))",
+            "for line in sys.stdin:",
+            "    archive, payload = map(base64.b64decode, line.split())",
+            f"    answer = steadfield_arrival(archive, {workers.CORE!r}, payload)",
+            "    print(pickle.loads(answer))",
         ]
     )
-    import base64
-    import pickle
-
-    from steadfield.algorithms.numeric.allocation import check_budget
-
-    lines = [workers.core_archive(), pickle.dumps((check_budget, (0.25,)))]
+    payload = base64.b64encode(pickle.dumps((check_budget, (0.25,)))).decode()
+    lines = [f"{base64.b64encode(archive).decode()} {payload}\n" for archive in archives]
     answer = subprocess.run(
         [workers.real_python(), "-c", code],
-        input="\n".join(base64.b64encode(line).decode() for line in lines) + "\n",
+        input="".join(lines),
         capture_output=True,
         text=True,
         cwd="/",
     )
-    assert answer.stdout.strip() == "0.25", answer.stderr
+    return answer.stdout.split() or answer.stderr
+
+
+def test_the_core_travels_to_a_python_that_does_not_have_it():
+    assert ask_elsewhere(workers.core_archive(), workers.core_archive()) == ["0.25", "0.25"]
+
+
+def test_a_worker_never_computes_with_an_older_core():
+    old = workers.core_archive()
+    source = zipfile.ZipFile(io.BytesIO(old))
+    changed = io.BytesIO()
+    with zipfile.ZipFile(changed, "w") as archive:
+        for name in source.namelist():
+            text = source.read(name)
+            if name.endswith("allocation.py"):
+                text = text.replace(b"    return budget\n", b"    return budget * 2\n")
+            archive.writestr(name, text)
+    assert ask_elsewhere(old, changed.getvalue()) == ["0.25", "0.5"]
 
 
 def test_without_the_scheduler_package_the_message_says_what_to_install(monkeypatch):
