@@ -197,6 +197,18 @@ def test_report_names_the_differences_and_no_path(blend, two_hills, tmp_path):
     assert results["SMALLEST_DIFFERENCE"] == pytest.approx(smallest)
 
 
+def test_layers_of_one_name_are_numbered_and_can_be_named(blend, two_hills, tmp_path):
+    values, layers = two_hills
+    (tmp_path / "other").mkdir()
+    same = save_raster(tmp_path / "other" / "falls.tif", values[1], LEFT, TOP, 100)
+    results, _ = blend([layers[0], same])
+    legend = Path(results["LEGEND"]).read_text(encoding="utf-8")
+    assert ">falls (1)<" in legend and ">falls (2)<" in legend
+    results, _ = blend([layers[0], same], NAMES="Falls in winter; Falls in summer")
+    legend = Path(results["LEGEND"]).read_text(encoding="utf-8")
+    assert ">Falls in winter<" in legend and ">Falls in summer<" in legend
+
+
 def test_own_inks_that_look_alike_raise_a_warning_in_words(blend, two_hills):
     _, watcher = blend(two_hills[1], INKS="#2277cc #2379cc")
     assert any("cannot be told apart" in words for words in watcher.warnings)
