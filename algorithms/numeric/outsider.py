@@ -69,6 +69,17 @@ class Targets:
     upper: np.ndarray
     sum_of: np.ndarray
 
+    def only_sums(self):
+        """The targets that are sums of the table, without pieces of them."""
+        kept = np.flatnonzero(self.sum_of >= 0)
+        return Targets(
+            self.members[kept],
+            self.parts[kept],
+            self.lower[kept],
+            self.upper[kept],
+            self.sum_of[kept],
+        )
+
     def active(self, published):
         """Targets that nobody may work out while these sums are published."""
         return (self.sum_of < 0) | ~published[self.sum_of]

@@ -204,8 +204,10 @@ def release(records, q, r, region_count, plan, progress=silent, apart=None):
     published, complementary = ~unsafe, np.zeros(len(unsafe), bool)
     if (plan.region_totals or plan.grand_total) and (unsafe.any() or not rounded):
         fixed = np.arange(len(unsafe)) >= (len(table.cells) if plan.totals_stand else len(unsafe))
+        # rounding hides the pieces that a border cuts off; see _totals_to_leave_out
+        targets = table.targets.only_sums() if rounded else table.targets
         withheld = complementary_withholding(
-            table.sums, table.targets, unsafe, table.records.astype(float), fixed, rng,
+            table.sums, targets, unsafe, table.records.astype(float), fixed, rng,
             part(progress, 0.0, 0.9),
         )  # fmt: skip
         published, complementary = withheld.published, withheld.complementary
@@ -329,9 +331,11 @@ def _totals_to_leave_out(table, rounded, published, plan, progress):
     for number, one in enumerate(rounded):
         lower, upper = rounding_bounds(one, plan.base)
         lower, upper = np.where(published, lower, 0.0), np.where(published, upper, np.inf)
-        whole = targets.parts.all(axis=1) | targets.parts[:, number]
-        unsafe = np.where(targets.sum_of < 0, True, table.unsafe[targets.sum_of])
-        which = np.flatnonzero(whole & unsafe & ~totals[targets.sum_of])
+        # the sum of two parts is no narrower than they are
+        own_part = targets.parts[:, number] & (targets.parts.sum(1) == 1)
+        piece = targets.sum_of < 0
+        cell = ~piece & table.unsafe[targets.sum_of] & ~totals[targets.sum_of]
+        which = np.flatnonzero(own_part & (piece | cell))
         if not len(which):
             continue
         own = targets.sum_of[which]

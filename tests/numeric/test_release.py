@@ -117,6 +117,13 @@ def rounded_case(made, count, records, base, region_totals, grand_total):
     return attacker.Case(np.zeros(len(pieces)), np.full(len(pieces), far), sums), pieces
 
 
+def few_pieces(records, pieces):
+    """Pieces, cut off a hexagon by a border, that hold few records."""
+    own = (records.cells[:, None] == pieces[:, 0]) & (records.regions[:, None] == pieces[:, 1])
+    cut = np.bincount(pieces[:, 0])[pieces[:, 0]] > 1
+    return np.flatnonzero(cut & (own.sum(0) < LEAST))
+
+
 @pytest.mark.parametrize("method", ["round", "controlled"])
 def test_no_unsafe_cell_is_placed_within_its_range_by_rounded_figures(method):
     cases, cells_of, shown = [], [], []
@@ -130,6 +137,7 @@ def test_no_unsafe_cell_is_placed_within_its_range_by_rounded_figures(method):
         cases.append(case)
         cells_of.append(
             [np.flatnonzero(pieces[:, 0] == c) for c in np.flatnonzero((true > 0) & (true < LEAST))]
+            + [np.array([place]) for place in few_pieces(records, pieces)]
         )
         shown.append(np.isfinite(made.region_values).sum())
     checked = 0
