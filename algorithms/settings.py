@@ -136,6 +136,8 @@ class Settings:
         value = self.parameters.get(name, definition.defaultValue())
         if value is None or value == "":
             return tr("not set")
+        if name == "SEED" and self.algorithm.GROUP == "release":
+            return tr("given; kept off this page, because it would undo the protection")
         kind = definition.type()
         if kind in ("source", "vector", "raster", "layer"):
             return self._layer_name(value)

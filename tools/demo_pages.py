@@ -118,6 +118,11 @@ def _project(folder, layers):
 def _maps(folder, project, layers):
     """Draw the map sheets; returns their paths by name."""
     sheets = {
+        "district": (
+            "The invented district of Ostermoor",
+            ["falls", "outlines", "streets", "land cover"],
+            [],
+        ),
         "wards": ("Falls per 1000 residents by official care ward", ["wards"], []),
         "density": ("Where falls happen: adaptive density", ["outlines", "density"], ["streets"]),
         "ratio": (

@@ -5,7 +5,6 @@ to choose between them. Pictures of the practice district come from plugin/help/
 """
 
 import html
-import sys
 from pathlib import Path
 
 ROOT = Path(__file__).resolve().parent.parent
@@ -118,23 +117,15 @@ def pages(algorithms, questions):
 
 
 def main():
-    sys.path.insert(0, str(ROOT / "tests"))
-    from qgis.core import QgsApplication
+    from headless import Host
 
-    application = QgsApplication([], False)
-    application.initQgis()
-    import conftest
-
-    conftest.import_checkout()
+    host = Host()
     from steadfield.algorithms.base import QUESTIONS
-    from steadfield.plugin.provider import Provider
 
-    provider = Provider()
-    QgsApplication.processingRegistry().addProvider(provider)
     HELP.mkdir(exist_ok=True)
-    for name, text in pages(provider.algorithms(), QUESTIONS).items():
+    for name, text in pages(host.provider.algorithms(), QUESTIONS).items():
         (HELP / name).write_text(text, encoding="utf-8")
-    application.exitQgis()
+    host.leave()
 
 
 if __name__ == "__main__":

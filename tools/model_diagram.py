@@ -15,7 +15,7 @@ from qgis.PyQt.QtCore import QPointF, QSizeF
 GROUP = "Ready models"
 COLUMN, ROW = 270, 110
 BOX = QSizeF(230, 34)
-NOTE = QSizeF(230, 84)
+NOTE = QSizeF(230, 56)
 
 
 def given(name):
@@ -72,7 +72,8 @@ class Diagram:
         title : str
         place : (float, float)
         inputs : dict
-            Parameter: `given`, `result`, `worked_out`, a list of these, or a plain value.
+            Parameter: `given`, `result`, `worked_out`, a list of these, or a plain value. What
+            is not named here is written down as it stands by default.
         outputs : sequence of (str, str, (float, float), str)
             What the model hands out: the algorithm's output, a title, a place, and help.
         note : str
@@ -88,7 +89,7 @@ class Diagram:
         if "branches" in more:
             conditions = [{"name": key, "expression": words} for key, words in more["branches"]]
             child.setConfiguration({"conditions": conditions})
-        for parameter, value in inputs.items():
+        for parameter, value in {**_defaults(child.algorithm()), **inputs}.items():
             child.addParameterSources(parameter, _sources(value))
         child.setDependencies(
             [QgsProcessingModelChildDependency(*other) for other in more.get("after", ())]
@@ -115,6 +116,18 @@ class Diagram:
         self.model.setParameterOrder(self._order)
         self.model.updateDestinationParameters()
         return self.model
+
+
+def _defaults(algorithm):
+    """Defaults of the parameters that an algorithm cannot do without."""
+    optional = QgsProcessingParameterDefinition.Flag.FlagOptional
+    return {
+        definition.name(): definition.defaultValue()
+        for definition in algorithm.parameterDefinitions()
+        if not definition.isDestination()
+        and not definition.flags() & optional
+        and definition.defaultValue() is not None
+    }
 
 
 def _sources(value):
