@@ -126,6 +126,7 @@ def examine(job):
         generator,
         job.real("LEAST_TOTAL"),
         job.real("BALANCE_TOLERANCE"),
+        part(job.progress, 0.1, 0.12),
     )
     replicates = job.whole("REPLICATES")
     if BYTES_A_ZONING * replicates * len(plan) > MOST_MEMORY:

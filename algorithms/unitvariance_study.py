@@ -95,8 +95,7 @@ def examine(job):
     say_above_totals(job, setting)
     builder = job.choice("BUILDER", BUILDERS)
     settings = (generator, job.real("LEAST_TOTAL"), job.real("BALANCE_TOLERANCE"))
-    plan = zones.recipes(setting, builder, counts, *settings)
-    job.progress(0.13)
+    plan = zones.recipes(setting, builder, counts, *settings, part(job.progress, 0.1, 0.14))
     reference = None
     if official is not None and len(names) not in counts:
         reference = reference_recipe(job, setting, builder, len(names), settings)

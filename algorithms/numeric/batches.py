@@ -44,7 +44,7 @@ class Batch:
         return np.random.default_rng(self.seed)
 
 
-def plan_batches(units, replicates, seed):
+def plan_batches(units, replicates, seed, efforts=None):
     """Cut the replicates of every scale into batches of even work.
 
     Parameters
@@ -54,14 +54,17 @@ def plan_batches(units, replicates, seed):
         Zonings of each scale.
     seed : numpy.random.SeedSequence
         Batch seeds are spawned from it by index.
+    efforts : sequence of float, optional
+        Work of a zoning of each scale beside that of a grown one; 1 by default.
 
     Returns
     -------
     list of Batch
     """
-    size = max(1, min(LARGEST_BATCH, UNITS_A_BATCH // units))
     sizes = []
     for scale, many in enumerate(replicates):
+        effort = 1 if efforts is None else efforts[scale]
+        size = int(max(1, min(LARGEST_BATCH, UNITS_A_BATCH // (units * effort))))
         pieces = math.ceil(many / size)
         sizes += [(scale, int(part)) for part in np.diff(np.arange(pieces + 1) * many // pieces)]
     seeds = seed.spawn(len(sizes))

@@ -15,7 +15,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from .batches import plan_batches, run_batches
-from .builders import build
+from .builders import EFFORTS, build
 from .contiguity import Contiguity
 from .errors import InputError
 from .progress import silent
@@ -205,7 +205,8 @@ def simulate_correlation(relation, recipes, replicates, seed, executor=None, pro
     if not replicates >= 2:
         raise InputError(f"REPLICATES: two zonings a scale are the least; found {replicates}.")
     root = seed if isinstance(seed, np.random.SeedSequence) else np.random.SeedSequence(seed)
-    batches = plan_batches(relation.graph.units, [replicates] * len(recipes), root)
+    efforts = [EFFORTS[recipe.builder] for recipe in recipes]
+    batches = plan_batches(relation.graph.units, [replicates] * len(recipes), root, efforts)
     work = CorrelationWork(relation, tuple(recipes))
     found = [np.empty((replicates, len(MEASURES))) for _ in recipes]
     filled = [0] * len(recipes)

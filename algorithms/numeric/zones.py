@@ -12,7 +12,7 @@ import numpy as np
 
 from .allocation import Allocation, best_possible, held_out_events, held_out_events_by_value
 from .batches import plan_batches, run_batches
-from .builders import TREE_CUT, Recipe, build, least_total_for
+from .builders import EFFORTS, TREE_CUT, Recipe, build, least_total_for
 from .errors import InputError
 from .growth import check_zone_count
 from .progress import part, silent
@@ -25,10 +25,13 @@ MOST_BINS = 200
 BINNED_VALUES = 12_000_000  # bins times units that are held
 RANK_BINS = 50
 MISSING = 255
-PILOT_VALUES = 300_000
+PILOT_VALUES = 100_000
+PILOT_ZONINGS = 20
 
 
-def recipes(problem, builder, zone_counts, generator, least_total=None, tolerance=0.1):
+def recipes(
+    problem, builder, zone_counts, generator, least_total=None, tolerance=0.1, progress=silent
+):
     """One recipe for each number of zones, checked.
 
     Parameters
@@ -42,6 +45,7 @@ def recipes(problem, builder, zone_counts, generator, least_total=None, toleranc
         Tree-cut only: no zone holds less. A number of zones too large for it comes out smaller.
     tolerance : float
         Balanced only.
+    progress : callable
 
     Returns
     -------
@@ -63,11 +67,13 @@ def recipes(problem, builder, zone_counts, generator, least_total=None, toleranc
     if least_total is not None:
         check_least_total(graph, totals, least_total)
     made = []
-    for zone_count in sorted({int(count) for count in zone_counts}):
+    wanted = sorted({int(count) for count in zone_counts})
+    for place, zone_count in enumerate(wanted):
         recipe = Recipe(builder, zone_count, tolerance=tolerance)
         check_zone_count(graph, zone_count)
         if builder == TREE_CUT:
-            found = least_total_for(graph, totals, zone_count, generator)
+            stretch = part(progress, place / len(wanted), (place + 1) / len(wanted))
+            found = least_total_for(graph, totals, zone_count, generator, stretch)
             recipe = Recipe(builder, zone_count, max(found, least_total or 0.0))
         made.append(recipe)
     return tuple(made)
@@ -185,10 +191,12 @@ def simulate(
         raise InputError(f"REPLICATES: two zonings a scale are the least; found {replicates}.")
     root = seed if isinstance(seed, np.random.SeedSequence) else np.random.SeedSequence(seed)
     pilot_seed, batch_seed = root.spawn(2)
-    edges = _value_edges(problem, recipes, np.random.default_rng(pilot_seed))
+    generator = np.random.default_rng(pilot_seed)
+    edges = _value_edges(problem, recipes, generator, part(progress, 0.0, 0.02))
     every = [*recipes] if reference is None else [*recipes, reference]
     work = Work(problem, tuple(every), edges, names.index(statistic))
-    batches = plan_batches(problem.graph.units, [replicates] * len(every), batch_seed)
+    efforts = [EFFORTS[recipe.builder] for recipe in every]
+    batches = plan_batches(problem.graph.units, [replicates] * len(every), batch_seed, efforts)
     collected = _Collected(work, len(recipes))
     results = run_batches(simulate_batch, work, batches, executor, part(progress, 0.02, 1.0))
     for result in results:
@@ -294,17 +302,19 @@ def bytes_for(units, replicates, scales):
     return float(8 * units * (bins + 12 * (scales + 1)) + rows + 400e6)
 
 
-def _value_edges(problem, recipes, generator):
+def _value_edges(problem, recipes, generator, progress):
     """Edges of the quantile bins: fine where a pilot of zonings puts many values.
 
     No zone value lies outside the values of the units (a mediant lies between its parts).
     """
     used = problem.totals > 0
     own = problem.counts[used] / problem.totals[used]
-    many = max(2, PILOT_VALUES // problem.graph.units // len(recipes))
     pilot = []
-    for recipe in recipes:
-        labels = build(problem.graph, problem.totals, recipe, min(many, 40), generator)
+    for place, recipe in enumerate(recipes):
+        progress(place / len(recipes))
+        many = PILOT_VALUES // (problem.graph.units * EFFORTS[recipe.builder])
+        many = int(np.clip(many, 1, PILOT_ZONINGS))
+        labels = build(problem.graph, problem.totals, recipe, many, generator)
         values = describe(problem, labels).values
         on_units = np.take_along_axis(values, labels.astype(np.int64), axis=1)
         pilot.append(on_units[~np.isnan(on_units)])

@@ -16,7 +16,7 @@ import shapely
 sys.path.insert(0, str(Path(__file__).resolve().parent.parent))
 import conftest  # noqa: F401
 from steadfield.algorithms.numeric import workers
-from steadfield.algorithms.numeric.builders import Recipe
+from steadfield.algorithms.numeric.builders import Recipe, build
 from steadfield.algorithms.numeric.contiguity import contiguity
 from steadfield.algorithms.numeric.correlation import relation, simulate_correlation
 from steadfield.algorithms.numeric.growth import grown
@@ -129,13 +129,13 @@ def memory():
 
 
 def cost():
-    """Cost of a zoning against units, for each builder, and of replicates; drawn as a picture."""
+    """Cost of making a zoning against units, for each builder, and of replicates; a picture."""
     from matplotlib.figure import Figure
 
     figure = Figure(figsize=(9, 4), layout="constrained")
     left, right = figure.subplots(1, 2)
-    sizes = (100, 300, 1000, 3000, 10_000, 30_000)
-    for builder in ("grown", "tree-cut", "balanced"):
+    every = (100, 300, 1000, 3000, 10_000, 30_000)
+    for builder, sizes in (("grown", every), ("tree-cut", every), ("balanced", every[:-1])):
         times = []
         for units in sizes:
             graph, counts, totals, generator = world(units)
@@ -143,7 +143,7 @@ def cost():
             plan = recipes(made, builder, [max(5, units // 50)], generator, tolerance=0.3)
             many = max(3, min(500, 100_000 // units))
             start = time.process_time()
-            simulate(made, plan, many, 1)
+            build(graph, totals, plan[0], many, generator)
             times.append((time.process_time() - start) / many * 1e3)
             print(f"{builder}, {units} units: {times[-1]:.3f} ms a zoning")
         left.loglog(sizes, times, marker="o", label=builder)

@@ -331,7 +331,8 @@ def test_separate_parts_get_balanced_zones_by_their_total():
         (lambda g, r: Recipe("woven", 3), "woven"),
     ],
 )
-def test_zones_that_cannot_be_made_are_refused_in_words(make, words):
+def test_zones_that_cannot_be_made_are_refused_in_words(make, words, monkeypatch):
+    monkeypatch.setattr("steadfield.algorithms.numeric.treezones.FRESH_STARTS", 3)
     with pytest.raises(InputError, match=words):
         make(board(5, 6), np.random.default_rng(0))
 

@@ -4,7 +4,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from steadfield.algorithms.numeric import allocation
 from steadfield.algorithms.numeric.batches import plan_batches
-from steadfield.algorithms.numeric.builders import build
+from steadfield.algorithms.numeric.builders import EFFORTS, build
 from steadfield.algorithms.numeric.contiguity import from_pairs
 from steadfield.algorithms.numeric.errors import InputError
 from steadfield.algorithms.numeric.scenarios import (
@@ -38,7 +38,8 @@ def a_problem(rows=6, columns=7, seed=1, **settings):
 def stored_zonings(made, plan, replicates, seed):
     """Every label of a simulation, by the same batches, kept as the simulation never does."""
     batch_seed = np.random.SeedSequence(seed).spawn(2)[1]
-    batches = plan_batches(made.graph.units, [replicates] * len(plan), batch_seed)
+    efforts = [EFFORTS[recipe.builder] for recipe in plan]
+    batches = plan_batches(made.graph.units, [replicates] * len(plan), batch_seed, efforts)
     labels = [[] for _ in plan]
     for batch in batches:
         labels[batch.scale] += list(
