@@ -74,15 +74,10 @@ class AdaptiveDensity(SteadfieldAlgorithm):
 
     def _add_smoothing(self):
         self.add_length(
-            "CELL_SIZE",
-            tr("Cell size"),
-            tr("Side of a pixel. 0: half of the narrowest bandwidth, at most 4 million pixels."),
-        )
-        self.add_length(
             "BANDWIDTH",
             tr("Bandwidth"),
             tr(
-                "Standard deviation of the kernel at a record of middling density. 0: by the "
+                "Standard deviation of the kernel at a record of middling density. Empty: by the "
                 "normal-scale rule; see Bandwidth advice for others."
             ),
         )
@@ -94,13 +89,27 @@ class AdaptiveDensity(SteadfieldAlgorithm):
             least=0.0,
             most=1.0,
         )
-        self.add_choice("KERNEL", tr("Kernel"), KERNELS, tr("Both smooth alike at one bandwidth."))
+        self.add_length(
+            "CELL_SIZE",
+            tr("Cell size"),
+            tr(
+                "Side of a pixel. Empty: half of the narrowest bandwidth, at most 4 million pixels."
+            ),
+        )
+        self.add_choice(
+            "KERNEL",
+            tr("Kernel"),
+            KERNELS,
+            tr("Both smooth alike at one bandwidth."),
+            advanced=True,
+        )
         self.add_choice(
             "EDGE",
             tr("Edge correction"),
             EDGES,
             tr("Makes up for what kernels lose beyond the boundary; needs a boundary."),
             default=list(EDGES).index("place"),
+            advanced=True,
         )
         self.add_number(
             "LEAST_RECORDS",
@@ -109,6 +118,7 @@ class AdaptiveDensity(SteadfieldAlgorithm):
             default=0,
             least=0,
             whole=True,
+            advanced=True,
         )
         self.add_number(
             "TRIM",

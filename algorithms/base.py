@@ -30,6 +30,9 @@ from .numeric.errors import CancelledError, InputError
 
 ROOT = Path(__file__).resolve().parent.parent
 
+# a dialog shows 0.5 rather than 0.500000
+SHORT_DECIMALS = {"widget_wrapper": {"decimals": 3}}
+
 GROUPS = {
     "records": tr("Records"),
     "density": tr("Density"),
@@ -178,7 +181,7 @@ class SteadfieldAlgorithm(QgsProcessingAlgorithm):
         self.add_length(
             "CELL_SIZE",
             tr("Cell size"),
-            tr("Side of a pixel; 0: as in the raster whose grid is followed."),
+            tr("Side of a pixel. Empty: as in the raster whose grid is followed."),
             advanced=True,
         )
         self.add_number(
@@ -201,10 +204,11 @@ class SteadfieldAlgorithm(QgsProcessingAlgorithm):
             advanced,
         )
 
-    def add_length(self, name, label, help, default=0.0, advanced=False, least=0.0):
-        """Add a length in metres; by convention 0 means "choose for me"."""
-        parameter = QgsProcessingParameterDistance(name, label, default, "", False, least)
+    def add_length(self, name, label, help, default=None, advanced=False, least=0.0):
+        """Add a length in metres; without a default, empty and 0 both mean "choose for me"."""
+        parameter = QgsProcessingParameterDistance(name, label, default, "", default is None, least)
         parameter.setDefaultUnit(METRES)
+        parameter.setMetadata(SHORT_DECIMALS)
         self.add(parameter, help, advanced)
 
     def add_number(
@@ -216,6 +220,8 @@ class SteadfieldAlgorithm(QgsProcessingAlgorithm):
         parameter = QgsProcessingParameterNumber(
             name, label, kinds.Integer if whole else kinds.Double, default, optional
         )
+        if default is not None:
+            parameter.setMetadata(SHORT_DECIMALS)
         if least is not None:
             parameter.setMinimum(least)
         if most is not None:
@@ -271,11 +277,11 @@ class SteadfieldAlgorithm(QgsProcessingAlgorithm):
             QgsProcessingParameterRasterDestination(name, label, None, optional, not optional), help
         )
 
-    def add_polygon_output(self, name, label, help="", optional=False):
-        """Add a polygon layer output; an optional one is off until asked for."""
+    def add_polygon_output(self, name, label, help="", optional=False, offered=False):
+        """Add a polygon layer output; an optional one is off unless the dialog offers it."""
+        made = offered or not optional
         self.add(
-            QgsProcessingParameterFeatureSink(name, label, POLYGONS, None, optional, not optional),
-            help,
+            QgsProcessingParameterFeatureSink(name, label, POLYGONS, None, optional, made), help
         )
 
     def add_table(self, name, label, help="", optional=False):

@@ -25,11 +25,9 @@ class CellSize(SteadfieldAlgorithm):
     TAGS = (tr("cell size"), tr("hexagon"), tr("grid"), tr("histogram"), tr("bin width"))
     HELP = tr(
         "Counts the records in cells of many sizes, each shifted and turned at random, and advises "
-        "a "
-        "size: the one that two published criteria find closest to the true density, or the next "
+        "a size: the one that two published criteria find closest to the true density, or the next "
         "larger one at which few enough records stand in cells that hold too few. Says when the "
-        "criteria "
-        "disagree."
+        "criteria disagree."
     )
 
     def define(self):
@@ -41,8 +39,7 @@ class CellSize(SteadfieldAlgorithm):
             tr("Cell sizes to try (m)"),
             tr(
                 "Distances between the centres of neighbouring cells, apart by commas. Empty: 14 "
-                "sizes "
-                "around the reference rule of Scott (1992)."
+                "sizes around the reference rule of Scott (1992)."
             ),
         )
         self.add_choice("SHAPE", tr("Cells"), SHAPES, tr("Shape of the cells."))
@@ -149,8 +146,7 @@ class CellSize(SteadfieldAlgorithm):
             job.warn(
                 tr(
                     "{} of the records share their spot with another. Both criteria take that for "
-                    "fine "
-                    "detail and favour small cells; lean on the least count instead."
+                    "fine detail and favour small cells; lean on the least count instead."
                 ).format(percent(stacked, 0))
             )
         return x, y, weight, boundary

@@ -94,8 +94,7 @@ def reason_words(found, advice, metres, most_below):
         words = [
             tr(
                 "The two criteria disagree: {} by cross-validation, {} by mean and variance. The "
-                "larger "
-                "was taken; look at the map with both before it is used."
+                "larger was taken; look at the map with both before it is used."
             ).format(first, second)
         ]
     wanted = max(advice.by_cross_validation, advice.by_mean_variance)
@@ -122,8 +121,7 @@ def reason_words(found, advice, metres, most_below):
         words.append(
             tr(
                 "A criterion is best at the end of the sizes tried, so a better one may lie "
-                "beyond: "
-                "try a wider range."
+                "beyond: try a wider range."
             )
         )
     return words
@@ -195,18 +193,16 @@ def method_words(records):
     return [
         tr(
             "{} records were counted in every tiling, shifted and turned at random. "
-            "Cross-validation is "
-            "the score of Rudemo (1982), Scand. J. Stat. 9:65, for the density of the records; the "
-            "cost by mean and variance is (2 mean − variance) / area², Shimazaki & Shinomoto "
-            "(2007), "
-            "Neural Comput. 19:1503, over the cells whose centre lies in the study area. Both "
-            "estimate, up to a constant, the squared error of the cell counts taken as a density."
+            "Cross-validation is the score of Rudemo (1982), Scand. J. Stat. 9:65, for the density "
+            "of the records; the cost by mean and variance is (2 mean − variance) / area², "
+            "Shimazaki & Shinomoto (2007), Neural Comput. 19:1503, over the cells whose centre "
+            "lies in the study area. Both estimate, up to a constant, the squared error of the "
+            "cell counts taken as a density."
         ).format(number(records)),
         tr(
             "The relative counting error of a cell is the root of the sum of squared weights over "
-            "the "
-            "sum of weights, 1 / √n without weights. The tolerated share is common "
-            "practice, no source."
+            "the sum of weights, 1 / √n without weights. The tolerated share is common practice, "
+            "no source."
         ),
     ]
 
@@ -216,8 +212,7 @@ def caution_words():
     return [
         tr(
             "The advice balances noise against blur over the whole area; a dense centre bears "
-            "smaller "
-            "cells than the outskirts."
+            "smaller cells than the outskirts."
         ),
         tr(
             "A size that suits counting is not thereby safe to publish: the group Safe release "

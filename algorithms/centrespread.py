@@ -70,9 +70,8 @@ class CentreSpread(SteadfieldAlgorithm):
     QUESTION = "real"
     HELP = tr(
         "Finds for every group of records the mean centre, the geometric median (the place with "
-        "the "
-        "least total distance), the standard distance and the standard deviational ellipse, and "
-        "how sure the centre is: an ellipse that holds the true centre with the chosen "
+        "the least total distance), the standard distance and the standard deviational ellipse, "
+        "and how sure the centre is: an ellipse that holds the true centre with the chosen "
         "confidence. With an order, such as months, the centres form a path, and for every step "
         "the chance is given that the centres lie so far apart though nothing moved."
     )

@@ -49,8 +49,7 @@ def write_page(job, groups, steps, fields, records):
         tr(
             "Records in grey, mean centres as dots, geometric medians as crosses, the ellipse of "
             "each group's spread in blue and of the confidence in its centre in orange, the path "
-            "in "
-            "order. Kilometres, north is up."
+            "in order. Kilometres, north is up."
         ),
         size=(8.0, 6.0),
     )
@@ -195,9 +194,9 @@ def _method(job):
         tr(
             "Standard deviational ellipse (Lefever 1926; Yuill 1971): half axes are {} times the "
             "standard deviations along the principal axes of the weighted covariance matrix, "
-            "divided "
-            "by the total weight. Of a bivariate normal cloud it holds {} (Wang, Shi & Miao 2015). "
-            "Standard distance (Bachi 1963): root mean square distance from the mean centre."
+            "divided by the total weight. Of a bivariate normal cloud it holds {} (Wang, Shi & "
+            "Miao 2015). Standard distance (Bachi 1963): root mean square distance from the mean "
+            "centre."
         ).format(number(deviations), percent(1.0 - math.exp(-0.5 * deviations**2))),
         tr(
             "Geometric median: Weiszfeld's iteration as completed by Vardi & Zhang (2000). "
@@ -206,8 +205,8 @@ def _method(job):
         ),
         tr(
             "Chance of a step: squared difference of the centres over the sum of their "
-            "covariances, "
-            "taken as chi-square with two degrees of freedom (Mardia, Kent & Bibby 1979)."
+            "covariances, taken as chi-square with two degrees of freedom (Mardia, Kent & Bibby "
+            "1979)."
         ),
     ]
 
@@ -220,8 +219,7 @@ def _cautions(groups, steps):
         ),
         tr(
             "A centre follows where people live. Compare it with the centre of the background "
-            "before "
-            "calling it a shift in risk. A centre may lie where nobody is."
+            "before calling it a shift in risk. A centre may lie where nobody is."
         ),
     ]
     if min(group.records for group in groups) < SMALL:

@@ -46,13 +46,13 @@ class DensityRatio(SteadfieldAlgorithm):
 
     def define(self):
         self.add_points("RECORDS", tr("Records"), tr("What is to be compared: cases, events."))
+        weight = tr("Whole numbers count people or events on a place. Empty: each point is one.")
+        self.add_field("WEIGHT", tr("Weight of the records"), "RECORDS", weight)
         self.add_points(
             "BACKGROUND",
             tr("Background"),
             tr("What records come from: residents, or centres of base units with their number."),
         )
-        weight = tr("Whole numbers count people or events on a place. Empty: each point is one.")
-        self.add_field("WEIGHT", tr("Weight of the records"), "RECORDS", weight)
         self.add_field("BACKGROUND_WEIGHT", tr("Weight of the background"), "BACKGROUND", weight)
         self.add_boundary()
         self._add_smoothing()
@@ -62,17 +62,12 @@ class DensityRatio(SteadfieldAlgorithm):
 
     def _add_smoothing(self):
         self.add_length(
-            "CELL_SIZE",
-            tr("Cell size"),
-            tr("Side of a pixel. 0: about a sixth of the bandwidth, some 250,000 pixels at most."),
-        )
-        self.add_length(
             "BANDWIDTH",
             tr("Bandwidth"),
             tr(
                 "Standard deviation of the kernel at a point of middling density, for records and "
-                "background alike. 0: the normal-scale rule with a size that follows the smaller "
-                "of the two."
+                "background alike. Empty: the normal-scale rule with a size that follows the "
+                "smaller of the two."
             ),
         )
         self.add_number(
@@ -82,6 +77,14 @@ class DensityRatio(SteadfieldAlgorithm):
             default=0.5,
             least=0.0,
             most=1.0,
+        )
+        self.add_length(
+            "CELL_SIZE",
+            tr("Cell size"),
+            tr(
+                "Side of a pixel. Empty: about a sixth of the bandwidth, some 250,000 pixels at "
+                "most."
+            ),
         )
         self.add_number(
             "TRIM",
@@ -109,6 +112,7 @@ class DensityRatio(SteadfieldAlgorithm):
             tr("Effective background points that must stand behind a pixel that gets a value."),
             default=10.0,
             least=1.0,
+            advanced=True,
         )
         self.add_number(
             "RELABELLINGS",
@@ -146,6 +150,7 @@ class DensityRatio(SteadfieldAlgorithm):
             tr("Areas beyond tolerance"),
             tr("Where the p-value is at most a level; records, expected records and ratio inside."),
             optional=True,
+            offered=True,
         )
         self.add_report()
         self.add_numbers(

@@ -61,9 +61,8 @@ class GridVariance(SteadfieldAlgorithm):
             tr("Zoning variance"),
             tr(
                 "Bands: mean, sd_scale, sd_zoning, sd_counting (unit of the value), p_above (share "
-                "of "
-                "zonings above the threshold), verdict (1 holds above, -1 holds below, 0 neither), "
-                "evidence (excess over the threshold in units of counting noise)."
+                "of zonings above the threshold), verdict (1 holds above, -1 holds below, 0 "
+                "neither), evidence (excess over the threshold in units of counting noise)."
             ),
         )
         self.add_table(
@@ -88,7 +87,7 @@ class GridVariance(SteadfieldAlgorithm):
         )
         self.add_field(
             "COUNT",
-            tr("Count"),
+            tr("Count of the records"),
             "RECORDS",
             tr("Number of records at each point or in each polygon. Empty: each point is one."),
         )
@@ -98,13 +97,12 @@ class GridVariance(SteadfieldAlgorithm):
             ),
             tr(
                 "What records are compared with, such as residents: points, or polygons with a "
-                "total; "
-                "the same layer as the records where one layer carries both. Empty: area."
+                "total; the same layer as the records where one layer carries both. Empty: area."
             ),
         )
         self.add_field(
             "TOTAL",
-            tr("Total"),
+            tr("Total of the background"),
             "BACKGROUND",
             tr(
                 "Number at each point or in each polygon of the background. Empty: each point is "
@@ -128,8 +126,7 @@ class GridVariance(SteadfieldAlgorithm):
             tr("Cell sizes (m)"),
             tr(
                 "Distances between the centres of neighbouring cells, apart by commas. Empty: six "
-                "sizes, "
-                "from about twenty records a cell up to a thirtieth of the area."
+                "sizes, from about twenty records a cell up to a thirtieth of the area."
             ),
         )
         self.add_choice("SHAPE", tr("Cells"), SHAPES, tr("Shape of the cells."))
@@ -147,6 +144,7 @@ class GridVariance(SteadfieldAlgorithm):
             tr("Turn the cells at random too"),
             tr("Otherwise they are only shifted."),
             default=True,
+            advanced=True,
         )
         self.add_number(
             "THRESHOLD",
@@ -185,7 +183,7 @@ class GridVariance(SteadfieldAlgorithm):
         self.add_length(
             "EVALUATION_CELL",
             tr("Side of an evaluated pixel"),
-            tr("Pixel of the result. 0: about 300 pixels along the longer side."),
+            tr("Pixel of the result. Empty: about 300 pixels along the longer side."),
             advanced=True,
         )
 

@@ -59,8 +59,7 @@ def write_page(algorithm, job, study, outcome, shape):
         ),
         tr(
             "Each zoning has one highest cell. The band holds nine of ten zonings of a size: all "
-            "of "
-            "them show the same records."
+            "of them show the same records."
         ),
     )
     report.plot(
@@ -68,9 +67,8 @@ def write_page(algorithm, job, study, outcome, shape):
         lambda figure: draw_sources(figure, typical_deviations(study, outcome), study.unit),
         tr(
             "Standard deviations at a typical place, averaged over the {}. The squares of grain "
-            "and "
-            "cut add up to all the movement over zonings. Small numbers stand beside them: what "
-            "chance would do to the value under one fixed zoning."
+            "and cut add up to all the movement over zonings. Small numbers stand beside them: "
+            "what chance would do to the value under one fixed zoning."
         ).format(total_words(study)),
         size=(8.0, 2.6),
     )
@@ -126,8 +124,7 @@ def answer_words(study, outcome):
     if above + below == 0:
         return tr(
             "No place stands above or below {} under nearly every zoning and beyond chance: what "
-            "the "
-            "map shows depends on how the cells are drawn, or on small numbers."
+            "the map shows depends on how the cells are drawn, or on small numbers."
         ).format(against)
     return tr(
         "{} of the {} lies in places that stand above {} however the cells are drawn, and {} in "
@@ -146,8 +143,7 @@ def movement_words(study, outcome):
     words = [
         tr(
             "The same records show a highest cell of {} or of {} {} (5 % and 95 % of {} zonings), "
-            "and "
-            "{} {} over the whole area."
+            "and {} {} over the whole area."
         ).format(
             number(low),
             number(high),
@@ -265,10 +261,8 @@ def method_words(job, study, shape):
     return [
         tr(
             "{}, {} zonings of each of {} sizes, {} at random over one cell. Every pixel of {} m "
-            "takes "
-            "the value of the cell that holds its centre; only running sums are kept (Welford "
-            "1962, "
-            "Technometrics 4:419; Chan, Golub & LeVeque 1983, Am. Stat. 37:242)."
+            "takes the value of the cell that holds its centre; only running sums are kept "
+            "(Welford 1962, Technometrics 4:419; Chan, Golub & LeVeque 1983, Am. Stat. 37:242)."
         ).format(
             shape,
             number(job.whole("REPLICATES")),
@@ -278,9 +272,8 @@ def method_words(job, study, shape):
         ),
         tr(
             "Movement is split by the law of total variance. {}: variance between sizes of the "
-            "mean "
-            "over zonings. {}: mean over sizes of the variance between zonings. Every size weighs "
-            "the same; a zoning that gives a place no value drops out."
+            "mean over zonings. {}: mean over sizes of the variance between zonings. Every size "
+            "weighs the same; a zoning that gives a place no value drops out."
         ).format(_sentence(source["scale"]), _sentence(source["zoning"])),
         tr(
             "Counting noise is v (1 − v) / N for a share and v / N for a rate or a density, v the "
@@ -293,14 +286,12 @@ def method_words(job, study, shape):
             "condition is needed because one set of records has chance clusters that show under "
             "nearly every cut; with it, at most about 5 % of places whose true value equals the "
             "threshold are called settled. A place without a value in more than half of the "
-            "zonings "
-            "is not settled."
+            "zonings is not settled."
         ),
         tr(
             "Averaging squares of one size over shifts is the averaged shifted histogram (Scott "
-            "1985, "
-            "Ann. Stat. 13:1024); averaging over zonings as an estimator: overlay aggregation "
-            "(Tuson et al. 2020, Int. J. Health Geogr. 19:42)."
+            "1985, Ann. Stat. 13:1024); averaging over zonings as an estimator: overlay "
+            "aggregation (Tuson et al. 2020, Int. J. Health Geogr. 19:42)."
         ),
     ]
 
@@ -314,8 +305,7 @@ def caution_words(study):
         ),
         tr(
             "Values of small cells may point to single persons. Neither this page nor the raster "
-            "is "
-            "made for release; use the tools of the group Safe release for what is published."
+            "is made for release; use the tools of the group Safe release for what is published."
         ),
     ]
     if study.dense:

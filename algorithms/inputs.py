@@ -191,7 +191,7 @@ class Inputs(Settings):
             followed = self.algorithm.parameterAsRasterLayer(self.parameters, "GRID", self.context)
         transform_context = self.context.transformContext()
         self._working, grid = alignment.common_grid(
-            followed, transform_context, self.real("CELL_SIZE")
+            followed, transform_context, self.metres("CELL_SIZE")
         )
         alignment.check_overlap(chosen, grid, self._working.crs, transform_context)
         self.inform(

@@ -57,7 +57,7 @@ class RawInk(SteadfieldAlgorithm):
         self.add_length(
             "CELL_SIZE",
             tr("Cell size"),
-            tr("Side of a pixel; 0: about an 800th of the longer side of the extent."),
+            tr("Side of a pixel. Empty: about an 800th of the longer side of the extent."),
         )
         self.add_number(
             "INK_PER_FEATURE",
@@ -192,7 +192,7 @@ def read_features(job, source, name, progress):
 
 def picture_grid(job, features):
     """The grid of the picture: the raster's to follow, or one that covers all features."""
-    cell = job.real("CELL_SIZE")
+    cell = job.metres("CELL_SIZE")
     if job.given("GRID"):
         followed = job.algorithm.parameterAsRasterLayer(job.parameters, "GRID", job.context)
         _, grid = alignment.common_grid(followed, job.context.transformContext(), cell)

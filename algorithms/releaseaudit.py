@@ -114,8 +114,8 @@ class ReleaseAudit(SteadfieldAlgorithm):
             "TOLERANCE",
             tr("Sliver tolerance"),
             tr(
-                "Pieces narrower than this count as drawing mismatch; 0: 0.2 % of the typical zone "
-                "width of the finest layer."
+                "Pieces narrower than this count as drawing mismatch. Empty: 0.2 % of the typical "
+                "zone width of the finest layer."
             ),
             advanced=True,
         )

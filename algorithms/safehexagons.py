@@ -94,14 +94,6 @@ class SafeHexagons(SteadfieldAlgorithm):
 
     def _add_records(self):
         self.add_points("RECORDS", tr("Records"), tr("One point for each confidential record."))
-        self.add_length(
-            "HEXAGON_SIZE",
-            tr("Hexagon size"),
-            tr(
-                "Distance between the centres of neighbouring hexagons. 0: a round size that holds "
-                "four times the least count on average."
-            ),
-        )
         self.add_field(
             "CONTRIBUTOR",
             tr("Contributor"),
@@ -156,6 +148,16 @@ class SafeHexagons(SteadfieldAlgorithm):
             tr("Then they cannot be withheld, and the run is refused where they give away."),
             advanced=True,
         )
+
+    def _add_rules(self):
+        self.add_length(
+            "HEXAGON_SIZE",
+            tr("Hexagon size"),
+            tr(
+                "Distance between the centres of neighbouring hexagons. Empty: a round size that "
+                "holds four times the least count on average."
+            ),
+        )
         self.add_choice(
             "ORIENTATION",
             tr("Orientation"),
@@ -163,8 +165,6 @@ class SafeHexagons(SteadfieldAlgorithm):
             tr("Which way a corner of the hexagons points."),
             advanced=True,
         )
-
-    def _add_rules(self):
         self.add_number(
             "LEAST_COUNT",
             tr("Least count"),
@@ -180,6 +180,7 @@ class SafeHexagons(SteadfieldAlgorithm):
             default=0,
             least=0,
             whole=True,
+            advanced=True,
         )
         self.add_number(
             "DOMINANCE_SHARE",
@@ -188,6 +189,7 @@ class SafeHexagons(SteadfieldAlgorithm):
             default=85.0,
             least=0.0,
             most=100.0,
+            advanced=True,
         )
         self.add_number(
             "P_PERCENT",
@@ -198,6 +200,7 @@ class SafeHexagons(SteadfieldAlgorithm):
             ),
             default=0.0,
             least=0.0,
+            advanced=True,
         )
         self.add_flag(
             "NONE_IS_GROUP",
@@ -229,7 +232,7 @@ class SafeHexagons(SteadfieldAlgorithm):
         self.add_number(
             "ROUNDING_BASE",
             tr("Rounding base"),
-            tr("Not below the least count. 0: the least count."),
+            tr("Of rounding only, not below the least count. 0: the least count."),
             default=0,
             least=0,
             whole=True,

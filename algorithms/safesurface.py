@@ -76,6 +76,7 @@ class SafeSurface(SteadfieldAlgorithm):
             tr("What a record contributes. Empty: 1 each."),
             advanced=True,
         )
+        self.add_boundary()
         self.add_number(
             "LEAST_COUNT",
             tr("Least count"),
@@ -85,19 +86,18 @@ class SafeSurface(SteadfieldAlgorithm):
             whole=True,
         )
         self.add_length(
-            "CELL_SIZE",
-            tr("Cell size"),
-            tr("Side of a pixel, at most the bandwidth. 0: a third of it."),
-        )
-        self.add_length(
             "BANDWIDTH",
             tr("Least bandwidth"),
             tr(
-                "No kernel is narrower; where records are few it is as wide as their group. 0: by "
-                "the normal-scale rule, rounded."
+                "No kernel is narrower; where records are few it is as wide as their group. Empty: "
+                "by the normal-scale rule, rounded."
             ),
         )
-        self.add_boundary()
+        self.add_length(
+            "CELL_SIZE",
+            tr("Cell size"),
+            tr("Side of a pixel, at most the bandwidth. Empty: a third of it."),
+        )
         self.add_working_crs()
         self.add_raster("DENSITY", tr("Density"), tr("Records (or weight) per km², for release."))
         self.add_report()

@@ -88,7 +88,11 @@ class Settings:
 
     def length(self, name):
         """A length in units of the working CRS; call after the first layer was read."""
-        return self.real(name) / self.working.metres
+        return self.metres(name) / self.working.metres
+
+    def metres(self, name):
+        """A length as it was given, in metres; 0 where it was left to the tool."""
+        return self.real(name) or 0.0
 
     def numbers(self, name):
         """Numbers from a text such as ``100, 200; 400``; empty list where none is given."""
@@ -133,12 +137,15 @@ class Settings:
     def _shown(self, definition):
         """A parameter's value for a reader, without any path."""
         name = definition.name()
+        kind = definition.type()
+        if kind == "distance":
+            length = self.metres(name)
+            return f"{length:g} m" if length else tr("chosen by the tool")
         value = self.parameters.get(name, definition.defaultValue())
         if value is None or value == "":
             return tr("not set")
         if name == "SEED" and self.algorithm.GROUP == "release":
             return tr("given; kept off this page, because it would undo the protection")
-        kind = definition.type()
         if kind in ("source", "vector", "raster", "layer"):
             return self._layer_name(value)
         if kind == "multilayer":
@@ -153,9 +160,6 @@ class Settings:
             return crs.userFriendlyIdentifier()
         if kind == "field":
             return ", ".join(field_names(self.algorithm, self.parameters, name, self.context))
-        if kind == "distance":
-            length = self.real(name)
-            return f"{length:g} m" if length else tr("0 m: chosen by the tool")
         if kind == "boolean":
             return tr("yes") if self.flag(name) else tr("no")
         if isinstance(value, QgsProperty):

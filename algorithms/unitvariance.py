@@ -1,9 +1,10 @@
 """Zoning variance from base units: how far a map depends on how units are grouped into zones."""
 
 import numpy as np
-from qgis.core import QgsProcessing, QgsProcessingParameterFeatureSink
+from qgis.core import QgsProcessingParameterFeatureSink
 
 from ..plugin import looks
+from ..plugin.host import POLYGONS
 from ..plugin.text import listed, number, tr
 from .base import SteadfieldAlgorithm
 from .unitvariance_outputs import table_of, unit_columns, write_extremes
@@ -98,6 +99,7 @@ class UnitVariance(SteadfieldAlgorithm):
             tr("Statistic of the extreme zonings"),
             STATISTICS,
             tr("The zonings with its largest and its smallest value come out as polygons."),
+            advanced=True,
         )
         self.add_choice(
             "KIND",
@@ -108,9 +110,8 @@ class UnitVariance(SteadfieldAlgorithm):
         )
 
     def _add_outputs(self):
-        polygon = QgsProcessing.SourceType.TypeVectorPolygon
         self.add(
-            QgsProcessingParameterFeatureSink("UNITS_OUT", tr("Units with variance"), polygon),
+            QgsProcessingParameterFeatureSink("UNITS_OUT", tr("Units with variance"), POLYGONS),
             tr(
                 "Every unit with its own fields and: value, mean over all zonings, standard "
                 "deviations by source, quantiles, p_above, verdict and range of ranks."
@@ -123,7 +124,7 @@ class UnitVariance(SteadfieldAlgorithm):
         )
         self.add(
             QgsProcessingParameterFeatureSink(
-                "EXTREMES", tr("Extreme zonings"), polygon, None, True, False
+                "EXTREMES", tr("Extreme zonings"), POLYGONS, None, True, False
             ),
             tr("The zones of the two most extreme zonings; tick one or the other in the legend."),
         )

@@ -128,7 +128,7 @@ def add_zones(algorithm, replicates):
         tr("Border tolerance"),
         tr(
             "Borders that run this close to each other count as shared, where the digitising left "
-            "slivers or gaps. 0: a thousandth of the width of a middling unit."
+            "slivers or gaps. Empty: a thousandth of the width of a middling unit."
         ),
         advanced=True,
     )
