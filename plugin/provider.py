@@ -3,9 +3,10 @@
 from importlib import import_module
 from pathlib import Path
 
-from qgis.core import QgsProcessingProvider
+from qgis.core import QgsApplication, QgsProcessingProvider
 from qgis.PyQt.QtGui import QIcon
 
+from .ready_models import ready_models
 from .text import tr
 
 ICON = Path(__file__).resolve().parent.parent / "icons" / "steadfield.svg"
@@ -54,3 +55,15 @@ class Provider(QgsProcessingProvider):
         for module, name in ALGORITHMS.items():
             algorithm = getattr(import_module(f"...algorithms.{module}", __name__), name)
             self.addAlgorithm(algorithm())
+        registry = QgsApplication.processingRegistry()
+        if registry.providerById(self.id()) is None:
+            # the steps of a model are looked up by id, which works from then on
+            registry.providerAdded.connect(self._registered)
+            return
+        for model in ready_models():
+            self.addAlgorithm(model)
+
+    def _registered(self, identifier):
+        if identifier == self.id():
+            QgsApplication.processingRegistry().providerAdded.disconnect(self._registered)
+            self.refreshAlgorithms()

@@ -29,8 +29,8 @@ def field(name, label, parent, optional=True, numeric=True):
 
 
 def length(name, label):
-    """A length in metres; 0 lets the tool choose."""
-    definition = QgsProcessingParameterDistance(name, label, 0.0, "", False, 0.0)
+    """A length in metres; empty lets the tool choose."""
+    definition = QgsProcessingParameterDistance(name, label, None, "", True, 0.0)
     definition.setDefaultUnit(METRES)
     return definition
 
@@ -291,7 +291,7 @@ def three_layers_together():
     plan.input(
         length("BANDWIDTH", "Bandwidth"),
         (3, 0.9),
-        "Of all three surfaces. 0: each is chosen from its own records.",
+        "Of all three surfaces. Empty: each is chosen from its own records.",
         advanced=True,
     )
     plan.input(seed(), (2, 5.5), SEED_HELP, advanced=True)
@@ -392,12 +392,12 @@ def clean_release():
     plan.input(
         length("HEXAGON_SIZE", "Hexagon size"),
         (1, 1),
-        "Distance between centres. 0: a round size that holds four times the least count.",
+        "Distance between centres. Empty: a round size that holds four times the least count.",
     )
     plan.input(
         length("BANDWIDTH", "Least bandwidth of the surface"),
         (3, 1),
-        "0: by the normal-scale rule.",
+        "Empty: by the normal-scale rule.",
     )
     plan.input(
         QgsProcessingParameterBoolean("STOP", "Stop with an error unless clean", False),

@@ -1,0 +1,80 @@
+"""The graphical models that come with the plugin, offered beside its algorithms."""
+
+from pathlib import Path
+
+from qgis.core import Qgis, QgsMessageLog, QgsProcessingModelAlgorithm
+from qgis.PyQt.QtGui import QIcon
+
+from . import looks, model_looks
+from .text import tr
+
+FOLDER = Path(__file__).resolve().parent / "models"
+ICON = FOLDER.parent.parent / "icons" / "readymodel.svg"
+
+
+class ReadyModel(QgsProcessingModelAlgorithm):
+    """A model file as an algorithm: its id is the file's name, whatever the model is called.
+
+    Parameters
+    ----------
+    path : pathlib.Path
+        A .model3 file.
+    """
+
+    def __init__(self, path):
+        super().__init__()
+        self._path = path
+        if not self.fromFile(str(path)):
+            raise OSError(tr("{}: the model cannot be read.").format(path.name))
+
+    def name(self):
+        return self._path.stem
+
+    def group(self):
+        return tr("Ready models")
+
+    def groupId(self):
+        return "readymodels"
+
+    def tags(self):
+        return [tr("model"), tr("chain"), tr("workflow")]
+
+    def icon(self):
+        return QIcon(str(ICON))
+
+    def svgIconPath(self):
+        return str(ICON)
+
+    def createInstance(self):
+        return ReadyModel(self._path)
+
+    def processAlgorithm(self, parameters, context, feedback):
+        results = super().processAlgorithm(parameters, context, feedback)
+        for output, (kind, look) in _looks().get(self.name(), {}).items():
+            if results.get(output):
+                looks.style_output(results[output], kind, look, {}, context)
+        return results
+
+
+def ready_models():
+    """Every model in the folder; their steps must be registered before this is called."""
+    found = []
+    for path in sorted(FOLDER.glob("*.model3")):
+        try:
+            found.append(ReadyModel(path))
+        except OSError as error:
+            QgsMessageLog.logMessage(str(error), "Steadfield", Qgis.MessageLevel.Warning)
+    return found
+
+
+def _looks():
+    """Looks of outputs that steps of the host itself write: kind and look, by model and output."""
+    verdicts = "vector", looks.verdicts()
+    return {
+        "placesthathold": {"hold:Places that hold": verdicts},
+        "placesthatholdtwice": {"hold:Places that hold in both": verdicts},
+        "cleanrelease": {
+            "release_hexagons:Released hexagons": ("vector", model_looks.published_counts),
+            "release_surface:Released surface": ("raster", model_looks.published_density),
+        },
+    }

@@ -1,0 +1,24 @@
+import pytest
+
+pytestmark = pytest.mark.window
+
+
+def overlapping(boxes):
+    """Pairs of boxes that lie over each other."""
+    return [
+        (one[0], other[0])
+        for place, one in enumerate(boxes)
+        for other in boxes[place + 1 :]
+        if min(one[3], other[3]) > max(one[1], other[1])
+        and min(one[4], other[4]) > max(one[2], other[2])
+    ]
+
+
+def test_every_ready_model_opens_in_the_designer_with_no_box_over_another(desktop):
+    notes = desktop("open_models.py")
+    assert "traceback" not in notes, notes["traceback"]
+    assert len(notes["opened"]) == 5
+    for name, boxes in notes["opened"].items():
+        assert name in notes["offered"]
+        assert len(boxes) > 8
+        assert overlapping(boxes) == [], name
