@@ -78,10 +78,8 @@ class InkBlend(SteadfieldAlgorithm):
         preview = ink_pages.Preview(grid)
 
         def levels_of(window):
-            stack = [
-                ranks.look_up(table, layer.read(window)) for table, layer in zip(tables, layers)
-            ]
-            levels = ink.rgba(stack, inks)
+            values = [layer.read(window) for layer in layers]
+            levels = ink.rgba_of_values(values, tables, inks)
             preview.take(window, levels)
             return levels
 

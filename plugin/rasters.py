@@ -134,7 +134,7 @@ def write_picture(path, grid, crs, windows, levels_of, progress):
 def _new_picture(driver, path, grid, crs):
     options = _options(driver, grid.columns, grid.rows)
     if options:
-        options += ["PHOTOMETRIC=RGB", "ALPHA=YES", "PREDICTOR=2", "ZLEVEL=4"]
+        options += ["PHOTOMETRIC=RGB", "ALPHA=YES", "PREDICTOR=2", "ZLEVEL=2"]
     dataset = driver.Create(path, grid.columns, grid.rows, 4, gdal.GDT_Byte, options=options)
     if dataset is None:
         raise OSError(gdal.GetLastErrorMsg() or tr("the format refused"))

@@ -13,6 +13,7 @@ For strengths s_i (0 to 1) of the layers at a pixel:
 """
 
 import re
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from itertools import combinations
 
@@ -33,6 +34,7 @@ from .colour import (
     to_hex,
 )
 from .errors import InputError
+from .ranks import look_up
 
 PAPER, DARK = 1.0, 0.2
 FULL_COVERAGE = 0.5
@@ -53,6 +55,7 @@ DEFAULT_INKS = {
 ALIKE, CLOSE = 5.0, 15.0
 
 PIXELS_AT_ONCE = 1 << 16
+THREADS = 2
 _LEVELS = 1 << 16
 _ENCODED = linear_to_srgb(np.linspace(0, 1, _LEVELS)).astype(np.float32)
 # Linear light beyond the display's range that still rounds to the same level of 255, nearly.
@@ -202,12 +205,46 @@ def rgba(strengths, inks):
     """
     strengths = np.asarray(strengths, np.float32)
     flat = strengths.reshape(len(strengths), -1)
-    chroma = srgb_to_oklab(inks)[:, 1:].astype(np.float32)
-    levels = np.empty((4, flat.shape[1]), np.uint8)
-    for start in range(0, flat.shape[1], PIXELS_AT_ONCE):
-        stop = start + PIXELS_AT_ONCE
-        _uncover(_encoded(_mix(flat[:, start:stop], chroma)), levels[:, start:stop])
+    levels = _print(flat.shape[1], lambda place: flat[:, place], inks)
     return levels.reshape(4, *strengths.shape[1:])
+
+
+def rgba_of_values(values, tables, inks):
+    """`rgba` of densities, through tables of strengths.
+
+    Parameters
+    ----------
+    values : sequence of float32 arrays of one shape
+        One for each layer; NaN for no data.
+    tables : sequence of float32 arrays
+        From `ranks.strength_table`.
+    inks : (layers, 3) array
+
+    Returns
+    -------
+    (4, ...) uint8 array
+    """
+    flat = [np.ascontiguousarray(one, np.float32).ravel() for one in values]
+
+    def strengths_of(place):
+        return np.stack([look_up(table, one[place]) for table, one in zip(tables, flat)])
+
+    return _print(len(flat[0]), strengths_of, inks).reshape(4, *np.shape(values[0]))
+
+
+def _print(pixels, strengths_of, inks):
+    """Levels of all pixels, in parts that stay in the processor's cache."""
+    chroma = srgb_to_oklab(inks)[:, 1:].astype(np.float32)
+    levels = np.empty((4, pixels), np.uint8)
+
+    def print_from(start):
+        place = slice(start, start + PIXELS_AT_ONCE)
+        _uncover(_encoded(_mix(strengths_of(place), chroma)), levels[:, place])
+
+    # array operations let go of the interpreter, so that threads share the work
+    with ThreadPoolExecutor(THREADS) as threads:
+        list(threads.map(print_from, range(0, pixels, PIXELS_AT_ONCE)))
+    return levels
 
 
 def _encoded(mixed):

@@ -73,9 +73,15 @@ def add_to_masses(masses, values):
     values : array of any shape
         Densities; NaN for no data.
     """
-    values = np.ascontiguousarray(values, np.float32)
-    found = np.bincount(_bin_of(values).ravel(), weights=values.ravel(), minlength=BINS)
-    masses += found
+    values = np.ascontiguousarray(values, np.float32).ravel()
+    if len(values) == 0:
+        return
+    bins = _bin_of(values)
+    # the bins of one block are few; counting from the first spares passes over all of them
+    first = int(bins.min())
+    bins -= first
+    found = np.bincount(bins, weights=values)
+    masses[first : first + len(found)] += found
 
 
 def negative_mass(masses):

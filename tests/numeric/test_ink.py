@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from steadfield.algorithms.numeric import colour, ink
+from steadfield.algorithms.numeric import colour, ink, ranks
 from steadfield.algorithms.numeric.errors import InputError
 
 steady = settings(derandomize=True, deadline=None, max_examples=60)
@@ -115,6 +115,21 @@ def test_base_map_shows_through_faint_ink():
     dark = ink.over(levels, (0.0, 0.0, 0.0))
     light = ink.over(levels, (1.0, 1.0, 1.0))
     assert (light - dark).min() > 0.7
+
+
+def test_picture_of_values_is_the_picture_of_their_strengths():
+    values = np.random.default_rng(9).gamma(1, 2, (3, 300, 400)).astype(np.float32)
+    values[1, :20] = np.nan
+    tables = []
+    for one in values:
+        masses = ranks.new_masses()
+        ranks.add_to_masses(masses, one)
+        tables.append(ranks.strength_table(masses))
+    strengths = [ranks.look_up(table, one) for table, one in zip(tables, values)]
+    inks = ink.default_inks(3)
+    np.testing.assert_array_equal(
+        ink.rgba_of_values(values, tables, inks), ink.rgba(strengths, inks)
+    )
 
 
 def test_picture_keeps_the_shape_of_the_layers():
