@@ -42,6 +42,8 @@ MISSING = "#ecebe6"
 # What cannot be told from noise.
 NOISE = "#b9b6b0"
 
+DATA_ENDINGS = (".tif", ".tiff", ".img", ".gpkg", ".shp", ".geojson", ".fgb", ".sqlite")
+
 _kept = {}
 
 
@@ -276,6 +278,12 @@ class _Styler(QgsProcessingLayerPostProcessorInterface):
         _kept.pop(self._target, None)
 
 
+def _shares_its_style_file(target):
+    """Whether another data set beside the target would open with the target's style file."""
+    stem, ending = os.path.splitext(target)
+    return any(os.path.exists(stem + other) for other in DATA_ENDINGS if other != ending.lower())
+
+
 def style_output(target, kind, look, aliases, context):
     """Make an output open with its look and field aliases, whichever way it is opened.
 
@@ -310,13 +318,13 @@ def style_output(target, kind, look, aliases, context):
         )
         if layer.isValid():
             apply(layer)
-            part = QgsMapLayer.StyleCategory
-            kinds = QgsMapLayer.StyleCategories(part.Symbology)
+            kinds = QgsMapLayer.StyleCategory.Symbology
             if not raster and layer.labelsEnabled():
-                kinds |= part.Labeling
+                kinds |= QgsMapLayer.StyleCategory.Labeling
             if aliases:
-                kinds |= part.Fields
-            layer.saveNamedStyle(os.path.splitext(target)[0] + ".qml", kinds)
+                kinds |= QgsMapLayer.StyleCategory.Fields
+            if not _shares_its_style_file(target):
+                layer.saveNamedStyle(os.path.splitext(target)[0] + ".qml", kinds)
         del layer
         # opening a raster made the host note statistics of its values beside the file
         if os.path.exists(target + ".aux.xml"):

@@ -161,3 +161,9 @@ def test_an_empty_layer_is_refused_by_name(count, point_layer):
 def test_memory_outputs_are_loaded_styled(count):
     results, _ = count(PLACES="memory:")
     assert results["PLACES"].featureCount() == 3
+
+
+def test_a_style_file_is_not_shared_by_two_outputs_of_one_stem(count, tmp_path):
+    count(PLACES=str(tmp_path / "counts.gpkg"))
+    style = (tmp_path / "counts.qml").read_text(encoding="utf-8")
+    assert "singlebandpseudocolor" in style
