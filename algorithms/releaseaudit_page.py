@@ -70,6 +70,8 @@ def answer(found, least_count):
             tr("{} {} with fewer than {} records can be worked out; the smallest count is {}")
             .format(number(len(found.risks)), regions, least_count, number(found.worst_count))
         )  # fmt: skip
+        derived = sum(not _published_alone(risk) for risk in found.risks)
+        words.append(tr("{} of them only by combining published counts").format(number(derived)))
     if found.contradictions:
         words.append(
             tr("the layers contradict each other ({} counts), so nothing is certain").format(
@@ -79,6 +81,11 @@ def answer(found, least_count):
     if found.undecided:
         words.append(tr("the search left {} pieces of ground open").format(number(found.undecided)))
     return tr("Not clean: {}.").format("; ".join(words))
+
+
+def _published_alone(risk):
+    """Whether one published count tells it all."""
+    return len(risk.added) == 1 and not risk.subtracted
 
 
 def stop_words(found, least_count):
@@ -117,9 +124,12 @@ def report(job, published, found, least_count):
         tr("Where"),
         lambda figure: _draw(figure, published, found, job.working.metres),
         tr("Borders of the published layers and the ground that is disclosed; distances in km."),
-        size=(8.0, 6.4),
+        size=(8.0, 5.6),
     )
-    _risk_table(page, tr("Disclosed regions"), found.risks, job)
+    combined = [risk for risk in found.risks if not _published_alone(risk)]
+    _risk_table(page, tr("Disclosed by combining published counts"), combined, job)
+    alone = [risk for risk in found.risks if _published_alone(risk)]
+    _risk_table(page, tr("Published counts that disclose by themselves"), alone, job)
     if found.empty:
         _risk_table(page, tr("Known to be empty (lower severity)"), found.empty, job)
     if found.contradictions:

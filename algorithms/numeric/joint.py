@@ -6,7 +6,7 @@ that the atom is not small, and programmes over a neighbourhood alone, the rest 
 held as it is, find such tables for many atoms at a time.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy import optimize, sparse
@@ -17,6 +17,7 @@ from .progress import part, silent
 SHORT_ROW = 60
 PROGRAMME_SIZE = 300
 NODES = 2000
+FILLED_TOGETHER = (60, 200)
 BRANCHING = 2000
 CORRIDOR = 1500
 
@@ -62,6 +63,13 @@ def small_atoms(counts, least_count, table=None, effort=20_000, progress=silent,
         Atoms that the search could not decide within the effort: nothing is known about them.
     """
     enough = np.zeros(counts.atoms, bool) if wanted is None else ~wanted
+    telling = np.flatnonzero((counts.lower > 0) | np.isfinite(counts.upper))
+    if len(telling) < counts.rows:
+        fewer = PublishedCounts(
+            counts.membership[telling], counts.lower[telling], counts.upper[telling]
+        )
+        found, undecided = small_atoms(fewer, least_count, table, effort, progress, ~enough)
+        return [_with_all_rows(small, telling, counts.rows) for small in found], undecided
     if table is None:
         table = whole_table(counts, even_guess(counts))
     if table is not None:
@@ -72,21 +80,42 @@ def small_atoms(counts, least_count, table=None, effort=20_000, progress=silent,
     return _decided(counts, least_count, enough, effort - spent, part(progress, 0.5, 1.0), table)
 
 
+def _with_all_rows(small, rows, number):
+    """Multipliers of the rows that say something, spread to all rows."""
+    multipliers = np.zeros(number)
+    multipliers[rows] = small.multipliers
+    return replace(small, multipliers=multipliers)
+
+
 def _fill_all(counts, least_count, table, enough, effort, progress):
     """Mark in ``enough`` what programmes over small neighbourhoods can fill."""
     columns = counts.membership.tocsc()
-    everything = np.ones(counts.rows, bool)
     short = np.diff(counts.membership.indptr) <= SHORT_ROW
     capped = tighten(counts)[1] < least_count
     spent = 0
-    for hops, usable in ((2, short), (4, short), (1, everything)):
+    for size in FILLED_TOGETHER:
         for atom in range(counts.atoms):
             progress(atom / counts.atoms)
             if enough[atom] or capped[atom] or spent > effort:
                 continue
-            near = _near(counts.membership, columns, atom, hops, usable)
+            near = _company(counts.membership, columns, atom, short, size)
             spent += _fill(counts, near, atom, least_count, table, enough)
     return spent
+
+
+def _company(membership, columns, atom, short, size):
+    """About so many atoms that can exchange records with one: near by, or thinned out."""
+    everything = np.ones(membership.shape[0], bool)
+    near = _near(membership, columns, atom, 1, short)
+    while len(near) < size:
+        wider = _near(membership, columns, atom, 1, short, near)
+        if len(wider) == len(near):
+            wider = _near(membership, columns, atom, 1, everything, near)
+            others = np.setdiff1d(wider, near)
+            near = np.union1d(near, others[:: max(1, 2 * len(others) // size)])
+            return _near(membership, columns, atom, 1, short, near)
+        near = wider
+    return near
 
 
 def _decided(counts, least_count, enough, effort, progress, table=None):

@@ -145,6 +145,24 @@ def test_the_report_is_complete_and_names_no_place_on_the_machine(audit, cells, 
     assert str(tmp_path) not in text
 
 
+def test_a_withheld_release_is_clean_and_one_with_a_lower_least_count_is_not(
+    run, audit, point_layer, tmp_path
+):
+    """Hexagons of this plugin, their grand total, and one official zone around everything."""
+    generator = np.random.default_rng(11)
+    x, y = generator.normal(0, 700, (2, 900))
+    points = point_layer(ORIGIN[0] + x, ORIGIN[1] + y)
+    for least_count, clean in ((10, 1), (2, 0)):
+        target = str(tmp_path / f"release_{least_count}.gpkg")
+        run(
+            "safehexagons",
+            {"RECORDS": points, "HEXAGON_SIZE": 400, "LEAST_COUNT": least_count, "METHOD": 0,
+             "SEED": 1, "RELEASE": target},
+        )  # fmt: skip
+        results, _ = audit([target], COUNT_FIELDS="count", TOTALS="900", RECORDS=points)
+        assert results["CLEAN"] == clean and results["CONTRADICTIONS"] == 0
+
+
 @pytest.mark.parametrize(
     ("more", "words"),
     [
