@@ -216,10 +216,10 @@ class SteadfieldAlgorithm(QgsProcessingAlgorithm):
         optional=False, advanced=False,
     ):  # fmt: skip
         """Add a number without a unit."""
-        kinds = QgsProcessingParameterNumber.Type
-        parameter = QgsProcessingParameterNumber(
-            name, label, kinds.Integer if whole else kinds.Double, default, optional
-        )
+        kind = QgsProcessingParameterNumber.Type.Double
+        if whole:
+            kind = QgsProcessingParameterNumber.Type.Integer
+        parameter = QgsProcessingParameterNumber(name, label, kind, default, optional)
         if default is not None:
             parameter.setMetadata(SHORT_DECIMALS)
         if least is not None:

@@ -88,8 +88,8 @@ def _write_table(path, crs, table, first, transform_context, progress):
     options.layerName = table.name
     options.layerOptions = [f"IDENTIFIER={table.title}", "GEOMETRY_NAME=geom"]
     if not first:
-        options.actionOnExistingFile = QgsVectorFileWriter.ActionOnExistingFile(
-            QgsVectorFileWriter.CreateOrOverwriteLayer
+        options.actionOnExistingFile = (
+            QgsVectorFileWriter.ActionOnExistingFile.CreateOrOverwriteLayer
         )
     fields = fields_of(table.columns)
     writer = QgsVectorFileWriter.create(

@@ -1,14 +1,14 @@
 """What differs between versions of the host application, in one place."""
 
-from qgis.core import Qgis, QgsProcessing, QgsProcessingFeatureSource, QgsUnitTypes
+from qgis.core import NULL, Qgis, QgsProcessing, QgsProcessingFeatureSource, QgsUnitTypes
 from qgis.PyQt.QtCore import QMetaType, QVariant
 
 if Qgis.QGIS_VERSION_INT >= 33800:
     INTEGER, BIG_INTEGER = QMetaType.Type.Int, QMetaType.Type.LongLong
     REAL, TEXT = QMetaType.Type.Double, QMetaType.Type.QString
 else:
-    INTEGER, BIG_INTEGER = QVariant.Int, QVariant.LongLong
-    REAL, TEXT = QVariant.Double, QVariant.String
+    INTEGER, BIG_INTEGER = QVariant.Type.Int, QVariant.Type.LongLong
+    REAL, TEXT = QVariant.Type.Double, QVariant.Type.String
 
 if Qgis.QGIS_VERSION_INT >= 33000:
     METRES = Qgis.DistanceUnit.Meters
@@ -31,6 +31,11 @@ else:
     RASTERS = QgsProcessing.SourceType.TypeRaster
     MAP_LAYERS = QgsProcessing.SourceType.TypeMapLayer
     SKIP_VALIDITY_CHECKS = QgsProcessingFeatureSource.Flag.FlagSkipGeometryValidityChecks
+
+
+def is_null(value):
+    """Whether a field's value is null, in whichever form a version hands it over."""
+    return value is None or value == NULL or (isinstance(value, QVariant) and value.isNull())
 
 
 def field_names(algorithm, parameters, name, context):

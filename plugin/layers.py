@@ -6,16 +6,15 @@ import numpy as np
 import shapely
 from osgeo import gdal
 from qgis.core import (
-    NULL,
     QgsFeatureRequest,
     QgsGeometry,
     QgsProviderRegistry,
     QgsWkbTypes,
 )
-from qgis.PyQt.QtCore import Qt, QVariant
+from qgis.PyQt.QtCore import Qt
 
 from ..algorithms.numeric.errors import InputError
-from .host import BIG_INTEGER, INTEGER, REAL, SKIP_VALIDITY_CHECKS, TEXT
+from .host import BIG_INTEGER, INTEGER, REAL, SKIP_VALIDITY_CHECKS, TEXT, is_null
 from .reference_system import reproject
 from .text import tr
 
@@ -206,13 +205,9 @@ def _plain_wkb(geometry):
     return bytes(geometry.asWkb())
 
 
-def _is_null(value):
-    return value is None or value == NULL or (isinstance(value, QVariant) and value.isNull())
-
-
 def _as_feature_values(column, kind):
     values = np.empty(len(column), object)
-    values[:] = [None if _is_null(value) else value for value in column]
+    values[:] = [None if is_null(value) else value for value in column]
     missing = np.array([value is None for value in values], bool)
     if kind == REAL:
         values[missing] = np.nan
@@ -221,10 +216,7 @@ def _as_feature_values(column, kind):
         return values if missing.any() else values.astype(np.int64)
     if kind != TEXT:
         for row in np.flatnonzero(~missing):
-            value = values[row]
-            values[row] = (
-                value.toString(Qt.DateFormat.ISODate) if hasattr(value, "toString") else str(value)
-            )
+            values[row] = _as_text(values[row])
     return values
 
 

@@ -7,6 +7,8 @@ import sys
 import zipfile
 from pathlib import Path
 
+from host_rules import broken_rules
+
 ROOT = Path(__file__).resolve().parent.parent
 PARTS = ["plugin", "algorithms", "icons"]
 FILES = ["__init__.py", "metadata.txt", "LICENSE", "README.md", "CHANGELOG.md"]
@@ -26,8 +28,6 @@ NEEDED = [
     "hasProcessingProvider",
     "icon",
 ]
-# unscoped enums of Qt 5 that Qt 6 has dropped
-UNSCOPED = re.compile(r"\bQt\.(Align\w+|\w+Button|UserRole|ISODate|Horizontal|Vertical)\b")
 
 
 def contents():
@@ -66,7 +66,7 @@ def problems():
 
 def _problems_of_module(path, name):
     text = path.read_text(encoding="utf-8")
-    found = [f"{name} uses {match.group()}, unscoped" for match in UNSCOPED.finditer(text)]
+    found = broken_rules(text, name)
     for node in ast.walk(ast.parse(text)):
         modules = []
         if isinstance(node, ast.Import):
