@@ -71,7 +71,12 @@ def answer(found, least_count):
             .format(number(len(found.risks)), regions, least_count, number(found.worst_count))
         )  # fmt: skip
         derived = sum(not _published_alone(risk) for risk in found.risks)
-        words.append(tr("{} of them only by combining published counts").format(number(derived)))
+        if derived:
+            words.append(
+                tr("{} of them only by combining published counts").format(number(derived))
+            )
+        else:
+            words.append(tr("published counts tell them as they stand"))
     if found.contradictions:
         words.append(
             tr("the layers contradict each other ({} counts), so nothing is certain").format(
