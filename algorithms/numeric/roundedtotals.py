@@ -25,7 +25,7 @@ def totals_that_tell(members, lower, upper, targets, ranges, totals, progress=si
 
     The outsider knows that every published sum lies between its bounds and that no atom is
     negative. While a target can be placed more narrowly than its range, the totals that contain it
-    are left out, the widest first.
+    are left out, the smallest first: a wide one left out would tell that some target is at stake.
 
     Parameters
     ----------
@@ -64,7 +64,7 @@ def totals_that_tell(members, lower, upper, targets, ranges, totals, progress=si
                 open_ones = open_ones[1:]
                 continue
             size = np.diff(members.indptr)[guilty]
-            left_out[guilty[np.argmax(size)]] = True
+            left_out[guilty[np.argmin(size)]] = True
     return left_out
 
 

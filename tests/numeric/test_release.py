@@ -172,6 +172,44 @@ def test_totals_rounded_on_their_own_would_tell_if_they_were_all_published(monke
     assert won[False] > 0
 
 
+def test_a_total_that_is_left_out_does_not_tell_why():
+    """Enumeration: all pairs of counts below the least, and what releases they can lead to."""
+    behind = set()
+    for first in (1, 2):
+        for second in (1, 2):
+            records = Records(np.repeat([0, 1], [first, second]))
+            for seed in range(120):
+                made = run(
+                    records, 2, 0, rules=Rules(3), base=3, method="round", grand_total=True,
+                    seed=seed,
+                )  # fmt: skip
+                if np.isnan(made.grand_values[0]) and (made.count() == 0).all():
+                    behind.add((first, second))
+    # 2 and 2 alone can round to a total that tells; left out, it must not tell the same
+    assert {first for first, _ in behind} == {second for _, second in behind} == {1, 2}
+    assert (1, 1) in behind
+
+
+def test_a_total_of_many_cells_stays_when_a_small_region_tells():
+    cells = np.repeat(np.arange(20), [2, 2] + [30] * 18)
+    records = Records(cells, regions=(cells > 1).astype(int))
+    left_out = 0
+    for seed in range(60):
+        made = run(
+            records, 20, 2, rules=Rules(3), base=3, method="round", region_totals=True,
+            grand_total=True, seed=seed,
+        )  # fmt: skip
+        left_out += np.isnan(made.region_values[0, 0])
+        assert np.isfinite(made.grand_values[0]) and np.isfinite(made.region_values[0, 1])
+    assert left_out > 0
+
+
+def test_the_rounded_total_of_an_empty_region_is_0_like_that_of_an_empty_cell():
+    records = Records(np.repeat([0, 1], 40), regions=np.zeros(80, int))
+    made = run(records, 3, 2, method="round", region_totals=True, seed=3)
+    assert made.region_values[0, 1] == made.count()[2] == 0
+
+
 def test_controlled_figures_add_up_and_move_less_than_the_base():
     for seed in range(20):
         records, count, regions = practice(seed, share=bool(seed % 2))
