@@ -7,7 +7,7 @@ from pathlib import Path
 sys.path.insert(0, os.environ["STEADFIELD_SCRIPTS"])
 
 import steadfield
-from inside import notes, picture, start, wait
+from inside import PICTURES, notes, start, wait
 from processing.modeler.ModelerDialog import ModelerDialog
 from qgis.core import QgsApplication
 from qgis.gui import QgsModelComponentGraphicItem
@@ -41,7 +41,7 @@ def steps():
         scene = views[0].scene()
         views[0].fitInView(scene.itemsBoundingRect(), Qt.AspectRatioMode.KeepAspectRatio)
         wait(500)
-        picture(f"model {path.stem}")
+        dialog.grab().save(str(PICTURES / f"model {path.stem}.png"))
         notes["opened"][path.stem] = boxes(scene)
         dialog.setDirty(False)
         dialog.close()
