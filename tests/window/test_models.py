@@ -14,7 +14,7 @@ def overlapping(boxes):
     ]
 
 
-def test_every_ready_model_opens_in_the_designer_with_no_box_over_another(desktop):
+def test_ready_models_open_in_the_designer_without_overlap_and_run_from_the_dialog(desktop):
     notes = desktop("open_models.py")
     assert "traceback" not in notes, notes["traceback"]
     assert len(notes["opened"]) == 5
@@ -22,3 +22,9 @@ def test_every_ready_model_opens_in_the_designer_with_no_box_over_another(deskto
         assert name in notes["offered"]
         assert len(boxes) > 8
         assert overlapping(boxes) == [], name
+    assert notes["ran"]
+    assert notes["loaded"]["Picture"] == "multibandcolor"
+    assert notes["loaded"]["Density, first layer"] == "singlebandpseudocolor"
+    assert notes["loaded"]["Zones of agreement"] != "singleSymbol"
+    for key in "ABC":
+        assert f">hill {key}<" in notes["legend"]
