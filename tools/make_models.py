@@ -3,8 +3,12 @@
 Run it on the oldest host version that the plugin supports; later ones read what older ones write.
 """
 
+import os
 import sys
 from pathlib import Path
+
+# the order of attributes in a file otherwise changes from run to run
+os.environ["QT_HASH_SEED"] = "0"
 
 from headless import ROOT, Host
 
