@@ -15,9 +15,10 @@ from .intervals import WHOLE, PublishedCounts, extreme, restricted, tighten
 from .progress import part, silent
 
 SHORT_ROW = 60
-PROGRAMME_SIZE = 300
+PROGRAMME_SIZE = 1000
 NODES = 2000
-FILLED_TOGETHER = (60, 200)
+FILLED_TOGETHER = 60
+TRIALS = 100
 BRANCHING = 2000
 CORRIDOR = 1500
 
@@ -51,7 +52,7 @@ def small_atoms(counts, least_count, table=None, effort=20_000, progress=silent,
     table : (atoms,) array of whole numbers or None
         A table that agrees with the statements, if one is known.
     effort : int
-        Work after which the search stops, in linear programmes over a few hundred atoms.
+        Work after which the search stops, in linear programmes over up to a thousand atoms.
     progress : callable
     wanted : (atoms,) bool array or None
         The atoms in question; all by default.
@@ -93,13 +94,16 @@ def _fill_all(counts, least_count, table, enough, effort, progress):
     short = np.diff(counts.membership.indptr) <= SHORT_ROW
     capped = tighten(counts)[1] < least_count
     spent = 0
-    for size in FILLED_TOGETHER:
-        for atom in range(counts.atoms):
-            progress(atom / counts.atoms)
-            if enough[atom] or capped[atom] or spent > effort:
-                continue
-            near = _company(counts.membership, columns, atom, short, size)
-            spent += _fill(counts, near, atom, least_count, table, enough)
+    tried = filled = 0
+    for atom in range(counts.atoms):
+        progress(atom / counts.atoms)
+        if enough[atom] or capped[atom]:
+            continue
+        if spent > effort or (tried >= TRIALS and filled < 0.5 * tried):
+            break
+        near = _company(counts.membership, columns, atom, short, FILLED_TOGETHER)
+        spent += _fill(counts, near, atom, least_count, table, enough)
+        tried, filled = tried + 1, filled + enough[atom]
     return spent
 
 
