@@ -4,10 +4,11 @@ import math
 import os
 import re
 import secrets
+from contextlib import contextmanager
 
 from qgis.core import QgsProcessingUtils, QgsProperty, QgsProviderRegistry
 
-from ..plugin.host import field_names
+from ..plugin.host import field_names, is_null
 from ..plugin.text import tr
 from .numeric.errors import CancelledError, InputError
 
@@ -53,14 +54,23 @@ class Settings:
         """Name a parameter as the user sees it, with its key."""
         return f"{self.algorithm.parameterDefinition(name).description()} ({name})"
 
+    @contextmanager
+    def naming(self, name):
+        """Put a parameter before the message of an error that is raised inside."""
+        try:
+            yield
+        except InputError as error:
+            raise InputError(f"{self.label(name)}: {error}") from error
+
     def given(self, name):
         """Whether an optional input was set."""
         value = self.parameters.get(name)
-        return value is not None and value != ""
+        # dialogs hand over a null of the host for what is left empty
+        return not is_null(value) and value != ""
 
     def wanted(self, name):
         """Whether an optional output was asked for."""
-        return self.parameters.get(name) not in (None, "")
+        return self.given(name)
 
     def real(self, name):
         """A number; None where an optional one is empty."""
@@ -141,8 +151,8 @@ class Settings:
         if kind == "distance":
             length = self.metres(name)
             return f"{length:g} m" if length else tr("chosen by the tool")
-        value = self.parameters.get(name, definition.defaultValue())
-        if value is None or value == "":
+        value = self.parameters[name] if self.given(name) else definition.defaultValue()
+        if is_null(value) or value == "":
             return tr("not set")
         if name == "SEED" and self.algorithm.GROUP == "release":
             return tr("given; kept off this page, because it would undo the protection")

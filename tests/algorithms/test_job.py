@@ -14,6 +14,7 @@ from qgis.core import (
     QgsRasterLayer,
     QgsVectorLayer,
 )
+from qgis.PyQt.QtCore import QVariant
 from steadfield.algorithms.base import SteadfieldAlgorithm
 from steadfield.algorithms.numeric.grid import covering
 from steadfield.plugin.looks import SEQUENCE, ramp, single, spread
@@ -102,6 +103,21 @@ def count(probe, point_layer, watch, tmp_path):
         return processing.run("probe:counting", chosen, feedback=watcher), watcher
 
     return run
+
+
+def test_what_a_dialog_leaves_empty_counts_as_left_out(count, tmp_path):
+    # a dialog hands over a null of the field's type, which scripts never do
+    empty = {
+        name: QVariant(QVariant.Type.String)
+        for name in ("WEIGHT", "BOUNDARY", "WORKING_CRS", "SEED", "PLACES", "REPORT")
+    }
+    results, watcher = count(**empty)
+    assert results["TOTAL"] == 3
+    assert set(results) == {"COUNTS", "TOTAL", "SEED_USED"}
+    assert {file.name for file in tmp_path.iterdir()} <= {
+        "counts.tif", "counts.qml", "counts.tif.aux.xml",
+    }  # fmt: skip
+    assert watcher.warnings == []
 
 
 def test_outputs_are_whole_and_open_styled(count, tmp_path):
