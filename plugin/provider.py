@@ -1,6 +1,5 @@
 """The one provider; the list of algorithms stands here and nowhere else."""
 
-from importlib import import_module
 from pathlib import Path
 
 from qgis.core import QgsApplication, QgsProcessingProvider
@@ -53,8 +52,10 @@ class Provider(QgsProcessingProvider):
 
     def loadAlgorithms(self):
         for module, name in ALGORITHMS.items():
-            algorithm = getattr(import_module(f"...algorithms.{module}", __name__), name)
-            self.addAlgorithm(algorithm())
+            # not import_module, which the host does not see, so that it would keep the module
+            # when the plugin is unloaded and mix it with those of the next version
+            held = __import__(f"algorithms.{module}", globals(), None, [name], 2)
+            self.addAlgorithm(getattr(held, name)())
         registry = QgsApplication.processingRegistry()
         if registry.providerById(self.id()) is None:
             # the steps of a model are looked up by id, which works from then on
