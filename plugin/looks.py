@@ -303,11 +303,14 @@ def style_output(target, kind, look, aliases, context):
     if look is None and not aliases:
         return
 
-    def apply(layer):
+    def name_fields(layer):
         for name, alias in aliases.items():
             index = layer.fields().indexFromName(name)
             if index >= 0:
                 layer.setFieldAlias(index, alias)
+
+    def apply(layer):
+        name_fields(layer)
         if look is not None:
             look(layer)
 
@@ -329,8 +332,11 @@ def style_output(target, kind, look, aliases, context):
         # opening a raster made the host note statistics of its values beside the file
         if os.path.exists(target + ".aux.xml"):
             os.remove(target + ".aux.xml")
-    elif QgsProcessingUtils.mapLayerFromString(target, context) is None:
-        return
+    else:
+        held = QgsProcessingUtils.mapLayerFromString(target, context)
+        if held is None:
+            return
+        name_fields(held)
     if context.willLoadLayerOnCompletion(target):
         # the host keeps no reference of its own
         _kept[target] = _Styler(target, apply)

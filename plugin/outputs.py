@@ -48,12 +48,10 @@ class Column:
 
 
 def fields_of(columns):
-    """The host's field list for columns."""
+    """The host's field list for columns; aliases come with the look, for which no format warns."""
     fields = QgsFields()
     for column in columns:
-        one = QgsField(column.name, FIELD_TYPES[column.kind])
-        one.setAlias(column.alias)
-        fields.append(one)
+        fields.append(QgsField(column.name, FIELD_TYPES[column.kind]))
     return fields
 
 
