@@ -12,6 +12,8 @@ import pytest
 
 ROOT = Path(__file__).resolve().parent.parent.parent
 HOST = shutil.which("qgis.bin") or shutil.which("qgis")
+# the wrapper of Debian 12 hands on an option that this program does not know
+PROCESS = shutil.which("qgis_process.bin") or shutil.which("qgis_process")
 SETTINGS = """[PythonPlugins]
 steadfield=true
 
@@ -22,9 +24,10 @@ allowScriptExecution=true
 checkVersion=false
 enableMacros=0
 
-[%General]
-locale\\overrideFlag=true
-locale\\userLocale=en_US
+[locale]
+overrideFlag=true
+userLocale={locale}
+globalLocale={locale}
 """
 
 
@@ -39,13 +42,8 @@ def package(tmp_path_factory):
 
 
 @pytest.fixture
-def desktop(package, tmp_path):
-    """Run a script inside the real window of a fresh profile; returns what the script noted.
-
-    The folder of the profile has a space in its name.
-    """
-    if HOST is None or shutil.which("Xvfb") is None:
-        pytest.skip("needs the desktop and Xvfb")
+def profile(package, tmp_path):
+    """A fresh profile with the plugin in it; a space is in the name of its folder."""
     profiles = tmp_path / "a profile folder"
     home = profiles / "profiles" / "default"
     plugins = home / "python" / "plugins"
@@ -53,16 +51,34 @@ def desktop(package, tmp_path):
     with zipfile.ZipFile(package) as zipped:
         zipped.extractall(plugins)
     (home / "QGIS").mkdir()
-    (home / "QGIS" / "QGIS3.ini").write_text(SETTINGS, encoding="utf-8")
+    write_settings(profiles, "en_US")
+    return profiles
+
+
+def write_settings(profiles, locale):
+    """Enable the plugin and choose the language and the number format."""
+    target = profiles / "profiles" / "default" / "QGIS" / "QGIS3.ini"
+    target.write_text(SETTINGS.format(locale=locale), encoding="utf-8")
+
+
+@pytest.fixture
+def desktop(profile, tmp_path):
+    """Run a script inside the real window; returns what the script noted."""
+    if HOST is None or shutil.which("Xvfb") is None:
+        pytest.skip("needs the desktop and Xvfb")
     pictures = Path(os.environ.get("STEADFIELD_PICTURES", ROOT / "build" / "window"))
     pictures.mkdir(parents=True, exist_ok=True)
 
-    def start(script, **settings):
+    def start(script, locale="en_US", first_of_path=None, **settings):
+        write_settings(profile, locale)
+        search = [path for path in sys.path if "site-packages" in path]
+        if first_of_path is not None:
+            search.insert(0, str(first_of_path))
         notes = tmp_path / "notes.json"
         environment = {
             **os.environ,
             "QT_QPA_PLATFORM": "xcb",
-            "PYTHONPATH": os.pathsep.join(path for path in sys.path if "site-packages" in path),
+            "PYTHONPATH": os.pathsep.join(search),
             "STEADFIELD_NOTES": str(notes),
             "STEADFIELD_PICTURES": str(pictures),
             "STEADFIELD_FOLDER": str(tmp_path),
@@ -71,7 +87,7 @@ def desktop(package, tmp_path):
             "LIBGL_ALWAYS_SOFTWARE": "1",
             **settings,
         }
-        code = [HOST, "--noversioncheck", "--nologo", "--profiles-path", str(profiles)]
+        code = [HOST, "--noversioncheck", "--nologo", "--profiles-path", str(profile)]
         code += ["--code", str(Path(__file__).parent / script)]
         command = ["xvfb-run", "-a", "-s", "-screen 0 1400x900x24", *code]
         ran = subprocess.run(
@@ -81,3 +97,32 @@ def desktop(package, tmp_path):
         return json.loads(notes.read_text(encoding="utf-8"))
 
     return start
+
+
+@pytest.fixture
+def command_line(profile, tmp_path):
+    """Run the command line of the host with the same profile; returns what it said."""
+    if PROCESS is None:
+        pytest.skip("needs the command line of the host")
+
+    def run(*words):
+        environment = {
+            **os.environ,
+            "QT_QPA_PLATFORM": "offscreen",
+            "PYTHONPATH": os.pathsep.join(path for path in sys.path if "site-packages" in path),
+            "QGIS_CUSTOM_CONFIG_PATH": str(profile),
+            "HOME": str(tmp_path),
+            "LC_ALL": "C.UTF-8",
+        }
+        ran = subprocess.run(
+            [PROCESS, *words],
+            env=environment,
+            capture_output=True,
+            text=True,
+            timeout=100,
+            check=False,
+        )
+        assert ran.returncode == 0, ran.stdout[-2000:] + ran.stderr[-2000:]
+        return ran.stdout
+
+    return run

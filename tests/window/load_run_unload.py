@@ -1,97 +1,112 @@
-"""Inside the window: find the toolbox, run an algorithm from its dialog, unload."""
+"""Inside the window: the toolbox, runs from dialogs and their looks, unloading, loading again."""
 
 import os
-import random
 import sys
 
 sys.path.insert(0, os.environ["STEADFIELD_SCRIPTS"])
 
-from inside import FOLDER, notes, picture, start, wait, wait_until
-from qgis.core import (
-    QgsApplication,
-    QgsFeature,
-    QgsGeometry,
-    QgsPointXY,
-    QgsProject,
-    QgsVectorLayer,
+from inside import (
+    FOLDER,
+    bar_texts,
+    log_panel,
+    notes,
+    picture,
+    run_in_dialog,
+    start,
+    wait,
+    write_records,
 )
+from qgis.core import QgsApplication, QgsProject
 from qgis.PyQt.QtWidgets import QDockWidget
-from qgis.utils import iface, plugins, unloadPlugin
+from qgis.utils import iface, loadPlugin, plugins, startPlugin, unloadPlugin
 
 
-def records():
-    """A layer of two clusters, on the map."""
-    layer = QgsVectorLayer("Point?crs=EPSG:3035", "records", "memory")
-    draw = random.Random(4)
-    features = []
-    for centre in ((4_300_000, 3_400_000), (4_303_000, 3_401_000)):
-        for _ in range(300):
-            feature = QgsFeature()
-            place = QgsPointXY(centre[0] + draw.gauss(0, 500), centre[1] + draw.gauss(0, 300))
-            feature.setGeometry(QgsGeometry.fromPointXY(place))
-            features.append(feature)
-    layer.dataProvider().addFeatures(features)
-    layer.updateExtents()
-    QgsProject.instance().addMapLayer(layer)
-    iface.mapCanvas().setExtent(layer.extent().buffered(500))
-    return layer
+def toolbox_rows():
+    """The plugin's rows of the toolbox: groups and their tools."""
+    dock = iface.mainWindow().findChild(QDockWidget, "ProcessingToolbox")
+    dock.show()
+    dock.raise_()
+    tree = dock.algorithmTree
+    model = tree.model()
+    found = []
+    for row in range(model.rowCount()):
+        index = model.index(row, 0)
+        if str(index.data()) == "Steadfield":
+            tree.expandRecursively(index)
+            tree.scrollTo(index, tree.ScrollHint.PositionAtTop)
+            groups = [model.index(group, 0, index) for group in range(model.rowCount(index))]
+            found.append(
+                {
+                    str(group.data()): [
+                        str(model.index(tool, 0, group).data())
+                        for tool in range(model.rowCount(group))
+                    ]
+                    for group in groups
+                }
+            )
+    return found
 
 
-def show_toolbox():
-    for dock in iface.mainWindow().findChildren(QDockWidget):
-        if dock.objectName() == "ProcessingToolbox":
-            dock.show()
-            dock.raise_()
-            search = dock.findChild(type(dock.searchBox))
-            search.setText("steadfield")
-            dock.searchBox.setText("")
-            notes["toolbox"] = True
-            tree = dock.algorithmTree
-            model = tree.model()
-            for row in range(model.rowCount()):
-                index = model.index(row, 0)
-                if "Steadfield" in str(index.data()):
-                    tree.expandRecursively(index)
-                    tree.scrollTo(index, tree.ScrollHint.PositionAtTop)
+def seen():
+    """What a plugin could leave behind in the window."""
+    return {
+        "providers": sorted(one.id() for one in QgsApplication.processingRegistry().providers()),
+        "toolbox": toolbox_rows(),
+        "bar": bar_texts(),
+        "docks": sorted(one.objectName() for one in iface.mainWindow().findChildren(QDockWidget)),
+        "modules": sorted(
+            name for name in sys.modules if name == "steadfield" or name.startswith("steadfield.")
+        ),
+    }
+
+
+def rasters():
+    return {
+        one.name(): (one.renderer().type(), list(one.renderer().usesBands()))
+        for one in QgsProject.instance().mapLayers().values()
+        if hasattr(one.renderer(), "usesBands")
+    }
+
+
+def run_and_look(layer):
+    density = {
+        "RECORDS": layer.id(),
+        "DENSITY": str(FOLDER / "density with a space.tif"),
+        "REPORT": str(FOLDER / "density.html"),
+    }
+    notes["density ran"] = run_in_dialog("steadfield:adaptivedensity", density, "dialog")
+    wait(1500)
+    for node in QgsProject.instance().layerTreeRoot().findLayers():
+        node.setExpanded(True)
+    picture("result")
+    variance = {
+        "RECORDS": layer.id(),
+        "REPLICATES": 20,
+        "SEED": 3,
+        "VARIANCE": str(FOLDER / "variance.tif"),
+        "TABLE": "TEMPORARY_OUTPUT",
+    }
+    notes["variance ran"] = run_in_dialog("steadfield:gridvariance", variance)
+    wait(1500)
+    picture("verdict")
+    notes["rasters"] = rasters()
 
 
 def steps():
+    layer = write_records(FOLDER / "records.gpkg")
     notes["loaded"] = "steadfield" in plugins
-    provider = QgsApplication.processingRegistry().providerById("steadfield")
-    notes["algorithms"] = sorted(a.name() for a in provider.algorithms()) if provider else []
-    layer = records()
-    show_toolbox()
-    wait(1500)
+    notes["first"] = seen()
+    wait(500)
     picture("toolbox")
-
-    import processing
-
-    target = str(FOLDER / "density with a space.tif")
-    dialog = processing.createAlgorithmDialog(
-        "steadfield:adaptivedensity",
-        {"RECORDS": layer, "DENSITY": target, "REPORT": str(FOLDER / "report.html")},
-    )
-    dialog.resize(900, 800)
-    dialog.show()
-    wait(1500)
-    picture("dialog")
-    dialog.runButton().click()
-    notes["ran"] = wait_until(lambda: any(
-        one.name() != "records" for one in QgsProject.instance().mapLayers().values()
-    ))  # fmt: skip
-    wait(1500)
-    dialog.close()
-    wait(1500)
-    picture("result")
-    for one in QgsProject.instance().mapLayers().values():
-        if one.name() != "records":
-            notes["result"] = one.name()
-            notes["renderer"] = one.renderer().type()
+    run_and_look(layer)
+    notes["unloaded"] = unloadPlugin("steadfield")
+    wait(300)
+    notes["without"] = seen()
+    notes["again"] = loadPlugin("steadfield") and startPlugin("steadfield")
+    wait(300)
+    notes["second"] = seen()
     unloadPlugin("steadfield")
-    notes["provider after unloading"] = (
-        QgsApplication.processingRegistry().providerById("steadfield") is not None
-    )
-    notes["modules kept"] = "steadfield" in plugins
+    notes["log"] = log_panel()
 
 
 start(steps)
