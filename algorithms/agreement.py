@@ -9,7 +9,7 @@ from ..plugin import alignment, looks
 from ..plugin.outputs import Column
 from ..plugin.rasters import Band, label_polygons
 from ..plugin.text import number, tr
-from . import agreement_pages
+from . import agreement_page
 from .base import SteadfieldAlgorithm
 from .numeric import agreement, ranks, shifts
 from .numeric.cell_size import two_digits
@@ -170,8 +170,8 @@ class Agreement(SteadfieldAlgorithm):
         job.give("ZONE_AREA", float(findings.areas.sum()))
         job.give("LEAST_AREA_USED", least_area)
         if job.wanted("REPORT"):
-            report = agreement_pages.report(grid, findings, pixel_area, job.whole("LEAST_LAYERS"))
-            job.write_report(report, agreement_pages.METHOD, agreement_pages.CAUTIONS)
+            report = agreement_page.report(grid, findings, pixel_area, job.whole("LEAST_LAYERS"))
+            job.write_report(report, agreement_page.METHOD, agreement_page.CAUTIONS)
 
 
 def check_memory(job, grid, count):
@@ -261,7 +261,7 @@ def write_zones(job, findings):
         Column(
             "layers",
             "text",
-            agreement_pages.core_names(findings),
+            agreement_page.core_names(findings),
             tr("Layers with their core here"),
         ),
     ]
