@@ -31,7 +31,8 @@ class Sums:
     least : (atoms,) float array
         What an outsider knows each atom to hold at least, all parts together.
     lone : (atoms,) bool array
-        Atoms of one contributor only: that contributor knows them, so they protect nobody else.
+        Atoms that protect no other: those of one contributor, who knows them, and with them the
+        smallest unsafe atom of each region, so that it does not show where one contributor is.
     """
 
     members: sparse.csr_matrix

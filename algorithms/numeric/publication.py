@@ -168,7 +168,8 @@ def table_of(
         sparse.vstack(members).tocsr(),
         atoms_behind.values(),
         np.ones(count) if weights is None else np.zeros(count),
-        atoms_behind.whole.contributors <= 1,
+        (atoms_behind.whole.contributors <= 1)
+        | _smallest(atoms_behind.whole, behinds[0].unsafe[stretches[0][0]], atom_region),
     )
     targets = _targets(sums, behinds, atoms_behind, rules)
     return Table(
@@ -180,6 +181,19 @@ def table_of(
         present,
         grand_total,
     )
+
+
+def _smallest(whole, unsafe, region):
+    """The smallest unsafe atom of each region: it protects no other, as if it were one person's.
+
+    Were only those left out that are one person's, a total published over two withheld cells would
+    tell that neither is.
+    """
+    order = np.lexsort((whole.total, ~unsafe, region))
+    first = np.unique(region[order], return_index=True)[1]
+    smallest = np.zeros(len(unsafe), bool)
+    smallest[order[first]] = True
+    return smallest & unsafe
 
 
 def _only(values, inside):

@@ -1,5 +1,6 @@
 """Whole releases by every method, and what the attacker makes of what is published."""
 
+import itertools
 import sys
 from pathlib import Path
 
@@ -96,6 +97,27 @@ def test_a_withheld_zone_does_not_show_by_its_shape_that_it_had_been_merged():
         assert len(sizes) == len(made.unsafe) == len(made.count())
         seen += made.complementary.any()
     assert seen > 5
+
+
+def test_what_is_withheld_tells_no_count_to_one_who_knows_the_method():
+    """Enumeration: all counts of three cells with a total below 7, and what they can lead to."""
+    behind = {}
+    for counts in itertools.product(range(5), repeat=3):
+        if not 3 < sum(counts) < 7:
+            continue
+        records = Records(np.repeat(np.arange(3), counts))
+        for seed in range(4):
+            made = run(records, 3, 0, rules=Rules(3), grand_total=True, show_empty=True, seed=seed)
+            if np.isfinite(made.grand_values[0]):
+                figures = *np.nan_to_num(made.count(), nan=-1.0), made.grand_values[0]
+                behind.setdefault(figures, []).append(counts)
+    checked = 0
+    for figures, tables in behind.items():
+        for cell in np.flatnonzero(np.array(figures[:3]) < 0):
+            small = {counts[cell] for counts in tables} & {1, 2}
+            assert small in (set(), {1, 2}), (figures, tables)
+            checked += bool(small)
+    assert checked > 0
 
 
 def rounded_case(made, count, records, base, region_totals, grand_total):
