@@ -191,7 +191,7 @@ class GridVariance(SteadfieldAlgorithm):
         study = prepare(self, job)
         job.inform(
             tr("Cell sizes (m): {}").format(
-                ", ".join(number(size * job.working.metres) for size in study.sizes)
+                ", ".join(number(size * job.working.metres, 6) for size in study.sizes)
             )
         )
         outcome = simulate(job, study)
@@ -304,7 +304,7 @@ def give_numbers(job, study, outcome):
     job.give("SHARE_BELOW", below)
     job.inform(
         tr("Threshold: {} {}. Holds above: {} of the total, holds below: {}.").format(
-            number(study.ground.threshold * study.factor),
+            number(study.ground.threshold * study.factor, 6),
             study.unit,
             percent(above),
             percent(below),
