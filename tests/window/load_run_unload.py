@@ -76,8 +76,7 @@ def run_and_look(layer):
     }
     notes["density ran"] = run_in_dialog("steadfield:adaptivedensity", density, "dialog")
     wait(1500)
-    for node in QgsProject.instance().layerTreeRoot().findLayers():
-        node.setExpanded(True)
+    iface.layerTreeView().expandAll()
     picture("result")
     variance = {
         "RECORDS": layer.id(),
