@@ -9,7 +9,7 @@ import shapely
 from .hexagons import HEXAGON_NEIGHBOURS
 from .progress import part, silent
 
-COST_SPREAD = 0.25
+COST_SPREAD = 0.5
 
 
 @dataclass
@@ -46,8 +46,8 @@ def merge_cells(q, r, totals, unsafe_zones, limit, rng, progress=silent, apart=N
 
     In rounds, every unsafe zone joins the neighbour that costs least: the loss of detail (squared
     Hellinger distance to an even spread over the zone), dearer the further the zone reaches. Then
-    the records of all new zones are counted again. Costs carry a random factor, so that nobody can
-    conclude from a merge which other merges would have been cheaper.
+    the records of all new zones are counted again. Costs and the order of the zones carry a random
+    factor, so that nobody can conclude from a merge which others would have been cheaper.
 
     Parameters
     ----------
@@ -68,7 +68,9 @@ def merge_cells(q, r, totals, unsafe_zones, limit, rng, progress=silent, apart=N
     -------
     zones : (cells,) int64 array
         Zone of each cell, from 0. A cell of a zone that could not become safe stands alone.
-    unsafe : (zones,) bool array
+    failed : (zones,) bool array
+        Zones that are unsafe, and single cells of zones that were: one that is empty tells, if it
+        is shown as such, how few hold what was not enough together.
     """
     q, r = np.asarray(q, np.int64), np.asarray(r, np.int64)
     places = np.stack([q, r, q + r], axis=1)
@@ -113,13 +115,16 @@ def _neighbours(q, r, apart):
 def _merge_round(zones, zone_of, neighbours, open_zones, stuck, limit, rng, progress):
     """Let every unsafe zone join a neighbour that was not touched in this round."""
     touched = set()
-    chances = rng.random(len(open_zones))
-    queue = [(zones[name].total, chance, name) for name, chance in zip(sorted(open_zones), chances)]
+    chances = np.exp(COST_SPREAD * rng.standard_normal(len(open_zones)))
+    queue = [
+        ((zones[name].total + 1.0) * chance, name)
+        for name, chance in zip(sorted(open_zones), chances)
+    ]
     heapq.heapify(queue)
     while queue:
         if len(queue) % 200 == 0:
             progress(0.5)
-        _, _, name = heapq.heappop(queue)
+        _, name = heapq.heappop(queue)
         if name in touched:
             continue
         zone = zones[name]
@@ -161,7 +166,9 @@ def _numbered(zones, cell_count, unsafe_zones):
     order = np.empty(len(first), np.int64)
     order[np.argsort(first, kind="stable")] = np.arange(len(first))
     zone_of = order[np.unique(zone_of, return_inverse=True)[1].reshape(-1)]
-    return zone_of, unsafe_zones(zone_of, len(first))
+    failed = unsafe_zones(zone_of, len(first))
+    failed[zone_of[apart]] = True
+    return zone_of, failed
 
 
 def zone_polygons(polygons, zones, zone_count):

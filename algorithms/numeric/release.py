@@ -192,9 +192,9 @@ def release(records, q, r, region_count, plan, progress=silent, apart=None):
     rng = np.random.default_rng(np.random.SeedSequence(secret))
     if plan.method == NOISE:
         return _noisy(records, len(q), region_count, plan, rng, progress)
-    zones = np.arange(len(q))
+    zones, failed = np.arange(len(q)), np.zeros(len(q), bool)
     if plan.method == MERGE:
-        zones = _merged(records, q, r, plan, rng, part(progress, 0.0, 0.4), apart)
+        zones, failed = _merged(records, q, r, plan, rng, part(progress, 0.0, 0.4), apart)
         progress = part(progress, 0.4, 1.0)
     count = int(zones.max(initial=-1)) + 1
     behind = records.behind(zones, count, plan.rules)
@@ -222,7 +222,7 @@ def release(records, q, r, region_count, plan, progress=silent, apart=None):
     shown = np.where(published, values, np.nan)
     made = Release(
         zones,
-        np.array([table.spread(one, count, empty) for one in shown]),
+        np.array([_of_zones(table, one, failed, empty) for one in shown]),
         _regions(table, shown, region_count, plan),
         shown[:, -1] if table.grand else np.full(len(shown), np.nan),
         behind.unsafe,
@@ -253,6 +253,14 @@ def _apart_where_withheld(made, records, plan):
     )
 
 
+def _of_zones(table, shown, failed, empty):
+    """Values of all zones; an empty cell of a zone that failed looks like the others of it."""
+    values = table.spread(shown, len(failed), empty)
+    silent_ones = np.setdiff1d(np.flatnonzero(failed), table.cells)
+    values[silent_ones] = np.nan
+    return values
+
+
 def _regions(table, shown, region_count, plan):
     values = np.full((len(shown), region_count), np.nan)
     if plan.region_totals:
@@ -264,7 +272,7 @@ def _regions(table, shown, region_count, plan):
 
 
 def _merged(records, q, r, plan, rng, progress, apart):
-    """Zones in which every unsafe cell has found enough company."""
+    """Zones in which unsafe cells have found company, and those where it was not enough."""
 
     def unsafe_zones(zones, count):
         behind = records.behind(zones, count, plan.rules)
@@ -272,8 +280,7 @@ def _merged(records, q, r, plan, rng, progress, apart):
 
     inside = records.cells[records.cells >= 0]
     totals = np.bincount(inside, minlength=len(q)).astype(float)
-    zones, _ = merge_cells(q, r, totals, unsafe_zones, plan.reach, rng, progress, apart)
-    return zones
+    return merge_cells(q, r, totals, unsafe_zones, plan.reach, rng, progress, apart)
 
 
 def _not_protected_by_rounding(table, plan):

@@ -120,6 +120,17 @@ def test_what_is_withheld_tells_no_count_to_one_who_knows_the_method():
     assert checked > 0
 
 
+def test_empty_cells_of_a_zone_that_failed_are_not_shown_as_such():
+    """Two cells that hold 1 each: were the third shown as 0, less than 3 would tell both."""
+    q, r = np.array([0, 1, 0]), np.array([0, 0, 1])
+    for seed in range(5):
+        plan = Plan(method="merge", rules=Rules(3), show_empty=True, seed=seed)
+        made = release(Records(np.array([1, 2])), q, r, 0, plan)
+        assert made.withheld.all() and len(made.withheld) == 3
+    far = release(Records(np.array([1, 2])), np.append(q, 40), np.append(r, 0), 0, plan)
+    assert far.count()[3] == 0
+
+
 def rounded_case(made, count, records, base, region_totals, grand_total):
     """What an outsider knows of a rounded release: every figure lies within the base."""
     pieces = np.unique(np.column_stack([records.cells, records.regions]), axis=0)
