@@ -8,7 +8,7 @@ from ..plugin.text import number, percent, tr
 from .base import SteadfieldAlgorithm
 from .cellsize_page import answer_words, write_page
 from .gridvariance_study import SHAPES
-from .numeric import cell_size
+from .numeric import cell_size, hexagons
 from .numeric.errors import InputError
 from .numeric.progress import part
 
@@ -92,6 +92,9 @@ class CellSize(SteadfieldAlgorithm):
                 )
             )
         sizes = np.array(asked) / metres if asked else cell_size.sizes_to_try(x, y)
+        # a turned extent takes up to about three times its cells
+        across, up = np.ptp(x) / sizes.min() + 2, np.ptp(y) / sizes.min() + 2
+        job.check_cells("CELL_SIZES", sizes.min(), 3 * across * up, hexagons.MOST_CELLS)
         found = cell_size.sweep(
             x,
             y,

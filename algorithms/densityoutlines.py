@@ -131,7 +131,8 @@ def read_density(job, shares):
     layer = job.algorithm.parameterAsRasterLayer(job.parameters, "DENSITY", job.context)
     if layer is None or not layer.isValid():
         raise InputError(tr("{}: the raster cannot be read.").format(job.label("DENSITY")))
-    working, grid = alignment.common_grid(layer, job.context.transformContext())
+    with job.naming("DENSITY"):
+        working, grid = alignment.common_grid(layer, job.context.transformContext())
     job.take_working_crs(working)
     needed = (BYTES_PER_PIXEL + BYTES_PER_LABEL * shares) * float(grid.rows) * grid.columns
     if needed > MEMORY_SHARE * machine_memory():
@@ -144,7 +145,8 @@ def read_density(job, shares):
                 job.label("DENSITY"), number(grid.rows), number(grid.columns), number(coarser, 2)
             )
         )
-    aligned = alignment.align(layer, grid, working.crs, job.whole("BAND"))
+    with job.naming("DENSITY"):
+        aligned = alignment.align(layer, grid, working.crs, job.whole("BAND"))
     job.inform(tr("{}: {}").format(layer.name(), aligned.how))
     density = np.empty(grid.shape)
     for window in alignment.windows(grid):

@@ -89,7 +89,7 @@ def prepare(algorithm, job):
         totals = background.x, background.y, background.count
         factor, unit, kind = 1000.0, tr("per 1000"), job.choice("KIND", KINDS)
         check_share(job, kind, records.count.sum(), background.count.sum())
-    grid, rows, columns = evaluated_pixels(area, cell, (records.x, records.y), totals[:2])
+    grid, rows, columns = evaluated_pixels(job, area, cell, (records.x, records.y), totals[:2])
     check_work(job, grid, len(rows), sizes)
     threshold = job.real("THRESHOLD")
     packed = ground(
@@ -297,7 +297,7 @@ def area_as_total(job, area, sizes, cell):
     return spread.area_samples(area, spacing)
 
 
-def evaluated_pixels(area, cell, *points):
+def evaluated_pixels(job, area, cell, *points):
     """The grid, and the pixels whose centre is in the area or that hold a point.
 
     Returns
@@ -309,12 +309,7 @@ def evaluated_pixels(area, cell, *points):
     left, bottom, right, top = area.bounds
     bounds = min(left, x.min()), min(bottom, y.min()), max(right, x.max()), max(top, y.max())
     grid = covering(bounds, cell)
-    if grid.rows * grid.columns > MOST_PIXELS:
-        raise InputError(
-            tr("The evaluated pixels would number {}; choose larger ones.").format(
-                number(grid.rows * grid.columns)
-            )
-        )
+    job.check_cells("EVALUATION_CELL", cell, grid.rows * grid.columns, MOST_PIXELS)
     mask = np.zeros(grid.shape, bool)
     if area.area > 0:
         shapely.prepare(area)

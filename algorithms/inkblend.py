@@ -12,6 +12,9 @@ from .numeric.colour import to_hex
 from .numeric.errors import InputError
 from .numeric.progress import part
 
+# a picture of more pixels takes hours and tens of gigabytes
+MOST_PIXELS = 4_000_000_000
+
 STRETCHES = {
     "share": tr("by share of the layer's total that lies in no denser places"),
     "linear": tr("in proportion to the value"),
@@ -67,6 +70,7 @@ class InkBlend(SteadfieldAlgorithm):
 
     def work(self, job):
         grid, layers = job.rasters("LAYERS", most=ink.MOST_LAYERS)
+        job.check_cells("CELL_SIZE", grid.cell, grid.rows * grid.columns, MOST_PIXELS)
         names = [layer.name for layer in layers]
         inks = chosen_inks(job, names)
         strengths = chosen_strengths(job, len(layers))

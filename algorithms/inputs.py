@@ -7,6 +7,7 @@ from qgis.core import QgsVectorLayer
 from ..plugin import alignment, layers, reference_system
 from ..plugin.host import field_names
 from ..plugin.text import number, tr
+from .numeric.cell_size import two_digits
 from .numeric.errors import InputError
 from .settings import Settings, table_name
 
@@ -40,16 +41,15 @@ class Inputs(Settings):
         _, source = self._source(name)
         transform_context = self.context.transformContext()
         given = self.algorithm.parameterDefinition("WORKING_CRS") and self.given("WORKING_CRS")
-        try:
-            if given:
-                crs = self.algorithm.parameterAsCrs(self.parameters, "WORKING_CRS", self.context)
+        if given:
+            crs = self.algorithm.parameterAsCrs(self.parameters, "WORKING_CRS", self.context)
+            with self.naming("WORKING_CRS"):
                 self._working = reference_system.chosen_crs(crs)
-            else:
+        else:
+            with self.naming(name):
                 self._working = reference_system.working_crs(
-                    source.sourceCrs(), source.sourceExtent(), transform_context
+                    source.sourceCrs(), layers.finite_extent(source), transform_context
                 )
-        except InputError as error:
-            raise InputError(f"{self.label(name)}: {error}") from error
         self.inform(
             tr("Working CRS: {} ({})").format(
                 self._working.crs.userFriendlyIdentifier(), self._working.note
@@ -61,13 +61,38 @@ class Inputs(Settings):
         """Settle the working CRS from outside, for algorithms that start from rasters."""
         self._working = working
 
+    def check_cells(self, name, size, cells, most):
+        """Refuse cells of a size of which there would be too many, and name a size that serves.
+
+        Parameters
+        ----------
+        name : str
+            Parameter of the size.
+        size : float
+            Units of the working CRS.
+        cells, most : float
+            How many there would be, and how many are taken.
+        """
+        if cells <= most:
+            return
+        workable = size * (cells / most) ** 0.5 * self.working.metres
+        raise InputError(
+            tr("{}: {} cells of {} m are too many for this extent; choose {} m or more.").format(
+                self.label(name),
+                number(cells),
+                number(size * self.working.metres),
+                number(two_digits(workable * 1.05)),
+            )
+        )
+
     def _read(self, read, name, **fields):
         layer, source = self._source(name)
         if source.featureCount() == 0:
             raise InputError(tr("{}: the layer has no features.").format(self.label(name)))
         working = self.choose_working_crs(name)
         self.progress(0.0)
-        found = read(layer, source, working.crs, self.context.transformContext(), **fields)
+        with self.naming(name):
+            found = read(layer, source, working.crs, self.context.transformContext(), **fields)
         for reason, count in found.skipped.items():
             self.warn(
                 tr("{}: {} features {} were left out.").format(
@@ -83,7 +108,7 @@ class Inputs(Settings):
         return found
 
     def table(self, name):
-        """A layer as it is stored, nothing left out: for checks of the data themselves.
+        """A point layer as it is stored, nothing left out: for checks of the data themselves.
 
         Returns
         -------
@@ -100,6 +125,8 @@ class Inputs(Settings):
             numbered |= {layer.fields().at(i).name() for i in layer.primaryKeyAttributes()}
         fields = [field.name() for field in source.fields() if field.name() not in numbered]
         geometry, values, _ = layers.read_table(layer, source, fields)
+        with self.naming(name):
+            layers.check_kind(geometry, layers.POINT_KINDS, tr("points"))
         return source, geometry, values
 
     def field(self, name):
@@ -126,7 +153,14 @@ class Inputs(Settings):
         plugin.layers.Records
         """
         weight_field = self.field(weight) if weight else None
-        return self._read(layers.read_records, name, weight=weight_field, fields=fields)
+        found = self._read(layers.read_records, name, weight=weight_field, fields=fields)
+        if weight_field and not (found.weight > 0).any():
+            raise InputError(
+                tr(
+                    "{}: no record has a value above 0 in {}; choose another field, or none."
+                ).format(self.label(weight), weight_field)
+            )
+        return found
 
     def polygons(self, name, fields=()):
         """Polygon features in the working CRS, as `plugin.layers.Polygons`."""
@@ -136,10 +170,9 @@ class Inputs(Settings):
         """The study area as one valid geometry in the working CRS, None where none is given."""
         if not self.given(name):
             return None
-        try:
-            return layers.union_of(self.polygons(name))
-        except InputError as error:
-            raise InputError(f"{self.label(name)}: {error}") from error
+        polygons = self.polygons(name)
+        with self.naming(name):
+            return layers.union_of(polygons)
 
     def layer_names(self, name):
         """Names of the layers of a list, for legends and reports; no two are alike.
@@ -190,10 +223,12 @@ class Inputs(Settings):
         if self.given("GRID"):
             followed = self.algorithm.parameterAsRasterLayer(self.parameters, "GRID", self.context)
         transform_context = self.context.transformContext()
-        self._working, grid = alignment.common_grid(
-            followed, transform_context, self.metres("CELL_SIZE")
-        )
-        alignment.check_overlap(chosen, grid, self._working.crs, transform_context)
+        with self.naming("GRID" if self.given("GRID") else name):
+            self._working, grid = alignment.common_grid(
+                followed, transform_context, self.metres("CELL_SIZE")
+            )
+        with self.naming(name):
+            alignment.check_overlap(chosen, grid, self._working.crs, transform_context)
         self.inform(
             tr("Grid: {} x {} pixels of {} m, as {}; {} ({})").format(
                 number(grid.rows),
@@ -204,11 +239,12 @@ class Inputs(Settings):
                 self._working.note,
             )
         )
-        band = self.whole("BAND")
-        aligned = [
-            replace(alignment.align(layer, grid, self._working.crs, band), name=words)
-            for layer, words in zip(chosen, self.layer_names(name))
-        ]
+        band, names = self.whole("BAND"), self.layer_names(name)
+        with self.naming(name):
+            aligned = [
+                replace(alignment.align(layer, grid, self._working.crs, band), name=words)
+                for layer, words in zip(chosen, names)
+            ]
         for layer in aligned:
             self.inform(tr("{}: {}").format(layer.name, layer.how))
         return grid, aligned

@@ -2,6 +2,8 @@
 
 import os
 
+from qgis.core import QgsProcessingException
+
 from ..plugin import outputs, rasters
 from ..plugin.looks import style_output
 from ..plugin.pictures import drawing_to_png
@@ -40,13 +42,15 @@ class Job(Inputs):
         if not self.wanted(name):
             return
         path = self.algorithm.parameterAsOutputLayer(self.parameters, name, self.context)
-        rasters.write_raster(path, grid, self.working.crs, bands, self._check, **how)
+        with self.naming(name):
+            rasters.write_raster(path, grid, self.working.crs, bands, self._check, **how)
         self._keep(name, path, "raster", look)
 
     def write_picture(self, name, grid, windows, levels_of, look, progress):
         """Write a picture with transparency window by window, see `rasters.write_picture`."""
         path = self.algorithm.parameterAsOutputLayer(self.parameters, name, self.context)
-        rasters.write_picture(path, grid, self.working.crs, windows, levels_of, progress)
+        with self.naming(name):
+            rasters.write_picture(path, grid, self.working.crs, windows, levels_of, progress)
         self._keep(name, path, "raster", look)
 
     def write_layer(self, name, columns, geometry, kind, look=None):
@@ -67,9 +71,13 @@ class Job(Inputs):
         fields = outputs.fields_of(columns)
         if kind == "polygon":
             geometry = outputs.as_multipolygons(geometry)
-        sink, target = self.algorithm.parameterAsSink(
-            self.parameters, name, self.context, fields, outputs.GEOMETRIES[kind], self.working.crs
-        )
+        shape = outputs.GEOMETRIES[kind]
+        try:
+            sink, target = self.algorithm.parameterAsSink(
+                self.parameters, name, self.context, fields, shape, self.working.crs
+            )
+        except QgsProcessingException as error:
+            raise InputError(f"{self.label(name)}: {error}") from error
         if sink is None:
             raise InputError(tr("{}: the layer cannot be written.").format(self.label(name)))
         self._written.append(target)
@@ -122,6 +130,9 @@ class Job(Inputs):
             raise InputError(
                 tr("{}: the file cannot be written: {}").format(self.label(name), error.strerror)
             ) from error
+        finally:
+            if os.path.exists(waiting):
+                os.remove(waiting)
         self._written.append(path)
         self.results[name] = path
 

@@ -19,6 +19,7 @@ from ..plugin.outputs import Column
 from ..plugin.reference_system import chosen_crs
 from ..plugin.text import number, tr
 from .base import SteadfieldAlgorithm
+from .numeric.errors import InputError
 from .numeric.practice import CRS, make_district
 from .numeric.practice_people import AGE_BANDS, SEVERITIES
 from .numeric.practice_streets import ADDRESS_KINDS, STREET_KINDS
@@ -88,16 +89,28 @@ class PracticeDistrict(SteadfieldAlgorithm):
         size = job.choice("SIZE", SIZES)
         district = make_district(seed, size, part(job.progress, 0.0, 0.6))
         folder = self.parameterAsString(job.parameters, "FOLDER", job.context)
-        os.makedirs(folder, exist_ok=True)
         path = os.path.join(folder, FILE_NAME)
         tables = tables_of(district)
-        write_geopackage(
-            path,
-            job.working.crs,
-            tables,
-            job.context.transformContext(),
-            part(job.progress, 0.6, 1.0),
-        )
+        began_without = not os.path.isdir(folder)
+        try:
+            os.makedirs(folder, exist_ok=True)
+            with job.naming("FOLDER"):
+                write_geopackage(
+                    path,
+                    job.working.crs,
+                    tables,
+                    job.context.transformContext(),
+                    part(job.progress, 0.6, 1.0),
+                )
+        except OSError as error:
+            raise InputError(
+                tr("{}: nothing can be written there: {}").format(
+                    job.label("FOLDER"), error.strerror
+                )
+            ) from error
+        finally:
+            if began_without and os.path.isdir(folder) and not os.listdir(folder):
+                os.rmdir(folder)
         if job.flag("OPEN") and job.context.project() is not None:
             _open_when_done(path, tables, job.context)
         job.inform(

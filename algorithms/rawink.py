@@ -155,7 +155,7 @@ def settle_crs(job, sources):
     else:
         first = sources[0]
         try:
-            working = working_crs(first.sourceCrs(), first.sourceExtent(), transform_context)
+            working = working_crs(first.sourceCrs(), layers.finite_extent(first), transform_context)
         except InputError as error:
             raise InputError(f"{job.label('LAYERS')}: {first.sourceName()}: {error}") from error
     job.take_working_crs(working)

@@ -79,7 +79,9 @@ def _settle_working_crs(job, layer):
             crs = job.algorithm.parameterAsCrs(job.parameters, "WORKING_CRS", job.context)
             working = reference_system.chosen_crs(crs)
         else:
-            working = reference_system.working_crs(layer.crs(), layer.extent(), transform_context)
+            source = QgsProcessingFeatureSource(layer, job.context)
+            extent = vector_layers.finite_extent(source)
+            working = reference_system.working_crs(layer.crs(), extent, transform_context)
     except InputError as error:
         raise InputError(f"{job.label('RELEASES')}: {layer.name()}: {error}") from error
     job.take_working_crs(working)
@@ -117,9 +119,10 @@ def _read(job, layer, name, order, given):
     label_field = _label_field(job, layer, name, given["LABEL_FIELDS"], count_field)
     wanted = [count_field] + ([label_field] if label_field else [])
     source = QgsProcessingFeatureSource(layer, job.context)
-    found = vector_layers.read_polygons(
-        layer, source, job.working.crs, job.context.transformContext(), wanted
-    )
+    with job.naming("RELEASES", name):
+        found = vector_layers.read_polygons(
+            layer, source, job.working.crs, job.context.transformContext(), wanted
+        )
     job.progress(0.0)
     for reason, count in found.skipped.items():
         job.warn(tr("{}: {} zones {} were left out.").format(name, number(count), reason))

@@ -114,6 +114,9 @@ def prepare(job):
                 job.label("HEXAGON_SIZE"), number(size * job.working.metres)
             )
         )
+    left, bottom, right, top = ground.bounds
+    cells = ((right - left) / size + 4) * ((top - bottom) / (0.866 * size) + 4)
+    job.check_cells("HEXAGON_SIZE", size, cells, MOST_CELLS)
     q, r = hexagons.cells_covering(ground, size, orientation=orientation, most=MOST_CELLS)
     records = Records(
         cells_of(q, r, *hexagons.hexagon_cells(x, y, size, orientation)),

@@ -55,12 +55,12 @@ class Settings:
         return f"{self.algorithm.parameterDefinition(name).description()} ({name})"
 
     @contextmanager
-    def naming(self, name):
-        """Put a parameter before the message of an error that is raised inside."""
+    def naming(self, name, *which):
+        """Put a parameter, and which of its layers, before the message of an error inside."""
         try:
             yield
         except InputError as error:
-            raise InputError(f"{self.label(name)}: {error}") from error
+            raise InputError(": ".join([self.label(name), *which, str(error)])) from error
 
     def given(self, name):
         """Whether an optional input was set."""

@@ -9,6 +9,7 @@ from qgis.core import (
     QgsFeatureRequest,
     QgsGeometry,
     QgsProviderRegistry,
+    QgsRectangle,
     QgsWkbTypes,
 )
 from qgis.PyQt.QtCore import Qt
@@ -17,6 +18,9 @@ from ..algorithms.numeric.errors import InputError
 from .host import BIG_INTEGER, INTEGER, REAL, SKIP_VALIDITY_CHECKS, TEXT, is_null
 from .reference_system import reproject
 from .text import tr
+
+# type ids of shapely: single and multiple
+POINT_KINDS, POLYGON_KINDS = (0, 4), (3, 6)
 
 
 @dataclass(frozen=True)
@@ -238,6 +242,29 @@ def as_floats(values):
     return result
 
 
+def check_kind(geometry, kinds, words):
+    """Refuse geometry of another kind than a parameter takes; the host lets any layer through."""
+    found = shapely.get_type_id(geometry[~shapely.is_empty(geometry)])
+    if not np.isin(found, (-1, *kinds)).all():
+        raise InputError(
+            tr("{} are expected; the layer holds other geometry. Choose another layer.").format(
+                words
+            )
+        )
+
+
+def finite_extent(source):
+    """Extent of a source without the coordinates that are not finite."""
+    extent = source.sourceExtent()
+    sides = extent.xMinimum(), extent.yMinimum(), extent.xMaximum(), extent.yMaximum()
+    if np.isfinite(sides).all():
+        return extent
+    wkb, _, _ = _read_features(source, [])
+    places = shapely.get_coordinates(shapely.from_wkb(wkb, on_invalid="ignore"))
+    places = places[np.isfinite(places).all(axis=1)]
+    return QgsRectangle(*places.min(axis=0), *places.max(axis=0)) if len(places) else extent
+
+
 def read_records(layer, source, target, transform_context, weight=None, fields=()):
     """Point records in the working CRS, with a count of every kind that was left out.
 
@@ -260,6 +287,7 @@ def read_records(layer, source, target, transform_context, weight=None, fields=(
     """
     wanted = list(dict.fromkeys([*fields, *([weight] if weight else [])]))
     geometry, values, _ = read_table(layer, source, wanted)
+    check_kind(geometry, POINT_KINDS, tr("points"))
     places, feature = shapely.get_coordinates(geometry, return_index=True)
     filled = np.zeros(len(geometry), bool)
     filled[feature] = True
@@ -297,6 +325,7 @@ def read_polygons(layer, source, target, transform_context, fields=()):
     Polygons
     """
     geometry, values, ids = read_table(layer, source, list(fields))
+    check_kind(geometry, POLYGON_KINDS, tr("polygons"))
     geometry = shapely.force_2d(geometry) if len(geometry) else geometry
     filled = ~(shapely.is_missing(geometry) | shapely.is_empty(geometry))
     skipped = {tr("without geometry"): int((~filled).sum())}

@@ -78,7 +78,9 @@ def write_raster(path, grid, crs, bands, progress, no_data=NO_DATA, kind=gdal.GD
         os.replace(waiting, path)
     except (RuntimeError, OSError) as error:
         raise InputError(
-            tr("The raster {} cannot be written: {}").format(os.path.basename(path), error)
+            tr("The raster {} cannot be written: {}").format(
+                os.path.basename(path), getattr(error, "strerror", None) or error
+            )
         ) from error
     finally:
         for left_over in (waiting, waiting + ".aux.xml"):
@@ -122,7 +124,9 @@ def write_picture(path, grid, crs, windows, levels_of, progress):
         os.replace(waiting, path)
     except (RuntimeError, OSError) as error:
         raise InputError(
-            tr("The raster {} cannot be written: {}").format(os.path.basename(path), error)
+            tr("The raster {} cannot be written: {}").format(
+                os.path.basename(path), getattr(error, "strerror", None) or error
+            )
         ) from error
     finally:
         dataset = None

@@ -80,7 +80,10 @@ def area_scale_range(crs, extent, transform_context):
     """
     measure = QgsDistanceArea()
     measure.setSourceCrs(crs, transform_context)
-    measure.setEllipsoid(crs.ellipsoidAcronym() or "EPSG:7030")
+    # an ellipsoid without a code would leave the host without its geographic CRS; those of the
+    # Earth differ by less than 0.1 % in area
+    named = crs.ellipsoidAcronym()
+    measure.setEllipsoid(named if named.startswith("EPSG:") else "EPSG:7030")
     metres = _unit_factor(crs)
     side = 1000.0 / metres
     ratios = []
@@ -121,6 +124,11 @@ def working_crs(crs, extent, transform_context):
     if not crs.isValid():
         raise InputError(
             tr("The layer has no coordinate reference system; set its CRS, then run again.")
+        )
+    corners = extent.xMinimum(), extent.yMinimum(), extent.xMaximum(), extent.yMaximum()
+    if not np.isfinite(corners).all():
+        raise InputError(
+            tr("The layer has no extent; check that its coordinates are numbers, and its geometry.")
         )
     if not crs.isGeographic() and 0.3 <= _unit_factor(crs) <= 1.0:
         try:
