@@ -165,3 +165,28 @@ def save_layer(tmp_path):
 
 
 sys.path.extend(path for path in HOST_PLUGINS if Path(path).is_dir() and path not in sys.path)
+
+
+def pytest_terminal_summary(terminalreporter):
+    """Print the table of bad input: what became of each algorithm with each kind of it."""
+    cells = {}
+    for outcome in ("passed", "failed", "skipped"):
+        for report in terminalreporter.getreports(outcome):
+            for name, words in getattr(report, "user_properties", ()):
+                if name == "bad input":
+                    algorithm, kind, code = words.split()
+                    cells[algorithm, kind] = code if outcome == "passed" else "FAIL"
+    if not cells:
+        return
+    from bad_input import CODES, KINDS
+
+    algorithms = list(dict.fromkeys(algorithm for algorithm, _ in cells))
+    widest = max(map(len, algorithms))
+    terminalreporter.section("bad input")
+    heading = " ".join(f"{kind:>5}" for kind in KINDS)
+    terminalreporter.write_line(f"{'':{widest}} {heading}")
+    for algorithm in algorithms:
+        row = " ".join(f"{cells.get((algorithm, kind), ''):>5}" for kind in KINDS)
+        terminalreporter.write_line(f"{algorithm:{widest}} {row}")
+    for words in (CODES, KINDS):
+        terminalreporter.write_line("; ".join(f"{key}: {value}" for key, value in words.items()))
