@@ -16,7 +16,7 @@ from .relabelling import (
     relabelled_counts,
     relabelled_values,
 )
-from .surface import effective_records, squared_surface
+from .surface import effective_records, sampling_variance
 
 # Ratios beyond this, either way, are not told apart: the kernels' tails would decide
 LARGEST_RATIO = 100.0
@@ -70,7 +70,7 @@ class Contrast:
     noise : (rows, columns) array
         Standard deviation that the log ratio would have if labels were given at random.
     support : (rows, columns) array
-        Effective number of background records behind a pixel.
+        Effective number of background records behind a pixel, 1 where only tails of kernels meet.
     shown : (rows, columns) bool array
         Inside the boundary and with enough background.
     bandwidths : (n,) array
@@ -245,16 +245,19 @@ def density_contrast(
     sums = KernelSums(pooled.x, pooled.y, kernels, grid)
     records, background = sums.sums(np.column_stack(pooled.split))
     progress(0.6)
+    # the transforms leave rounding errors below 0 where nothing reaches
+    records, background = np.maximum(records, 0.0), np.maximum(background, 0.0)
     own = slice(pooled.records, None)
-    squares = squared_surface(
+    squares = sampling_variance(
         pooled.x[own],
         pooled.y[own],
         pooled.weights[own],
         kernels[own],
+        background,
         grid,
         progress=part(progress, 0.6, 0.8),
     )
-    support = effective_records(np.maximum(background, 0.0), squares)
+    support = effective_records(background, squares)
     shown = support >= least_support
     if mask is not None:
         shown &= mask >= 0.5
@@ -286,8 +289,10 @@ def _noise(pooled, bandwidths, grid, total, progress):
     units and with w^2 for values: sampling without replacement, and d log r = df/f - dg/g.
     """
     weights = np.sqrt(pooled.weights) if pooled.counted else pooled.weights
-    squares = squared_surface(pooled.x, pooled.y, weights, bandwidths, grid, progress=progress)
-    effective = effective_records(np.maximum(total, 0.0), squares)
+    squares = sampling_variance(
+        pooled.x, pooled.y, weights, bandwidths, total, grid, progress=progress
+    )
+    effective = effective_records(total, squares)
     share = pooled.totals[0] / sum(pooled.totals)
     noise = np.full(grid.shape, np.inf)
     reached = effective > 0

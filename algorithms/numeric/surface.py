@@ -136,7 +136,8 @@ def sampling_variance(x, y, weights, bandwidths, total, grid, kernel="gaussian",
     Parameters
     ----------
     total : (rows, columns) array
-        The surface of the same arguments.
+        The surface of the same arguments, 0 or more. For weights that stand for w_i units each,
+        pass their square roots as weights and the surface of the w_i.
     x, y, weights, bandwidths, grid, kernel, progress
         As for adaptive_surface; weights not negative.
 
@@ -151,6 +152,10 @@ def sampling_variance(x, y, weights, bandwidths, total, grid, kernel="gaussian",
     heights = adaptive_surface(
         x, y, weights * peaks, bandwidths, grid, kernel, part(progress, 0.5, 1.0)
     )
+    # no mean of the heights is below the lowest, whatever rounding leaves where nothing reaches
+    lowest = np.min(peaks, initial=np.inf, where=peaks > 0)
+    if np.isfinite(lowest):
+        heights = np.maximum(heights, lowest * total)
     square = np.square(total)
     # total / (heights / total) compares the surface with the height of one kernel
     return np.where(square < _TAILS * heights, square, np.minimum(squares, square))

@@ -60,6 +60,28 @@ def test_support_is_the_effective_background_of_direct_sums():
     assert np.all(expected[found.shown] > 9.9)
 
 
+def test_tails_far_from_all_background_get_no_value_and_no_certainty():
+    # 400 background records in the middle, one of them and one record far out: by definition a
+    # pixel has a single record behind it where the exact sum is below a tenth of one kernel's peak
+    generator = np.random.default_rng(17)
+    background, records = generator.normal(0, 300, (2, 400)), generator.normal(0, 300, (2, 50))
+    background[:, 0], records[:, 0] = -1500.0, 1500.0
+    grid = Grid(-3000.0, 3000.0, 60.0, 100, 100)
+    bandwidth = 200.0
+    pooled = contrast.pool((*records, None), (*background, None))
+    found = contrast.density_contrast(pooled, grid, bandwidth, adapt=0.0)
+    peak = 1 / (2 * np.pi * bandwidth**2)
+    exact = direct_surface(*background, 1.0, bandwidth, grid)
+    tails = exact < 0.09 * peak
+    assert tails.sum() > 5000 and not found.shown[tails].any()
+    assert np.all(found.support[tails] <= 1 + 1e-9)
+    rows, columns = np.nonzero(exact >= 10.5 * peak)
+    assert found.shown[rows, columns].all() and len(rows) > 50
+    # half the weight as either label at the most: a lone record leaves a noise of 2 or more
+    together = exact + direct_surface(*records, 1.0, bandwidth, grid)
+    assert np.all(found.noise[together < 0.09 * peak] >= 2 - 1e-9)
+
+
 def test_records_that_are_the_background_have_a_ratio_of_one():
     x, y = cloud(300, 3)
     pooled = contrast.pool((x, y, None), (x, y, None))
