@@ -15,9 +15,8 @@ from .numeric import edges
 from .numeric.disclosure import Rules, contributor_codes
 from .numeric.errors import InputError
 from .numeric.grid import covering
-from .numeric.microaggregation import neighbour_groups
 from .numeric.progress import part
-from .numeric.safe_surface import safe_surface
+from .numeric.safe_surface import hidden_groups, kernel_widths, safe_surface
 
 MOST_PIXELS = 4_000_000
 # bandwidths beyond a group that a surface without a boundary reaches
@@ -49,12 +48,12 @@ class SafeSurface(SteadfieldAlgorithm):
     HELP = tr(
         "Smooths confidential records into a density surface behind every pixel of which stand "
         "enough contributors. A kernel on a single address has its peak there however wide it is; "
-        "so every kernel stands on the mean place of a group of neighbouring contributors and "
+        "so every kernel stands near the mean place of a group of neighbouring contributors and "
         "reaches over the whole group. The finished raster is then attacked by peak search and "
-        "deconvolution, and the run is refused if single addresses can be read out of it. It does "
-        "not protect from what somebody knows already, nor from several surfaces compared: the "
-        "surface adds up to the number of records. Thresholds are set by the data's owner and by "
-        "law, not by this tool."
+        "deconvolution, and the run is refused if these find more single addresses than chance "
+        "would. That is a test, not a proof. The surface does not protect from what somebody knows "
+        "already, nor from several surfaces compared; it adds up to the number of records. "
+        "Thresholds are set by the data's owner and by law, not by this tool."
     )
 
     def define(self):
@@ -174,7 +173,7 @@ def prepare(job):
     weights = found.weight[kept] if job.field("WEIGHT") else None
     least = Rules(job.whole("LEAST_COUNT")).least_count
     # tells at once when there are too few, before anything is measured on them
-    groups = neighbour_groups(x, y, least, weights, contributors, part(job.progress, 0.1, 0.15))
+    groups = hidden_groups(x, y, least, weights, contributors, part(job.progress, 0.1, 0.15))
     width = bandwidth_of(job, x, y, weights)
     grid = grid_of(job, width, groups, boundary)
     return Study(x, y, weights, contributors, boundary, least, width, grid)
@@ -204,7 +203,7 @@ def grid_of(job, width, groups, boundary):
     if boundary is not None:
         bounds = boundary.bounds
     else:
-        reach = MARGIN * np.maximum(width, groups.radius)
+        reach = MARGIN * kernel_widths(width, groups)
         bounds = (
             float((groups.x - reach).min()),
             float((groups.y - reach).min()),
@@ -281,9 +280,11 @@ def write_page(algorithm, job, study, found, density):
                 "Records are divided into groups of neighbours with at least {} effective "
                 "contributors each (microaggregation: Domingo-Ferrer & Mateo-Sanz 2002, IEEE "
                 "Trans. Knowl. Data Eng. 14:189; effective size: Kish 1965). A Gaussian kernel "
-                "stands on the mean place of each group's contributors; its bandwidth is the least "
-                "bandwidth or, where that is wider, the group's radius, within which the "
-                "least-count-th nearest contributor lies."
+                "stands near the mean place of each group's contributors; its bandwidth is the "
+                "least bandwidth or, where that is wider, the group's radius, within which the "
+                "least-count-th nearest contributor lies, in steps of the square root of 2. "
+                "Places are moved by up to 2 / contributors of the radius, because the mean of a "
+                "village and one lonely farm points at the farm."
             ).format(study.least),
             tr(
                 "Below {} of the peak the density is set to 0: the error of the surface lies "

@@ -3,11 +3,13 @@
 A kernel that stands on one address has its peak there, however wide it is, and a hole cut around
 it has its centre there. Therefore the records are first brought together in groups of
 neighbours (microaggregation: Domingo-Ferrer & Mateo-Sanz 2002, IEEE Trans. Knowl. Data Eng.
-14:189) and every kernel stands on the mean place of a group's contributors. What can be read out
-of the surface at best are those places.
+14:189) and every kernel stands near the mean place of a group's contributors. What can be read out
+of the surface at best are those places. The mean of nine villagers and one on a lonely farm points
+at the farm for all who know the village, so the places are moved.
 """
 
-from dataclasses import dataclass
+import hashlib
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -15,6 +17,8 @@ from .errors import InputError
 from .progress import silent
 
 LARGE = 30
+# of the radius, times the share of one contributor in the mean place
+MOVED = 2.0
 
 
 @dataclass(frozen=True)
@@ -106,6 +110,40 @@ def neighbour_groups(x, y, least, weights=None, contributors=None, progress=sile
     of_record = np.full(len(weights), -1)
     of_record[used] = group
     return _described(of_record, group, len(leaves), x, y, w, codes)
+
+
+def moved(groups, x, y):
+    """The groups with their places moved at random by about as much as one contributor moves them.
+
+    The place is uniform in a disc of radius 2 / contributors (at most a half) times the group's
+    radius: what multiplies one contributor's share in the mean to where he lives multiplies the
+    move as well. It follows from all records together, so that a run repeats and nothing is gained
+    by averaging runs, and only who has all records can undo it.
+
+    Parameters
+    ----------
+    groups : Groups
+    x, y : (n,) float arrays
+        The records.
+
+    Returns
+    -------
+    Groups
+        With the radius about the new place.
+    """
+    used = groups.of_record >= 0
+    x, y, of_record = np.asarray(x, float)[used], np.asarray(y, float)[used], groups.of_record[used]
+    order = np.lexsort((y, x))
+    digest = hashlib.blake2b(x[order].tobytes() + y[order].tobytes(), digest_size=32).digest()
+    rng = np.random.default_rng(int.from_bytes(digest, "little"))
+    rank = np.argsort(np.lexsort((groups.y, groups.x)))
+    share, turn = rng.random((2, len(rank)))[:, rank]
+    length = np.minimum(MOVED / groups.contributors, 0.5) * groups.radius * np.sqrt(share)
+    place_x = groups.x + length * np.cos(2 * np.pi * turn)
+    place_y = groups.y + length * np.sin(2 * np.pi * turn)
+    radius = np.zeros(len(rank))
+    np.maximum.at(radius, of_record, np.hypot(x - place_x[of_record], y - place_y[of_record]))
+    return replace(groups, x=place_x, y=place_y, radius=radius)
 
 
 def _split(part, x, y, w, codes, least):

@@ -6,10 +6,10 @@ import numpy as np
 
 from .edges import bandwidth_at_places, place_factors
 from .errors import InputError
-from .microaggregation import Groups, neighbour_groups
+from .microaggregation import Groups, moved, neighbour_groups
 from .pinpoint import Attack, attack
 from .progress import part, silent
-from .surface import adaptive_surface, effective_records, squared_surface
+from .surface import adaptive_surface, effective_records, sampling_variance
 
 # Below this share of the peak lies the error of the surface; what is there is set to zero.
 FAINT = 2e-4
@@ -17,6 +17,8 @@ FAINT = 2e-4
 ACCURACY = 1e-3
 # A kernel that loses more than this beyond the boundary is not made up for in full.
 LEAST_KEPT = 0.1
+# Kernels wider than the least bandwidth come in such steps: a radius tells how far one record lies.
+STEP = 2.0**0.5
 
 
 @dataclass(frozen=True)
@@ -46,12 +48,71 @@ class SafeSurface:
     attack: Attack
 
 
+def hidden_groups(x, y, least, weights=None, contributors=None, progress=silent):
+    """Groups of neighbours with their places moved; see `microaggregation`."""
+    return moved(neighbour_groups(x, y, least, weights, contributors, progress), x, y)
+
+
+def kernel_widths(bandwidth, groups):
+    """The least bandwidth, widened in steps until it reaches over each group.
+
+    Parameters
+    ----------
+    bandwidth : float
+    groups : microaggregation.Groups
+
+    Returns
+    -------
+    (groups,) float array
+    """
+    wider = np.maximum(groups.radius / bandwidth, 1.0)
+    return bandwidth * STEP ** np.ceil(np.log(wider) / np.log(STEP) - 1e-9)
+
+
+def effective_behind(groups, widths, density, grid, progress=silent):
+    """At least so many effective contributors stand behind each pixel.
+
+    With S_g = sum_c w_gc^2 and e_g = W_g^2 / S_g, (sum k W)^2 / sum k^2 S is not below
+    sum k W / sum (k W / e), the harmonic mean of the groups' own effective contributors, as no
+    k_g W_g exceeds their sum. Sums of squares tell of several groups together, but in tails they
+    drown in the error of narrower kernels; the mean does not, and lets the tail of a group keep
+    what the group has. So the larger of the two counts, squares only where they are certain.
+
+    Parameters
+    ----------
+    groups : microaggregation.Groups
+    widths : (groups,) float array
+        Bandwidths, units of the CRS.
+    density : (rows, columns) float array
+        The surface of the groups.
+    grid : Grid
+    progress : callable
+
+    Returns
+    -------
+    (rows, columns) float array
+        0 where nothing reaches.
+    """
+    squares = sampling_variance(
+        groups.x, groups.y, np.sqrt(groups.squares), widths, density, grid,
+        progress=part(progress, 0.0, 0.7),
+    )  # fmt: skip
+    thinned = adaptive_surface(
+        groups.x, groups.y, groups.total / groups.effective(), widths, grid,
+        progress=part(progress, 0.7, 1.0),
+    )  # fmt: skip
+    mean = np.divide(density, thinned, out=np.zeros_like(density), where=thinned > 0)
+    # no mean leaves the range of what it is of, whatever rounding makes of the tails
+    mean = np.clip(mean, 0.0, groups.effective().max(initial=0.0))
+    return np.maximum(mean, effective_records(density, squares))
+
+
 def safe_surface(
     x, y, least, bandwidth, grid, rng, weights=None, contributors=None, mask=None, progress=silent
 ):
     """Make the surface, check it and attack it.
 
-    Every kernel stands on the mean place of a group of at least `least` effective contributors
+    Every kernel stands near the mean place of a group of at least `least` effective contributors
     and is at least as wide as the group reaches, so no further from its `least`-th nearest
     contributor. Behind a pixel with kernel values k_g stand (sum k W)^2 / sum_c (sum_g k_g w_gc)^2
     effective contributors (Kish 1965), which is not below the least of the groups' own.
@@ -80,20 +141,12 @@ def safe_surface(
     InputError
         If the attack finds more single addresses than chance explains, or nothing is left.
     """
-    groups = neighbour_groups(x, y, least, weights, contributors, part(progress, 0.0, 0.2))
-    widths = np.maximum(bandwidth, groups.radius)
+    groups = hidden_groups(x, y, least, weights, contributors, part(progress, 0.0, 0.2))
+    widths = kernel_widths(bandwidth, groups)
     density = adaptive_surface(
         groups.x, groups.y, groups.total, widths, grid, progress=part(progress, 0.2, 0.4)
     )
-    squares = squared_surface(
-        groups.x,
-        groups.y,
-        np.sqrt(groups.squares),
-        widths,
-        grid,
-        progress=part(progress, 0.4, 0.55),
-    )
-    effective = effective_records(density, squares)
+    effective = effective_behind(groups, widths, density, grid, part(progress, 0.4, 0.55))
     # the squares hold every contributor's groups together, so the ratio is not below this
     floor = float(groups.effective().min())
     few = (effective < least * (1 - ACCURACY)) if floor < least else np.zeros(grid.shape, bool)
