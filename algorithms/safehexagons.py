@@ -1,4 +1,4 @@
-"""Disclosure-safe hexagons: counts of confidential records that nobody can be picked out of."""
+"""Disclosure-safe hexagons: counts of confidential records, released by rules and methods."""
 
 import numpy as np
 
@@ -16,7 +16,7 @@ from .safehexagons_study import METHODS, ORIENTATIONS, TOTALS, prepare
 
 
 class SafeHexagons(SteadfieldAlgorithm):
-    """Count records in hexagons and release only what gives nobody away."""
+    """Count records in hexagons and release only what the rules allow."""
 
     ID = "safehexagons"
     NAME = tr("Disclosure-safe hexagons")
@@ -35,10 +35,11 @@ class SafeHexagons(SteadfieldAlgorithm):
         "withhold what is unsafe, merge it with neighbours, round in two ways, or add noise. The "
         "release carries no true figure of an unsafe hexagon and does not tell why a hexagon was "
         "withheld. Where totals are published too, further hexagons are withheld until linear "
-        "programmes show that none can be worked out. The least count protects from being singled "
-        "out; dominance and p % from estimates of a large contribution; the share rules from "
-        "learning what everybody in a hexagon has in common. None protects from what somebody "
-        "knows already, or from several releases compared: check those with Release audit. "
+        "programmes show that none can be placed within its protection range. The least count "
+        "protects from being singled out; dominance and p % from estimates of a large "
+        "contribution; the share rules from learning what everybody in a hexagon has in common. "
+        "None protects from what somebody knows already, or from several releases compared: check "
+        "those with Release audit. "
         "Thresholds are set by the data's owner and by law, not by this tool."
     )
 
@@ -51,9 +52,9 @@ class SafeHexagons(SteadfieldAlgorithm):
             tr("Secret seed"),
             tr(
                 "The same seed gives the same release to the bit, and rounds a hexagon alike in "
-                "every release; who knows it can undo part of the protection, so keep it like a "
-                "key. Empty: a secret of the system is used once and forgotten. With noise, a seed "
-                "makes a rehearsal that is not for release."
+                "every release; who knows it can undo part of the protection, so draw all its "
+                "digits at random and keep it like a key. Empty: a secret of the system is used "
+                "once and forgotten. With noise, a seed makes a rehearsal that is not for release."
             ),
             least=0,
             most=2**31 - 1,

@@ -71,7 +71,7 @@ def write_release(job, study, made, shown, shapes):
     elif study.plan.method == MERGE:
         # zones differ in size, so their counts cannot be compared by colour
         field, values, unit = "per_km2", count / kilometres, tr("per km²")
-    look = looks.groups_or_missing(field, groups_of(values), tr("withheld"), unit=unit)
+    look = looks.groups_or_missing(field, groups_of(values[shown]), tr("withheld"), unit=unit)
     job.write_layer("RELEASE", columns, shapes[shown], "polygon", look)
 
 

@@ -72,9 +72,14 @@ def answer_words(job, study, made):
             "No figure is a true count; one person's records make no outcome more than {} times as "
             "likely."
         ).format(number(np.exp(study.plan.epsilon)))
+    if study.plan.method in (ROUND, CONTROLLED):
+        return words + tr(
+            "From these figures and the totals released with them alone, no count below the least "
+            "can be told more closely than its own rounding tells it."
+        )
     return words + tr(
-        "By the rules below nobody can be picked out of them, neither alone nor by subtraction "
-        "from the totals that are published besides."
+        "Every figure meets the rules below, and from these figures and the totals released with "
+        "them alone, by subtraction, no withheld figure can be placed within its protection range."
     )
 
 
@@ -160,7 +165,7 @@ def rule_words(study):
 
 def protection_words(study):
     """What each rule protects from, and what it does not."""
-    return [
+    words = [
         tr(
             "The least count keeps single persons from being counted out. It does not help against "
             "one who holds most of a total; for weighted data switch on dominance or the p % rule."
@@ -181,6 +186,14 @@ def protection_words(study):
             "high share is still a hint; releases with a bound on hints need noise."
         ),
     ]
+    if study.plan.method == MERGE:
+        words.append(
+            tr(
+                "The shapes of merged zones hint at which hexagons were unsafe: what is joined is "
+                "drawn at random, but not with equal chances."
+            )
+        )
+    return words
 
 
 def method_words(study):
@@ -198,7 +211,8 @@ def method_words(study):
         ROUND: tr(
             "Every figure goes to one of its two neighbouring multiples of {}, up with the "
             "probability that keeps its mean. Totals are rounded on their own, and one that would "
-            "tell more than the hexagons' own rounding is left out."
+            "tell more than the hexagons' own rounding is left out; so is one in ten of those over "
+            "few hexagons, at random, so that a gap does not tell why."
         ).format(study.plan.base),
         CONTROLLED: tr(
             "Figures go to neighbouring multiples of {} so that hexagons add up to the rounded "
@@ -221,8 +235,9 @@ def method_words(study):
                 "More hexagons are withheld at little cost in records until two linear programmes "
                 "for each withheld figure leave its whole protection range open (Kelly, Golden & "
                 "Assad 1992, Networks 22:397; Fischetti & Salazar 2001, Math. Program. 89:283). "
-                "The outsider is granted all values of single contributors; costs carry a random "
-                "factor, so that the choice itself tells nothing."
+                "The outsider is granted all values of single contributors and the smallest unsafe "
+                "one of each region; costs carry a random factor, so that nobody can conclude from "
+                "the choice which others would have been cheaper."
             )
         )
     return [*parts, terms]
@@ -261,7 +276,12 @@ def caution_words(study):
             )
         )
     if study.plan.seed is not None:
-        words.append(tr("The seed is a secret: who knows it can undo part of the protection."))
+        words.append(
+            tr(
+                "The seed is a secret: who knows it, or can try all that are likely and knows some "
+                "true figures, can undo part of the protection. Draw it at random, all nine digits."
+            )
+        )
     return words
 
 

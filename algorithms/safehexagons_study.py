@@ -117,6 +117,9 @@ def prepare(job):
     left, bottom, right, top = ground.bounds
     cells = ((right - left) / size + 4) * ((top - bottom) / (0.866 * size) + 4)
     job.check_cells("HEXAGON_SIZE", size, cells, MOST_CELLS)
+    if area is None:
+        # a rectangle of hexagons must not lack a corner that the records' own rectangle misses
+        ground = shapely.box(x.min() - size, y.min() - size, x.max() + size, y.max() + size)
     q, r = hexagons.cells_covering(ground, size, orientation=orientation, most=MOST_CELLS)
     records = Records(
         cells_of(q, r, *hexagons.hexagon_cells(x, y, size, orientation)),

@@ -38,8 +38,8 @@ CHOOSING = [
     ("How do several densities look together?", "inkblend", "2 to 6 layers, one picture."),
     ("What do the raw layers look like together?", "rawink", "Before any smoothing."),
     ("Where do the layers agree?", "agreement", "Zones that a policy can name."),
-    ("What may be published as counts?", "safehexagons", "Four protection methods."),
-    ("What may be published as a surface?", "safesurface", "No peak betrays an address."),
+    ("What may be published as counts?", "safehexagons", "Five protection methods."),
+    ("What may be published as a surface?", "safesurface", "Attacked before release."),
     ("Can releases be subtracted from each other?", "releaseaudit", "Run it before publishing."),
     ("Where can I practise?", "practicedistrict", "The invented district of Ostermoor."),
 ]

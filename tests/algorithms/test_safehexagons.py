@@ -304,6 +304,24 @@ def test_without_a_boundary_the_outermost_records_do_not_show(made):
         assert np.allclose(boxes[0], boxes[1])
 
 
+def test_without_a_boundary_no_corner_is_missing_from_the_rectangle(made):
+    # places whose own rectangle misses a hexagon at a corner of the rectangle of hexagons
+    places = [[2560, 1838], [7971, 8212], [11198, 9018], [11122, 11367]]
+    x, y = np.repeat(places, 20, axis=0).T
+    records = {"x": EAST + x, "y": NORTH + y}
+    results, _ = made(records=records, boundary=False, HEXAGON_SIZE=3000, TOTALS=1)
+    names = [fields["cell"].split() for fields, _ in polygons_of(results["RELEASE"])]
+    q, r = np.array(names, int).T
+    across = 2 * q + r
+    rectangle = {
+        (a, b)
+        for b in range(r.min(), r.max() + 1)
+        for a in range(across.min(), across.max() + 1)
+        if (a - b) % 2 == 0
+    }
+    assert set(zip(across.tolist(), r.tolist())) == rectangle
+
+
 def test_the_custodians_layer_is_off_by_default_and_says_what_it_is(made, tmp_path):
     results, _ = made()
     assert "CUSTODIAN" not in results and "TOTALS_OUT" not in results
