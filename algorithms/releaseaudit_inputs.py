@@ -17,6 +17,7 @@ from .numeric.errors import InputError
 COUNT_NAMES = ("count", "records", "number", "total", "n", "cases", "persons", "residents")
 LABEL_NAMES = ("name", "label", "ward", "zone", "region", "cell", "code", "id")
 ROW_NUMBERS = ("fid", "ogc_fid", "objectid", "gid")
+NO_VALUE = ("", "none", "null", "nan", "withheld")
 MOST_LAYERS = 8
 KINDS = re.compile(
     r"(?P<kind>exact|rounded|nearest|noise)\s*(?P<size>[0-9.]+)?"
@@ -132,7 +133,15 @@ def _read(job, layer, name, order, given):
                 job.label("RELEASES"), name
             )
         )
+    if found.skipped and given["TOTALS"]:
+        raise InputError(
+            tr(
+                "{}: {} has zones without usable ground, whose counts are part of its total; "
+                "repair or remove them, or leave the total out."
+            ).format(job.label("TOTALS"), name)
+        )
     values = vector_layers.as_floats(found.values[count_field])
+    _refuse_words(job, name, count_field, found.values[count_field], values)
     if np.isnan(values).all():
         raise InputError(
             tr("{}: the field {} of {} holds no number; choose another field.").format(
@@ -146,6 +155,19 @@ def _read(job, layer, name, order, given):
     )
     job.inform(tr("{}: counts in {}, {}").format(name, count_field, words))
     return Published(table, values, count_field, words)
+
+
+def _refuse_words(job, name, field, raw, values):
+    """A text that is no number, such as “1,250” or “<5”, tells more than a withheld count."""
+    words = [str(raw[row]).strip() for row in np.flatnonzero(np.isnan(values))]
+    told = [word for word in words if word.lower() not in NO_VALUE]
+    if told:
+        raise InputError(
+            tr(
+                "{}: the field {} of {} holds “{}”, which is neither a number nor empty; write "
+                "counts as plain numbers, and null where a count is withheld."
+            ).format(job.label("COUNT_FIELDS"), field, name, told[0])
+        )
 
 
 def _count_field(job, layer, name, given):

@@ -52,6 +52,10 @@ CAUTIONS = (
         "make a count look safer than it is."
     ),
     tr(
+        "One count of each layer was looked at. Where shares are published, audit the numerators, "
+        "and what the counts have besides them, in runs of their own."
+    ),
+    tr(
         "Noisy counts were given an interval that holds with a probability of 99.9 % each; what "
         "follows from many of them is likely, not certain."
     ),

@@ -181,6 +181,25 @@ def test_settings_that_cannot_be_followed_are_named(audit, cells, wards, more, w
         audit([cells, wards], **more)
 
 
+def test_counts_in_text_are_read_and_words_are_not_taken_for_withheld(audit, polygon_layer, wards):
+    cells = polygon_layer(columns(*range(9)), count=["20"] * 8)
+    assert audit([cells, wards], COUNT_FIELDS="count;count")[0]["WORST_COUNT"] == 3
+    for words in ("1,250", "<5"):
+        layer = polygon_layer(columns(0, 1, 2), count=["20", words])
+        with pytest.raises(QgsProcessingException, match=f"holds “{words}”"):
+            audit([layer], COUNT_FIELDS="count")
+    withheld = polygon_layer(columns(0, 1, 2), count=["20", None])
+    assert audit([withheld], COUNT_FIELDS="count", TOTALS="24")[0]["WORST_COUNT"] == 4
+
+
+def test_a_total_that_counts_zones_without_ground_is_refused(audit, polygon_layer):
+    # 20, a withheld 4 and 30 without ground add up to 54: over what is left it would be 34
+    layer = polygon_layer([*columns(0, 1, 2), shapely.Polygon()], count=[20, None, 30])
+    with pytest.raises(QgsProcessingException, match="zones without usable ground"):
+        audit([layer], TOTALS="54")
+    assert audit([layer])[0]["CLEAN"] == 1
+
+
 def test_layers_that_cannot_be_audited_are_named(audit, polygon_layer, cells):
     empty = polygon_layer([], count=[])
     empty.setName("Nothing")
