@@ -7,7 +7,7 @@ set -euo pipefail
 cd "$(dirname "$0")/.."
 
 hosts="${HOSTS_FOLDER:-build/hosts}"
-read -r -a arguments <<<"${PYTEST_ARGUMENTS:-tests/numeric tests/algorithms tests/published}"
+read -r -a arguments <<<"${PYTEST_ARGUMENTS:-tests/numeric tests/algorithms tests/published tests/window}"
 [ "$(id -u)" = 0 ] || { echo "tools/hosts.sh needs root, for debootstrap and chroot" >&2; exit 2; }
 command -v debootstrap >/dev/null || { echo "tools/hosts.sh needs the package debootstrap" >&2; exit 2; }
 [ $# -gt 0 ] || set -- bookworm trixie sid
@@ -65,7 +65,7 @@ for name in "$@"; do
   trap 'unmount_release "$folder"' EXIT
   mount_release "$folder"
   copy_checkout "$folder"
-  in_release "$folder" bash -c 'cd /root/steadfield && . tools/setup.sh && host_packages && test_environment'
+  in_release "$folder" bash -c 'cd /root/steadfield && . tools/setup.sh && host_packages xvfb xauth imagemagick && test_environment'
   in_release "$folder" bash -c 'cd /root/steadfield && . tools/setup.sh && .venv/bin/python -c "
 import sys, numpy, scipy, shapely
 from qgis.core import Qgis

@@ -31,7 +31,9 @@ def test_the_packaged_plugin_loads_runs_from_its_dialog_and_leaves_nothing_behin
     assert without["providers"] == [one for one in first["providers"] if one != "steadfield"]
     assert without["toolbox"] == [] and without["modules"] == []
     assert second["providers"] == first["providers"] and second["toolbox"] == first["toolbox"]
-    assert without["bar"] == second["bar"] == first["bar"] == []
+    # the host itself may say something, about a font for one
+    assert without["bar"] == second["bar"] == first["bar"]
+    assert not any("needed" in sentence for sentence in first["bar"])
     assert without["docks"] == second["docks"] == first["docks"]
     for title, words in notes["log"].items():
         assert "Traceback" not in words and "Python error" not in title, words
@@ -40,7 +42,7 @@ def test_the_packaged_plugin_loads_runs_from_its_dialog_and_leaves_nothing_behin
 def test_a_package_that_is_too_old_is_named_in_the_window_and_the_host_goes_on(desktop, tmp_path):
     old = tmp_path / "old packages"
     (old / "shapely").mkdir(parents=True)
-    (old / "shapely" / "__init__.py").write_text("raise ImportError('too old')\n", encoding="utf-8")
+    (old / "shapely" / "__init__.py").write_text("__version__ = '1.8.5'\n", encoding="utf-8")
     described = old / "Shapely-1.8.5.dist-info"
     described.mkdir()
     (described / "METADATA").write_text(
@@ -48,7 +50,7 @@ def test_a_package_that_is_too_old_is_named_in_the_window_and_the_host_goes_on(d
     )
     notes = desktop("old_package.py", first_of_path=old)
     assert "traceback" not in notes, notes["traceback"]
-    (sentence,) = notes["bar"]
+    (sentence,) = [sentence for sentence in notes["bar"] if "shapely" in sentence]
     for part in ("shapely", "2.0", "1.8.5", "pip install"):
         assert part in sentence
     assert notes["loaded"] is True and notes["unloaded"] is True
