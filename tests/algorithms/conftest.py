@@ -1,6 +1,7 @@
 """A running host with the provider, and small layers to feed it."""
 
 import sys
+import textwrap
 from pathlib import Path
 
 import pytest
@@ -189,4 +190,6 @@ def pytest_terminal_summary(terminalreporter):
         row = " ".join(f"{cells.get((algorithm, kind), ''):>5}" for kind in KINDS)
         terminalreporter.write_line(f"{algorithm:{widest}} {row}")
     for words in (CODES, KINDS):
-        terminalreporter.write_line("; ".join(f"{key}: {value}" for key, value in words.items()))
+        legend = "; ".join(f"{key}: {value}" for key, value in words.items())
+        for line in textwrap.wrap(legend, len(heading) + widest):
+            terminalreporter.write_line(line)

@@ -121,6 +121,12 @@ def test_a_place_without_an_answer_becomes_nan_and_spares_the_others():
         ("EPSG:3857", (1.0e6, 6.0e6, 1.1e6, 6.1e6), False),
         ("EPSG:4326", (8, 50, 9, 51), False),
         ("EPSG:2264", (1.3e6, 5e5, 1.5e6, 6e5), True),
+        # without a code, as a raster of this plugin's own working CRS comes back from its file
+        (
+            "PROJ:+proj=laea +lat_0=52 +lon_0=10 +ellps=bessel +units=m",
+            (-5e4, -5e4, 5e4, 5e4),
+            True,
+        ),
     ],
 )
 def test_working_crs_keeps_only_what_keeps_areas(crs, extent, kept):
