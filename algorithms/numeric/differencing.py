@@ -241,7 +241,7 @@ def _statements(tables, laid):
     membership = sparse.vstack([laid.membership, *map(sparse.csr_matrix, whole)], format="csr")
     source = _sources(tables)
     blocks = [
-        sparse.diags((step[source] >= block).astype(np.int64)) @ membership
+        sparse.diags((step[source] >= block).astype(np.int64), dtype=np.int64) @ membership
         for block in range(len(releases))
     ]
     membership = sparse.hstack(blocks, format="csr", dtype=np.int64)

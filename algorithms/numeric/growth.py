@@ -153,11 +153,11 @@ def _sweep(arrival, passage, pairs):
     add, least = np.add, np.minimum
     work = [(rows[low], rows[high], times[pair]) for low, high, pair in pairs]
     for low, high, time in work:
-        add(low, time, trial)
-        least(high, trial, high)
+        add(low, time, out=trial)
+        least(high, trial, out=high)
     for low, high, time in reversed(work):
-        add(high, time, trial)
-        least(low, trial, low)
+        add(high, time, out=trial)
+        least(low, trial, out=low)
 
 
 def _sweep_plan(graph):
