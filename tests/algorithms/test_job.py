@@ -7,6 +7,7 @@ import pytest
 import shapely
 from osgeo import gdal
 from qgis.core import (
+    NULL,
     QgsApplication,
     QgsProcessingException,
     QgsProcessingParameterFeatureSink,
@@ -14,7 +15,6 @@ from qgis.core import (
     QgsRasterLayer,
     QgsVectorLayer,
 )
-from qgis.PyQt.QtCore import QVariant
 from steadfield.algorithms.base import SteadfieldAlgorithm
 from steadfield.algorithms.numeric.grid import covering
 from steadfield.plugin.looks import SEQUENCE, ramp, single, spread
@@ -106,11 +106,9 @@ def count(probe, point_layer, watch, tmp_path):
 
 
 def test_what_a_dialog_leaves_empty_counts_as_left_out(count, tmp_path):
-    # a dialog hands over a null of the field's type, which scripts never do
-    empty = {
-        name: QVariant(QVariant.Type.String)
-        for name in ("WEIGHT", "BOUNDARY", "WORKING_CRS", "SEED", "PLACES", "REPORT")
-    }
+    # a dialog hands over a null of the host, where scripts name nothing or None
+    left_empty = ("WEIGHT", "BOUNDARY", "WORKING_CRS", "SEED", "PLACES", "REPORT")
+    empty = {name: NULL for name in left_empty}
     results, watcher = count(**empty)
     assert results["TOTAL"] == 3
     assert set(results) == {"COUNTS", "TOTAL", "SEED_USED"}
