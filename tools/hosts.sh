@@ -10,6 +10,7 @@ hosts="${HOSTS_FOLDER:-build/hosts}"
 read -r -a arguments <<<"${PYTEST_ARGUMENTS:-tests/numeric tests/algorithms tests/published tests/window}"
 [ "$(id -u)" = 0 ] || { echo "tools/hosts.sh needs root, for debootstrap and chroot" >&2; exit 2; }
 command -v debootstrap >/dev/null || { echo "tools/hosts.sh needs the package debootstrap" >&2; exit 2; }
+mkdir -p "$hosts"
 [ $# -gt 0 ] || set -- bookworm trixie sid
 
 # in_release FOLDER COMMAND ...: run a command inside a release.
