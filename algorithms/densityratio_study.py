@@ -150,9 +150,7 @@ def output_grid(job, pooled, bandwidth, boundary):
         job.inform(tr("Cell size chosen: {} m").format(number(cell * metres)))
     if cell > bandwidth / 1.5:
         raise InputError(
-            tr(
-                "{}: {} m is too coarse for a bandwidth of {} m; choose {} m or less."
-            ).format(
+            tr("{}: {} m is too coarse for a bandwidth of {} m; choose {} m or less.").format(
                 job.label("CELL_SIZE"),
                 number(cell * metres),
                 number(bandwidth * metres),

@@ -249,7 +249,11 @@ def _index(folder, done, pictures):
         f"Counts of falls by hexagon with a least count of {done['least count']}: "
         f"{safe_words(safe)}.",
     )
-    show("", "safe surface", "A density surface behind every pixel of which enough contributors stand.")
+    show(
+        "",
+        "safe surface",
+        "A density surface behind every pixel of which enough contributors stand.",
+    )
     clean = audit.get("DISCLOSED_REGIONS", 0) == 0
     page.text(
         "",
