@@ -174,12 +174,6 @@ class CentreSpread(SteadfieldAlgorithm):
         wanted = list(dict.fromkeys(name for name in fields.values() if name))
         records = job.records("RECORDS", "WEIGHT", wanted)
         columns = {key: records.values[name] if name else None for key, name in fields.items()}
-        if not records.weight.sum() > 0:
-            raise InputError(
-                tr("{}: the weights add up to 0; a centre needs a positive total.").format(
-                    job.label("WEIGHT")
-                )
-            )
         members = _members(job, records, columns["GROUP"], columns["ORDER"])
         groups = _measure(job, records, members, columns["CONTRIBUTOR"])
         steps = _steps(groups)

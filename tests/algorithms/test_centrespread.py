@@ -179,7 +179,7 @@ def test_outputs_that_are_not_asked_for_are_not_made(spread, square):
 def test_what_cannot_be_worked_with_is_refused_in_words(spread, point_layer):
     with pytest.raises(QgsProcessingException, match=r"RECORDS.*no features"):
         spread(point_layer([], [], a=[]))
-    with pytest.raises(QgsProcessingException, match=r"WEIGHT.*add up to 0"):
+    with pytest.raises(QgsProcessingException, match=r"WEIGHT.*no record has a value above 0"):
         spread(point_layer([EAST], [NORTH], w=[0]), WEIGHT="w")
     many = point_layer(EAST + np.arange(600.0), np.full(600, NORTH), g=list(range(600)))
     with pytest.raises(QgsProcessingException, match=r"GROUP.*600 groups"):
