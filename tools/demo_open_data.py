@@ -37,7 +37,26 @@ def copy_layers(folder):
             str(target), str(source), format="GPKG", layerName=name, dstSRS=crs, srcSRS=crs,
             geometryType="PROMOTE_TO_MULTI" if name == "counties" else None, **mode,
         )  # fmt: skip
+    add_regions(target)
     return target
+
+
+def add_regions(package):
+    """Group the counties into west, middle and east by longitude: a zoning to compare with.
+
+    The state is commonly told as mountains, piedmont and coastal plain; the two limits are ours.
+    """
+    source = ogr.Open(str(package), update=1)
+    counties = source.GetLayer("counties")
+    counties.CreateField(ogr.FieldDefn("region", ogr.OFTString))
+    counties.StartTransaction()
+    for feature in counties:
+        longitude = feature.GetGeometryRef().Centroid().GetX()
+        feature["region"] = (
+            "west" if longitude < -81.3 else "middle" if longitude < -78.7 else "east"
+        )
+        counties.SetFeature(feature)
+    counties.CommitTransaction()
 
 
 def analyse(host, folder, package):
@@ -64,7 +83,7 @@ def analyse(host, folder, package):
         ),
         "units": host.run(
             "unitvariance", UNITS=counties, COUNT="SID74", TOTAL="BIR74", LABEL="NAME",
-            SEED=SEED, UNITS_OUT=out("counties_variance.gpkg"),
+            OFFICIAL="region", SEED=SEED, UNITS_OUT=out("counties_variance.gpkg"),
             TABLE=out("counties_variance_table.csv"), REPORT=out("report_counties.html"),
         ),
         "correlation": host.run(
