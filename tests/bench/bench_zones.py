@@ -1,7 +1,7 @@
 """How fast zonings of base units are: cost, memory, workers, and a plain networkx version.
 
 Run by hand: python tests/bench/bench_zones.py [part ...]; parts: targets, workers, memory, cost,
-plain. The plot of cost goes to bench_zones.png in the current folder.
+plain. The plot of cost goes to build/bench_zones.png.
 """
 
 import os
@@ -165,7 +165,9 @@ def cost():
     left.set(xlabel="units", ylabel="milliseconds a zoning, one core")
     right.set(xlabel="zonings of 300 units", ylabel="seconds, one core")
     left.legend(frameon=False)
-    figure.savefig("bench_zones.png", dpi=110)
+    build = Path(__file__).resolve().parents[2] / "build"
+    build.mkdir(exist_ok=True)
+    figure.savefig(build / "bench_zones.png", dpi=110)
 
 
 def plain():
