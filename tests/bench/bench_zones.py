@@ -165,9 +165,9 @@ def cost():
     left.set(xlabel="units", ylabel="milliseconds a zoning, one core")
     right.set(xlabel="zonings of 300 units", ylabel="seconds, one core")
     left.legend(frameon=False)
-    build = Path(__file__).resolve().parents[2] / "build"
-    build.mkdir(exist_ok=True)
-    figure.savefig(build / "bench_zones.png", dpi=110)
+    folder = Path(__file__).resolve().parents[2] / "build"
+    folder.mkdir(exist_ok=True)
+    figure.savefig(folder / "bench_zones.png", dpi=110)
 
 
 def plain():
