@@ -38,13 +38,7 @@ class AdaptiveDensity(SteadfieldAlgorithm):
     )
 
     def define(self):
-        self.add_points("RECORDS", tr("Records"), tr("One point for each record or place."))
-        self.add_field(
-            "WEIGHT",
-            tr("Weight"),
-            "RECORDS",
-            tr("Number of cases at each point. Empty: each point is one."),
-        )
+        self.add_weighted_records()
         self.add_boundary(
             tr("Polygons of the study area, with holes and islands; outside there is no value.")
         )
@@ -81,14 +75,7 @@ class AdaptiveDensity(SteadfieldAlgorithm):
                 "normal-scale rule; see Bandwidth advice for others."
             ),
         )
-        self.add_number(
-            "ADAPT",
-            tr("Adaptation"),
-            tr("0: one bandwidth everywhere. 0.5: the square-root law. 1: the strongest."),
-            default=0.5,
-            least=0.0,
-            most=1.0,
-        )
+        self.add_adaptation()
         self.add_length(
             "CELL_SIZE",
             tr("Cell size"),
@@ -120,14 +107,7 @@ class AdaptiveDensity(SteadfieldAlgorithm):
             whole=True,
             advanced=True,
         )
-        self.add_number(
-            "TRIM",
-            tr("Trim"),
-            tr("Bandwidths stay within this multiple, and fraction, of the overall bandwidth."),
-            default=5.0,
-            least=1.0,
-            advanced=True,
-        )
+        self.add_trim()
 
     def _add_noise(self):
         self.add_choice(

@@ -30,13 +30,7 @@ class BandwidthAdvice(SteadfieldAlgorithm):
     )
 
     def define(self):
-        self.add_points("RECORDS", tr("Records"), tr("One point for each record or place."))
-        self.add_field(
-            "WEIGHT",
-            tr("Weight"),
-            "RECORDS",
-            tr("Number of cases at each point. Empty: each point is one."),
-        )
+        self.add_weighted_records()
         self.add_boundary(tr("Polygons of the study area; records outside are left out."))
         self.add_working_crs()
         self.add_report(optional=False)

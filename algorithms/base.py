@@ -143,6 +143,38 @@ class SteadfieldAlgorithm(QgsProcessingAlgorithm):
             QgsProcessingParameterFeatureSource(name, label, [POINTS], optional=optional), help
         )
 
+    def add_weighted_records(self):
+        """Add RECORDS and WEIGHT, points that stand for one case or for several."""
+        self.add_points("RECORDS", tr("Records"), tr("One point for each record or place."))
+        self.add_field(
+            "WEIGHT",
+            tr("Weight"),
+            "RECORDS",
+            tr("Number of cases at each point. Empty: each point is one."),
+        )
+
+    def add_adaptation(self):
+        """Add ADAPT, how strongly bandwidths follow the density."""
+        self.add_number(
+            "ADAPT",
+            tr("Adaptation"),
+            tr("0: one bandwidth everywhere. 0.5: the square-root law. 1: the strongest."),
+            default=0.5,
+            least=0.0,
+            most=1.0,
+        )
+
+    def add_trim(self):
+        """Add TRIM, how far bandwidths may leave the overall one."""
+        self.add_number(
+            "TRIM",
+            tr("Trim"),
+            tr("Bandwidths stay within this multiple, and fraction, of the overall bandwidth."),
+            default=5.0,
+            least=1.0,
+            advanced=True,
+        )
+
     def add_polygons(self, name, label, help, optional=False, advanced=False):
         """Add a polygon layer."""
         self.add(

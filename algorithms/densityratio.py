@@ -70,14 +70,7 @@ class DensityRatio(SteadfieldAlgorithm):
                 "smaller of the two."
             ),
         )
-        self.add_number(
-            "ADAPT",
-            tr("Adaptation"),
-            tr("0: one bandwidth everywhere. 0.5: the square-root law. 1: the strongest."),
-            default=0.5,
-            least=0.0,
-            most=1.0,
-        )
+        self.add_adaptation()
         self.add_length(
             "CELL_SIZE",
             tr("Cell size"),
@@ -86,14 +79,7 @@ class DensityRatio(SteadfieldAlgorithm):
                 "most."
             ),
         )
-        self.add_number(
-            "TRIM",
-            tr("Trim"),
-            tr("Bandwidths stay within this multiple, and fraction, of the overall bandwidth."),
-            default=5.0,
-            least=1.0,
-            advanced=True,
-        )
+        self.add_trim()
         self.add_choice(
             "WEIGHTS_MEAN",
             tr("What weights mean"),

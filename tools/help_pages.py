@@ -49,7 +49,8 @@ def page(title, body):
     """One HTML page."""
     return (
         '<!DOCTYPE html>\n<html lang="en">\n<head>\n<meta charset="utf-8">\n'
-        f"<title>{html.escape(title)}</title>\n<style>\n{STYLE}\n</style>\n</head>\n<body>\n"
+        f"<title>{html.escape(title)}</title>\n"
+        '<link rel="stylesheet" href="style.css">\n</head>\n<body>\n'
         f"{body}\n</body>\n</html>\n"
     )
 
@@ -113,6 +114,7 @@ def pages(algorithms, questions):
     chosen = [algorithm for algorithm in algorithms if hasattr(algorithm, "QUESTION")]
     made = {f"{one.name()}.html": algorithm_page(one, questions[one.QUESTION]) for one in chosen}
     made["index.html"] = index_page(chosen)
+    made["style.css"] = STYLE + "\n"
     return made
 
 

@@ -12,7 +12,7 @@ from host_rules import broken_rules
 ROOT = Path(__file__).resolve().parent.parent
 PARTS = ["plugin", "algorithms", "icons"]
 FILES = ["__init__.py", "metadata.txt", "LICENSE", "README.md", "CHANGELOG.md"]
-ENDINGS = {".py", ".txt", ".md", ".svg", ".model3", ".html", ".png", ""}
+ENDINGS = {".py", ".txt", ".md", ".svg", ".model3", ".html", ".css", ".png", ""}
 NEEDED = [
     "name",
     "qgisMinimumVersion",
