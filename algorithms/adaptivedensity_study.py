@@ -6,7 +6,7 @@ from dataclasses import dataclass
 import numpy as np
 import shapely
 
-from ..plugin.text import number, percent, tr
+from ..plugin.text import number, percent, said, tr
 from .numeric import bandwidth, edges, surface
 from .numeric.adaptation import adapt_bandwidths
 from .numeric.errors import InputError
@@ -138,7 +138,7 @@ def overall_bandwidth(job, x, y, weight):
     try:
         found = bandwidth.normal_scale(x, y, weight)
     except InputError as error:
-        raise InputError(f"{job.label('BANDWIDTH')}: {error}") from error
+        raise InputError(f"{job.label('BANDWIDTH')}: {said(error)}") from error
     job.inform(
         tr("Bandwidth chosen by the normal-scale rule: {} m").format(
             number(found * job.working.metres)

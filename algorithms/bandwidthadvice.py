@@ -4,7 +4,7 @@ import math
 
 import shapely
 
-from ..plugin.text import number, tr
+from ..plugin.text import number, said, tr
 from .bandwidthadvice_page import write_page
 from .base import SteadfieldAlgorithm
 from .numeric.advice import advise
@@ -57,7 +57,7 @@ class BandwidthAdvice(SteadfieldAlgorithm):
                 part(job.progress, 0.1, 0.9),
             )
         except InputError as error:
-            raise InputError(f"{job.label('RECORDS')}: {error}") from error
+            raise InputError(f"{job.label('RECORDS')}: {said(error)}") from error
         for words in advice.warnings:
             job.warn(words)
         give_numbers(job, advice)
@@ -75,4 +75,6 @@ def give_numbers(job, advice):
     }
     for name, value in values.items():
         job.give(name, None if math.isnan(value) else value)
-    job.inform(tr("Advised bandwidth: {} m. {}").format(number(advice.advised), advice.reason))
+    job.inform(
+        tr("Advised bandwidth: {} m. {}").format(number(advice.advised), said(advice.reason))
+    )

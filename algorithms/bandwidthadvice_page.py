@@ -6,7 +6,7 @@ import numpy as np
 
 from ..plugin.looks import SEQUENCE
 from ..plugin.report import Report
-from ..plugin.text import number, percent, tr
+from ..plugin.text import number, percent, said, tr
 from .numeric.grid import covering
 from .numeric.surface import adaptive_surface
 
@@ -36,7 +36,7 @@ def write_page(algorithm, job, records, advice):
     report = Report(
         algorithm.displayName(),
         tr("How far should each record be spread, so that the surface shows the pattern?"),
-        tr("Use about {} m. {}").format(number(advice.advised, 2), advice.reason),
+        tr("Use about {} m. {}").format(number(advice.advised, 2), said(advice.reason)),
         confidential=True,
     )
     values_table(report, advice)

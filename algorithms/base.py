@@ -24,7 +24,7 @@ from qgis.core import (
 from qgis.PyQt.QtGui import QIcon
 
 from ..plugin.host import ANY_VECTOR, METRES, POINTS, POLYGONS, RASTERS
-from ..plugin.text import tr
+from ..plugin.text import said, tr
 from .job import Job
 from .numeric.errors import CancelledError, InputError
 
@@ -118,7 +118,7 @@ class SteadfieldAlgorithm(QgsProcessingAlgorithm):
             raise QgsProcessingException(tr("Cancelled; nothing was written.")) from error
         except InputError as error:
             job.discard()
-            raise QgsProcessingException(str(error)) from error
+            raise QgsProcessingException(said(error)) from error
         except MemoryError as error:
             job.discard()
             raise QgsProcessingException(

@@ -7,7 +7,7 @@ import numpy as np
 from ..plugin import looks
 from ..plugin.outputs import Column
 from ..plugin.rasters import Band, label_polygons
-from ..plugin.text import number, percent, tr
+from ..plugin.text import number, percent, said, tr
 from .base import SteadfieldAlgorithm
 from .densityratio_page import write_page
 from .densityratio_study import WEIGHTS_MEAN, prepare
@@ -194,7 +194,7 @@ def asked_levels(job):
         try:
             check_levels(levels, count)
         except InputError as error:
-            raise InputError(f"{job.label('LEVELS')}: {error}") from error
+            raise InputError(f"{job.label('LEVELS')}: {said(error)}") from error
     return levels
 
 

@@ -6,7 +6,7 @@ from dataclasses import dataclass
 import numpy as np
 import shapely
 
-from ..plugin.text import number, tr
+from ..plugin.text import number, said, tr
 from .adaptivedensity_study import MEMORY_SHARE, machine_memory
 from .numeric import contrast, edges
 from .numeric.errors import InputError
@@ -120,7 +120,7 @@ def overall_bandwidth(job, pooled):
     try:
         found = contrast.common_bandwidth(pooled)
     except InputError as error:
-        raise InputError(f"{job.label('BANDWIDTH')}: {error}") from error
+        raise InputError(f"{job.label('BANDWIDTH')}: {said(error)}") from error
     job.inform(
         tr("Bandwidth chosen from the pooled points: {} m").format(
             number(found * job.working.metres)

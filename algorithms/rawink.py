@@ -11,7 +11,7 @@ from qgis.core import (
 from ..plugin import alignment, layers, looks, rasters
 from ..plugin.host import ANY_VECTOR
 from ..plugin.reference_system import reproject, working_crs
-from ..plugin.text import listed, number, tr
+from ..plugin.text import listed, number, said, tr
 from . import ink_pages
 from .base import SteadfieldAlgorithm
 from .inkblend import add_inks, add_legend, chosen_inks
@@ -157,7 +157,9 @@ def settle_crs(job, sources):
         try:
             working = working_crs(first.sourceCrs(), layers.finite_extent(first), transform_context)
         except InputError as error:
-            raise InputError(f"{job.label('LAYERS')}: {first.sourceName()}: {error}") from error
+            raise InputError(
+                f"{job.label('LAYERS')}: {first.sourceName()}: {said(error)}"
+            ) from error
     job.take_working_crs(working)
     job.inform(
         tr("Working CRS: {} ({})").format(working.crs.userFriendlyIdentifier(), working.note)
@@ -233,7 +235,7 @@ def strengths_of(job, counts, names):
         try:
             chosen, most = rawink.ink_per_feature(one)
         except InputError as error:
-            raise InputError(f"{job.label('LAYERS')}: {name}: {error}") from error
+            raise InputError(f"{job.label('LAYERS')}: {name}: {said(error)}") from error
         asked = job.real("INK_PER_FEATURE")
         if asked:
             chosen, most = asked, rawink.features_to_fill(asked)

@@ -8,7 +8,7 @@ from ..plugin import reference_system
 from ..plugin.layers import as_floats
 from ..plugin.looks import categories
 from ..plugin.outputs import Column
-from ..plugin.text import tr
+from ..plugin.text import said, tr
 from .base import SteadfieldAlgorithm
 from .numeric import field_faults, record_faults
 from .numeric.errors import InputError
@@ -102,7 +102,7 @@ class RecordCheck(SteadfieldAlgorithm):
             concerned |= check.found
         for check in checks:
             if check.severity != FINE:
-                job.inform(f"{SEVERITIES[check.severity]}: {check.words}")
+                job.inform(f"{SEVERITIES[check.severity]}: {said(check.words)}")
         _write_flagged(job, checks, records, sizes, values)
         groups = values[job.field("GROUP")] if job.field("GROUP") else None
         write_page(job, checks, records, sizes, groups, concerned)
@@ -192,7 +192,7 @@ def _settle_crs(job, source, places):
             source.sourceCrs(), _middle_extent(places), job.context.transformContext()
         )
     except InputError as error:
-        raise InputError(f"{job.label('RECORDS')}: {error}") from error
+        raise InputError(f"{job.label('RECORDS')}: {said(error)}") from error
     job.take_working_crs(working)
     job.inform(
         tr("Working CRS: {} ({})").format(working.crs.userFriendlyIdentifier(), working.note)
@@ -251,7 +251,8 @@ def _write_flagged(job, checks, records, sizes, values):
     places = shapely.points(records.x[rows], records.y[rows])
     places[~records.placed[rows]] = None
     keys = list(dict.fromkeys(main))
-    classes = [(key, COLOURS[index % len(COLOURS)], key) for index, key in enumerate(keys)]
+    label = {str(check.key): said(check.key) for check in serious}
+    classes = [(key, COLOURS[i % len(COLOURS)], label[key]) for i, key in enumerate(keys)]
     job.write_layer("FLAGGED", columns, places, "point", categories("fault", classes))
 
 

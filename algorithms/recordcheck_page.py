@@ -3,7 +3,7 @@
 import numpy as np
 
 from ..plugin.report import Report
-from ..plugin.text import number, percent, tr
+from ..plugin.text import number, percent, said, tr
 from .numeric import record_faults
 from .numeric.grouping import reading_order
 from .numeric.record_faults import FAULT, FINE, LOOK
@@ -106,7 +106,7 @@ def _draw_map(figure, records, checks):
                 ".",
                 color=COLOURS[index % len(COLOURS)],
                 markersize=4,
-                label=f"{check.key} ({number(check.count)})",
+                label=f"{said(check.key)} ({number(check.count)})",
             )
     axes.set_aspect("equal")
     axes.set_xlabel("km")

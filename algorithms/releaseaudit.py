@@ -6,21 +6,14 @@ from qgis.core import QgsProcessingParameterMultipleLayers
 from ..plugin import looks
 from ..plugin.host import POLYGONS
 from ..plugin.outputs import Column
-from ..plugin.text import number, tr
+from ..plugin.text import number, said, tr
 from . import releaseaudit_page
 from .base import SteadfieldAlgorithm
 from .numeric.differencing import EFFORT, audit
 from .numeric.errors import InputError
 from .numeric.progress import part
 from .releaseaudit_inputs import read_releases
-
-KIND_WORDS = {
-    "exact": tr("the count is known"),
-    "range": tr("the count is known within limits"),
-    "at most": tr("known to be few, perhaps none"),
-    "empty": tr("known to be empty"),
-}
-KIND_COLOURS = {"exact": "#7d1f1f", "range": "#c07d3c", "at most": "#e8c79c", "empty": "#c9d9e3"}
+from .releaseaudit_page import FILLS, KIND_WORDS
 
 
 class ReleaseAudit(SteadfieldAlgorithm):
@@ -198,7 +191,7 @@ def warn_of(job, published, found, records):
             tr(
                 "The layers contradict each other, so that not all of them count the same records "
                 "(or a border is drawn too differently): {}."
-            ).format("; ".join(found.contradictions[:5]))
+            ).format("; ".join(map(said, found.contradictions[:5])))
         )
     if found.undecided:
         job.warn(
@@ -217,7 +210,7 @@ def write_risks(job, found, confirmed):
         Column("kind", "text", [risk.kind for risk in risks], tr("Kind")),
         Column("lower", "int", [risk.lower for risk in risks], tr("Records at least")),
         Column("upper", "int", [risk.upper for risk in risks], tr("Records at most")),
-        Column("derivation", "text", [risk.words for risk in risks], tr("Derivation")),
+        Column("derivation", "text", [said(risk.words) for risk in risks], tr("Derivation")),
         Column(
             "area_km2",
             "float",
@@ -235,5 +228,5 @@ def write_risks(job, found, confirmed):
         )  # fmt: skip
     shapes = np.empty(len(risks), object)
     shapes[:] = [risk.polygon for risk in risks]
-    classes = [(kind, colour, KIND_WORDS[kind]) for kind, colour in KIND_COLOURS.items()]
+    classes = [(kind, colour, KIND_WORDS[kind]) for kind, colour in FILLS.items()]
     job.write_layer("RISKS", columns, shapes, "polygon", looks.categories("kind", classes))

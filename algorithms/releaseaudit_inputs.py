@@ -9,7 +9,7 @@ from qgis.core import QgsProcessingFeatureSource
 from ..plugin import layers as vector_layers
 from ..plugin import reference_system
 from ..plugin.host import BIG_INTEGER, INTEGER, REAL, TEXT
-from ..plugin.text import number, tr
+from ..plugin.text import number, said, tr
 from .numeric import intervals
 from .numeric.differencing import PublishedTable
 from .numeric.errors import InputError
@@ -84,7 +84,7 @@ def _settle_working_crs(job, layer):
             extent = vector_layers.finite_extent(source)
             working = reference_system.working_crs(layer.crs(), extent, transform_context)
     except InputError as error:
-        raise InputError(f"{job.label('RELEASES')}: {layer.name()}: {error}") from error
+        raise InputError(f"{job.label('RELEASES')}: {layer.name()}: {said(error)}") from error
     job.take_working_crs(working)
     job.inform(
         tr("Working CRS: {} ({})").format(working.crs.userFriendlyIdentifier(), working.note)
@@ -247,7 +247,7 @@ def _statement(job, name, values, kind, total):
             lower, upper = intervals.below_threshold(values, lower, upper, threshold)
             words += tr(", withheld below {}").format(threshold)
     except InputError as error:
-        raise InputError(f"{name}: {error}") from error
+        raise InputError(f"{name}: {said(error)}") from error
     return lower, upper, sums, words
 
 

@@ -4,11 +4,17 @@ import numpy as np
 import shapely
 
 from ..plugin.report import Report
-from ..plugin.text import number, tr
+from ..plugin.text import number, said, tr
 from .numeric.wording import interval_words
 
 LISTED = 60
 BORDER_COLOURS = ("#a8a497", "#2e7179", "#8a5a1c", "#5b4a7d", "#3f6b3a", "#444444")
+KIND_WORDS = {
+    "exact": tr("the count is known"),
+    "range": tr("the count is known within limits"),
+    "at most": tr("known to be few, perhaps none"),
+    "empty": tr("known to be empty"),
+}
 FILLS = {"exact": "#7d1f1f", "range": "#c07d3c", "at most": "#e8c79c", "empty": "#c9d9e3"}
 
 METHOD = (
@@ -99,7 +105,7 @@ def _published_alone(risk):
 
 def stop_words(found, least_count):
     """The error that halts a model."""
-    examples = "; ".join(risk.words for risk in found.risks[:3])
+    examples = "; ".join(said(risk.words) for risk in found.risks[:3])
     words = answer(found, least_count)
     return f"{words} {examples}." if examples else words
 
@@ -221,7 +227,7 @@ def _draw(figure, published, found, metres):
         rings = shapely.get_exterior_ring(shapely.get_parts(np.array(shapes, object)))
         faces = [shapely.get_coordinates(ring) * scale for ring in rings]
         axes.add_collection(PolyCollection(faces, facecolors=FILLS[kind], zorder=2))
-        handles.append(Patch(color=FILLS[kind], label=tr(kind)))
+        handles.append(Patch(color=FILLS[kind], label=KIND_WORDS[kind]))
     axes.autoscale_view()
     axes.set_aspect("equal")
     axes.grid(False)

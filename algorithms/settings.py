@@ -9,7 +9,7 @@ from contextlib import contextmanager
 from qgis.core import QgsProcessingUtils, QgsProperty, QgsProviderRegistry
 
 from ..plugin.host import field_names, is_null
-from ..plugin.text import tr
+from ..plugin.text import said, tr
 from .numeric.errors import CancelledError, InputError
 
 
@@ -43,12 +43,12 @@ class Settings:
 
     def inform(self, words):
         """Write to the log."""
-        self.feedback.pushInfo(words)
+        self.feedback.pushInfo(said(words))
 
     def warn(self, words):
         """Warn in the log and in the report."""
-        self.warnings.append(words)
-        self.feedback.pushWarning(words)
+        self.warnings.append(said(words))
+        self.feedback.pushWarning(self.warnings[-1])
 
     def label(self, name):
         """Name a parameter as the user sees it, with its key."""
@@ -60,7 +60,7 @@ class Settings:
         try:
             yield
         except InputError as error:
-            raise InputError(": ".join([self.label(name), *which, str(error)])) from error
+            raise InputError(": ".join([self.label(name), *which, said(error)])) from error
 
     def given(self, name):
         """Whether an optional input was set."""

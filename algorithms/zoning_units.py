@@ -6,7 +6,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..plugin import layers
-from ..plugin.text import listed, number, percent, tr
+from ..plugin.text import listed, number, percent, said, tr
 from .numeric import workers
 from .numeric.builders import BALANCED, GROWN, TREE_CUT
 from .numeric.contiguity import Contiguity, contiguity, repaired_polygons
@@ -162,7 +162,7 @@ def read_units(job):
     polygons, _ = repaired_polygons(found.geometry)
     graph = contiguity(found.geometry, tolerance, progress=part(job.progress, 0.02, 0.1))
     for sentence in graph.findings.sentences():
-        job.warn(f"{job.label('UNITS')}: {sentence}")
+        job.warn(f"{job.label('UNITS')}: {said(sentence)}")
     inside = graph
     within = job.field("KEEP_WITHIN")
     if within:

@@ -10,7 +10,7 @@ import scipy
 import shapely
 from qgis.core import Qgis
 
-from .text import tr
+from .text import said, tr
 
 PAGE = """<!DOCTYPE html>
 <html lang="en">
@@ -69,27 +69,27 @@ class Report:
 
     def __init__(self, title, question, answer, confidential=False):
         self.title = title
-        self._parts = [f"<h1>{html.escape(title)}</h1>"]
+        self._parts = [f"<h1>{html.escape(said(title))}</h1>"]
         if confidential:
             words = tr("This page carries confidential figures and is not for release.")
             self._parts.append(f'<p class="confidential">{html.escape(words)}</p>')
-        self._parts.append(f'<p class="question">{html.escape(question)}</p>')
-        self._parts.append(f'<p class="answer">{html.escape(answer)}</p>')
+        self._parts.append(f'<p class="question">{html.escape(said(question))}</p>')
+        self._parts.append(f'<p class="answer">{html.escape(said(answer))}</p>')
 
     def _head(self, title):
         if title:
-            self._parts.append(f"<h2>{html.escape(title)}</h2>")
+            self._parts.append(f"<h2>{html.escape(said(title))}</h2>")
 
     def text(self, title, *paragraphs, kind=""):
         """Add paragraphs; kind ``caution`` sets them apart."""
         self._head(title)
         mark = f' class="{kind}"' if kind else ""
-        self._parts.extend(f"<p{mark}>{html.escape(words)}</p>" for words in paragraphs)
+        self._parts.extend(f"<p{mark}>{html.escape(said(words))}</p>" for words in paragraphs)
 
     def table(self, title, columns, rows, note=""):
         """Add a table; cells are text, columns of figures are set right."""
         self._head(title)
-        rows = [[str(cell) for cell in row] for row in rows]
+        rows = [[said(cell) for cell in row] for row in rows]
         figures = [
             bool(rows) and all(_looks_like_figure(row[i]) for row in rows)
             for i in range(len(columns))
@@ -104,13 +104,13 @@ class Report:
             )
 
         body = "\n".join(f"<tr>{line(row, 'td')}</tr>" for row in rows)
-        head = line([str(column) for column in columns], "th")
+        head = line([said(column) for column in columns], "th")
         self._parts.append(
             f'<div class="scroll"><table><thead><tr>{head}</tr></thead>'
             f"<tbody>{body}</tbody></table></div>"
         )
         if note:
-            self._parts.append(f'<p class="note">{html.escape(note)}</p>')
+            self._parts.append(f'<p class="note">{html.escape(said(note))}</p>')
 
     def plot(self, title, draw, caption, size=(8.0, 4.2)):
         """Add a plot; without matplotlib only its caption is shown.
@@ -153,7 +153,7 @@ class Report:
         """Add a picture from PNG bytes."""
         self._head(title)
         code = base64.b64encode(png).decode()
-        words = html.escape(caption)
+        words = html.escape(said(caption))
         self._parts.append(
             f'<figure><img alt="{words}" src="data:image/png;base64,{code}">'
             f"<figcaption>{words}</figcaption></figure>"

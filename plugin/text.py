@@ -8,6 +8,22 @@ def tr(message):
     return QCoreApplication.translate("Steadfield", message)
 
 
+def said(words):
+    """What the core says, in the user's language.
+
+    Parameters
+    ----------
+    words : numeric.words.Words or numeric.errors.InputError or object
+        Anything else is taken as text that needs no translation.
+
+    Returns
+    -------
+    str
+    """
+    words = getattr(words, "words", words)
+    return words.said(tr) if hasattr(words, "said") else str(words)
+
+
 def number(value, digits=3):
     """Write a number with so many significant digits and a thin space between thousands.
 

@@ -126,13 +126,13 @@ def adaptive_bandwidths(*arguments, **settings):
 
 def _check(weights, pilot_bandwidth, adapt, trim, least_records):
     if not (math.isfinite(pilot_bandwidth) and pilot_bandwidth > 0):
-        raise InputError(f"BANDWIDTH must be above 0; found {pilot_bandwidth}.")
+        raise InputError("BANDWIDTH must be above 0; found {}.", pilot_bandwidth)
     if not 0 <= adapt <= 1:
-        raise InputError(f"ADAPT must lie between 0 and 1; found {adapt}.")
+        raise InputError("ADAPT must lie between 0 and 1; found {}.", adapt)
     if not trim >= 1:
-        raise InputError(f"TRIM must be 1 or more; found {trim}.")
+        raise InputError("TRIM must be 1 or more; found {}.", trim)
     if least_records < 0:
-        raise InputError(f"LEAST_RECORDS must be 0 or more; found {least_records}.")
+        raise InputError("LEAST_RECORDS must be 0 or more; found {}.", least_records)
     if not len(weights):
         raise InputError("There are no records to work with.")
     if not (weights.min() >= 0 and weights.sum() > 0):

@@ -12,6 +12,7 @@ from .crossvalidation import least_squares_scores, likelihood_scores
 from .errors import InputError
 from .pairsums import narrowest_bandwidth, record_spectrum
 from .progress import part, silent
+from .words import Words, joined
 
 BANDWIDTHS = 60
 # Cross-validation from fewer records than these is erratic (common practice, no source)
@@ -22,6 +23,7 @@ STACKED_PAIRS = 0.2
 STACKED_RECORDS = 0.2
 AGREEMENT = 2.0
 NEAR_BOUNDARY = 0.1
+LEAST_SQUARES, LIKELIHOOD = Words("least-squares"), Words("likelihood")
 SAMPLE = 20_000
 
 
@@ -151,9 +153,10 @@ def advise(x, y, weights=None, boundary=None, progress=silent):
     advised, reason = _choose(diagnosis, normal, widest, least_squares, likelihood)
     if advised > max(widest, diagnosis.rounding):
         advised = max(widest, diagnosis.rounding)
-        reason += (
-            " It is held at the oversmoothed value, the most that any density of this spread asks "
-            "for."
+        reason = Words(
+            "{} It is held at the oversmoothed value, the most that any density of this spread "
+            "asks for.",
+            reason,
         )
     near = _near_boundary(x, y, weights, boundary, advised)
     warnings = _warnings(diagnosis, advised, least_squares, likelihood, near)
@@ -270,8 +273,9 @@ def _inside(x, y, weights, boundary):
     inside = shapely.intersects_xy(boundary, x, y)
     if not inside.any():
         raise InputError(
-            f"None of the {x.size} records lies inside BOUNDARY; check that both layers show the "
-            "same area and that their CRS are set."
+            "None of the {} records lies inside BOUNDARY; check that both layers show the "
+            "same area and that their CRS are set.",
+            x.size,
         )
     return x[inside], y[inside], weights[inside], int(x.size - inside.sum())
 
@@ -289,40 +293,48 @@ def _near_boundary(x, y, weights, boundary, distance):
 def _choose(diagnosis, normal, widest, least_squares, likelihood):
     """The advised bandwidth and the reason in a sentence."""
     if diagnosis.effective < FEWEST_RECORDS:
-        return widest, (
-            f"With an effective {diagnosis.effective:.0f} records cross-validation is left to "
-            "chance, so the oversmoothed value is advised: it invents no structure."
+        return widest, Words(
+            "With an effective {:.0f} records cross-validation is left to chance, so the "
+            "oversmoothed value is advised: it invents no structure.",
+            diagnosis.effective,
         )
     floor = diagnosis.rounding
     if diagnosis.pairs > STACKED_PAIRS or diagnosis.stacked > STACKED_RECORDS:
-        return max(normal, floor), (
-            "Records stacked on the same coordinates mislead cross-validation, so the "
-            + ("normal-scale value" if normal >= floor else "spacing of the coordinates")
-            + " is advised without it."
+        if normal >= floor:
+            return normal, Words(
+                "Records stacked on the same coordinates mislead cross-validation, so the "
+                "normal-scale value is advised without it."
+            )
+        return floor, Words(
+            "Records stacked on the same coordinates mislead cross-validation, so the spacing of "
+            "the coordinates is advised without it."
         )
     if math.isnan(least_squares) and math.isnan(likelihood):
-        return max(normal, floor), (
+        return max(normal, floor), Words(
             "Neither cross-validation curve has a best value inside its range, so the "
             "normal-scale value is advised."
         )
     if math.isnan(least_squares) or math.isnan(likelihood):
-        name = "likelihood" if math.isnan(least_squares) else "least-squares"
-        value = likelihood if math.isnan(least_squares) else least_squares
-        return max(value, floor), (
-            f"Only the {name} curve has a best value inside its range, and it is advised."
+        name, value = LEAST_SQUARES, least_squares
+        if math.isnan(least_squares):
+            name, value = LIKELIHOOD, likelihood
+        return max(value, floor), Words(
+            "Only the {} curve has a best value inside its range, and it is advised.", name
         )
     wider = max(least_squares, likelihood) / min(least_squares, likelihood)
     if wider <= AGREEMENT:
-        reason = (
-            f"The two cross-validations agree within a factor of {wider:.2f}, and their geometric "
-            "mean, which varies less than either, is advised."
+        reason = Words(
+            "The two cross-validations agree within a factor of {:.2f}, and their geometric mean, "
+            "which varies less than either, is advised.",
+            wider,
         )
     else:
-        reason = (
-            f"The two cross-validations differ by a factor of {wider:.1f}: least squares asks for "
+        reason = Words(
+            "The two cross-validations differ by a factor of {:.1f}: least squares asks for "
             "detail where records crowd, likelihood for calm where they are few. Their geometric "
             "mean is advised as overall bandwidth of an adaptive surface; with one bandwidth "
-            "everywhere, dense places are shown best by the least-squares value."
+            "everywhere, dense places are shown best by the least-squares value.",
+            wider,
         )
     return max(math.sqrt(least_squares * likelihood), floor), reason
 
@@ -330,41 +342,59 @@ def _choose(diagnosis, normal, widest, least_squares, likelihood):
 def _warnings(diagnosis, advised, least_squares, likelihood, near):
     words = []
     if diagnosis.outside:
-        words.append(f"{diagnosis.outside} records lie outside BOUNDARY and were left out.")
+        words.append(Words("{} records lie outside BOUNDARY and were left out.", diagnosis.outside))
     if diagnosis.effective < FEW_RECORDS:
-        counted = f"{diagnosis.records} records"
+        counted = Words("{} records", diagnosis.records)
         if diagnosis.effective < 0.95 * diagnosis.records:
-            counted += f", an effective {diagnosis.effective:.0f} by their weights,"
+            counted = Words(
+                "{}, an effective {:.0f} by their weights,", counted, diagnosis.effective
+            )
         words.append(
-            f"{counted} are few: cross-validation varies a good deal from one such sample to the "
-            "next. Look at the surface at half and at twice the advised value too."
-        )
-    if diagnosis.stacked > 0.02:
-        words.append(
-            f"{100 * diagnosis.stacked:.0f} % of the records share their coordinates with another "
-            f"({diagnosis.records} records on {diagnosis.places} places)."
-            + (
-                " The least-squares score falls without limit as the bandwidth goes to 0, so its "
-                "lowest value says nothing."
-                if diagnosis.collapses
-                else " This draws cross-validation towards narrow bandwidths."
+            Words(
+                "{} are few: cross-validation varies a good deal from one such sample to the "
+                "next. Look at the surface at half and at twice the advised value too.",
+                counted,
             )
         )
+    if diagnosis.stacked > 0.02:
+        found = Words(
+            "{:.0f} % of the records share their coordinates with another ({} records on {} "
+            "places).",
+            100 * diagnosis.stacked,
+            diagnosis.records,
+            diagnosis.places,
+        )
+        consequence = Words("This draws cross-validation towards narrow bandwidths.")
+        if diagnosis.collapses:
+            consequence = Words(
+                "The least-squares score falls without limit as the bandwidth goes to 0, so its "
+                "lowest value says nothing."
+            )
+        words.append(joined([found, consequence]))
     if diagnosis.rounding > 0.1 * advised:
         words.append(
-            f"The coordinates look rounded to a lattice of about {diagnosis.rounding:.3g} m, so "
-            "no detail below that is in the data; narrower bandwidths were not considered."
+            Words(
+                "The coordinates look rounded to a lattice of about {:.3g} m, so no detail below "
+                "that is in the data; narrower bandwidths were not considered.",
+                diagnosis.rounding,
+            )
         )
-    for value, name in ((least_squares, "least-squares"), (likelihood, "likelihood")):
+    for value, name in ((least_squares, LEAST_SQUARES), (likelihood, LIKELIHOOD)):
         if math.isnan(value):
             words.append(
-                f"The {name} curve has no best value inside the range examined: it keeps improving "
-                "to one end."
+                Words(
+                    "The {} curve has no best value inside the range examined: it keeps improving "
+                    "to one end.",
+                    name,
+                )
             )
     if near > NEAR_BOUNDARY:
         words.append(
-            f"{100 * near:.0f} % of the records lie within one bandwidth of the boundary. "
-            "Cross-validation takes the ground outside for empty and comes out somewhat narrow; "
-            "switch on an edge correction for the surface."
+            Words(
+                "{:.0f} % of the records lie within one bandwidth of the boundary. "
+                "Cross-validation takes the ground outside for empty and comes out somewhat "
+                "narrow; switch on an edge correction for the surface.",
+                100 * near,
+            )
         )
     return words

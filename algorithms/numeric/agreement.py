@@ -44,7 +44,7 @@ def cores(ranks, share):
 
 def _rank_limit(share):
     if not 0 < share <= 1:
-        raise InputError(f"The share of a core must be above 0 and up to 1; found {share}.")
+        raise InputError("The share of a core must be above 0 and up to 1; found {}.", share)
     # a pixel is in while the denser ones hold less than the share
     return max(1 - share + 1e-12, 0.0)
 
@@ -60,12 +60,12 @@ def normalised_weights(weights, count):
     weights = np.ones(count) if weights is None or len(weights) == 0 else np.asarray(weights, float)
     if len(weights) != count:
         raise InputError(
-            f"One weight for each of the {count} layers is needed; found {len(weights)}."
+            "One weight for each of the {} layers is needed; found {}.", count, len(weights)
         )
     if not np.isfinite(weights).all() or (weights < 0).any() or not weights.sum() > 0:
         raise InputError(
-            "Weights must be 0 or more and not all 0; found "
-            f"{', '.join(f'{weight:g}' for weight in weights)}."
+            "Weights must be 0 or more and not all 0; found {}.",
+            ", ".join(f"{weight:g}" for weight in weights),
         )
     return weights * count / weights.sum()
 
@@ -139,7 +139,7 @@ def hold_share(ranks, share, draws, generator, progress=silent):
     """
     limit = _rank_limit(share)
     if draws < 1:
-        raise InputError(f"At least 1 draw of the weights is needed; found {draws}.")
+        raise InputError("At least 1 draw of the weights is needed; found {}.", draws)
     count = len(ranks)
     weights = generator.dirichlet(np.ones(count), draws)
     flat = np.asarray(ranks).reshape(count, -1)
@@ -226,8 +226,9 @@ def find_zones(values, inside, held, least_layers, least_pixels):
     layers = len(inside)
     if not 1 <= least_layers <= layers:
         raise InputError(
-            f"The least number of layers must be 1 to {layers}, the number of layers; "
-            f"found {least_layers}."
+            "The least number of layers must be 1 to {}, the number of layers; found {}.",
+            layers,
+            least_layers,
         )
     count = np.sum(inside, axis=0)
     labels, many = ndimage.label(count >= least_layers)

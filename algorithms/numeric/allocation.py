@@ -69,8 +69,9 @@ def check_budget(budget):
     budget = float(budget)
     if not 0 < budget < 1:
         raise InputError(
-            f"BUDGET is the share of the population that the service covers: above 0 and below 1; "
-            f"found {budget:g}."
+            "BUDGET is the share of the population that the service covers: above 0 and "
+            "below 1; found {:g}.",
+            budget,
         )
     return budget
 

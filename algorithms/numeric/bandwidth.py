@@ -76,8 +76,10 @@ def checked_records(x, y, weights=None):
     weights = np.ones(x.size) if weights is None else np.asarray(weights, float).ravel()
     if not x.size == y.size == weights.size:
         raise InputError(
-            "Coordinates and weights must be of one length; "
-            f"found {x.size} x, {y.size} y and {weights.size} weights."
+            "Coordinates and weights must be of one length; found {} x, {} y and {} weights.",
+            x.size,
+            y.size,
+            weights.size,
         )
     if not (np.isfinite(x).all() and np.isfinite(y).all() and np.isfinite(weights).all()):
         raise InputError(
@@ -85,8 +87,9 @@ def checked_records(x, y, weights=None):
         )
     if (weights < 0).any():
         raise InputError(
-            f"Weights must not be negative; found {int((weights < 0).sum())} that are. "
-            "Leave those records out or correct the weight field."
+            "Weights must not be negative; found {} that are. Leave those records out or "
+            "correct the weight field.",
+            int((weights < 0).sum()),
         )
     carrying = weights > 0
     if not carrying.any():
@@ -156,9 +159,11 @@ def spread(x, y, weights=None):
     x, y, weights = checked_records(x, y, weights)
     if np.ptp(x) == 0 and np.ptp(y) == 0:
         raise InputError(
-            f"All {x.size} records with weight lie on one place ({x[0]:.6g}, {y[0]:.6g}), "
-            "so no bandwidth can be worked out from them; set BANDWIDTH by hand or check the "
-            "coordinates."
+            "All {} records with weight lie on one place ({:.6g}, {:.6g}), so no bandwidth "
+            "can be worked out from them; set BANDWIDTH by hand or check the coordinates.",
+            x.size,
+            x[0],
+            y[0],
         )
     standard = standard_spread(x, y, weights)
     quartile = quartile_spread(x, y, weights)

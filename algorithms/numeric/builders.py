@@ -44,9 +44,9 @@ class Recipe:
 
     def __post_init__(self):
         if self.builder not in BUILDERS:
-            raise InputError(f"BUILDER is one of {', '.join(BUILDERS)}; found {self.builder!r}.")
+            raise InputError("BUILDER is one of {}; found {!r}.", ", ".join(BUILDERS), self.builder)
         if not self.zone_count >= 1:
-            raise InputError(f"ZONE_COUNTS must be 1 or more; found {self.zone_count}.")
+            raise InputError("ZONE_COUNTS must be 1 or more; found {}.", self.zone_count)
 
 
 def build(graph, totals, recipe, replicates, generator):

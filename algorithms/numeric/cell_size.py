@@ -170,7 +170,7 @@ def sweep(
     """
     x, y = np.asarray(x, float), np.asarray(y, float)
     if len(x) < 2:
-        raise InputError(f"RECORDS: a sweep needs at least 2 records; found {len(x)}.")
+        raise InputError("RECORDS: a sweep needs at least 2 records; found {}.", len(x))
     sizes = np.unique(np.asarray(sizes, float))
     if not (len(sizes) and sizes[0] > 0):
         raise InputError("CELL_SIZES: every size must be above 0.")

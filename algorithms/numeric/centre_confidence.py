@@ -49,7 +49,7 @@ def confidence_ellipse(
     12; Cochran (1977), Sampling Techniques, ch. 6, for the linearised covariance.
     """
     if not 0.0 < level < 1.0:
-        raise InputError(f"Confidence level must lie between 0 and 1; found {level}.")
+        raise InputError("Confidence level must lie between 0 and 1; found {}.", level)
     if rng is None:
         raise InputError("A bootstrap needs a random generator; pass rng.")
     x, y, weights = checked_records(x, y, weights)

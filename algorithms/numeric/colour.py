@@ -9,6 +9,7 @@ import re
 import numpy as np
 
 from .errors import InputError
+from .words import Words
 
 # Ottosson (2020), A perceptual color space for image processing: linear sRGB to cone responses,
 # and cube roots of cone responses to L, a, b.
@@ -46,21 +47,21 @@ _XYZ = _XYZ * np.linalg.solve(_XYZ, _WHITE_XYZ)
 # Machado, Oliveira & Fernandes (2009), IEEE Trans. Vis. Comput. Graph. 15:1291, severity 1.0;
 # they apply to linear RGB.
 DEFICIENCIES = {
-    "protanopia": np.array(
+    Words("protanopia"): np.array(
         [
             [0.152286, 1.052583, -0.204868],
             [0.114503, 0.786281, 0.099216],
             [-0.003882, -0.048116, 1.051998],
         ]
     ),
-    "deuteranopia": np.array(
+    Words("deuteranopia"): np.array(
         [
             [0.367322, 0.860646, -0.227968],
             [0.280085, 0.672501, 0.047413],
             [-0.011820, 0.042940, 0.968881],
         ]
     ),
-    "tritanopia": np.array(
+    Words("tritanopia"): np.array(
         [
             [1.255528, -0.076749, -0.178779],
             [-0.078411, 0.930809, 0.147602],
@@ -278,7 +279,7 @@ def from_hex(text):
     """
     digits = text.strip().lstrip("#")
     if not re.fullmatch(r"[0-9a-fA-F]{3}|[0-9a-fA-F]{6}", digits):
-        raise InputError(f"A colour is written like #2e7179; found “{text}”.")
+        raise InputError("A colour is written like #2e7179; found “{}”.", text)
     if len(digits) == 3:
         digits = "".join(2 * digit for digit in digits)
     return np.array([int(digits[place : place + 2], 16) for place in (0, 2, 4)]) / 255

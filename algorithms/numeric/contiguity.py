@@ -16,6 +16,7 @@ from scipy.sparse.csgraph import connected_components
 from .borders import exact_borders, near_borders, overlapping_pairs
 from .errors import InputError
 from .progress import part, silent
+from .words import Words
 
 
 @dataclass(frozen=True)
@@ -48,17 +49,19 @@ class Findings:
     def sentences(self):
         """The findings that are not zero, a plain sentence each."""
         wording = (
-            (self.repaired, "{} units had outlines that cross themselves; they were repaired."),
-            (self.duplicates, "{} units repeat the outline of another unit; they were kept."),
-            (self.slivers, "{} shared borders overlap by slivers; they were matched."),
-            (self.gaps, "{} shared borders leave narrow gaps; they were matched."),
-            (self.overlaps, "{} pairs of units overlap; each pair counts as neighbours."),
-            (
-                self.islands,
+            Words(
+                "{} units had outlines that cross themselves; they were repaired.", self.repaired
+            ),
+            Words("{} units repeat the outline of another unit; they were kept.", self.duplicates),
+            Words("{} shared borders overlap by slivers; they were matched.", self.slivers),
+            Words("{} shared borders leave narrow gaps; they were matched.", self.gaps),
+            Words("{} pairs of units overlap; each pair counts as neighbours.", self.overlaps),
+            Words(
                 "{} islands touch nothing else; each was joined to its nearest neighbour.",
+                self.islands,
             ),
         )
-        return [text.format(number) for number, text in wording if number]
+        return [words for words in wording if words.values[0]]
 
 
 @dataclass(frozen=True)
@@ -125,7 +128,7 @@ def from_pairs(units, pairs, border=None):
     """
     pairs = np.sort(np.asarray(pairs, np.int64).reshape(-1, 2), axis=1)
     if len(pairs) and (pairs.min() < 0 or pairs.max() >= units):
-        raise InputError(f"A pair of neighbours names a unit outside 0 to {units - 1}.")
+        raise InputError("A pair of neighbours names a unit outside 0 to {}.", units - 1)
     border = np.zeros(len(pairs)) if border is None else np.asarray(border, float)
     apart = pairs[:, 0] != pairs[:, 1]
     codes, place = np.unique(pairs[apart, 0] * units + pairs[apart, 1], return_inverse=True)
@@ -171,9 +174,10 @@ def contiguity(polygons, tolerance=None, join_islands=True, progress=silent):
     )
     if not len(found.pairs):
         raise InputError(
-            f"UNITS: none of the {len(polygons)} units shares a border with another, so there is "
-            "nothing to group into zones. Zones need polygons that meet along their borders; for "
-            "scattered places use the zoning variance from points."
+            "UNITS: none of the {} units shares a border with another, so there is nothing "
+            "to group into zones. Zones need polygons that meet along their borders; for "
+            "scattered places use the zoning variance from points.",
+            len(polygons),
         )
     joins = np.empty((0, 2), np.int64)
     if join_islands:
@@ -203,8 +207,8 @@ def repaired_polygons(polygons):
     polygons = np.array(polygons, dtype=object)
     if len(polygons) < 2:
         raise InputError(
-            f"UNITS: zones are made by grouping units, so at least two are needed; "
-            f"found {len(polygons)}."
+            "UNITS: zones are made by grouping units, so at least two are needed; found {}.",
+            len(polygons),
         )
     broken = ~(shapely.is_valid(polygons) & (shapely.get_dimensions(polygons) == 2))
     for index in np.flatnonzero(broken):
@@ -212,8 +216,10 @@ def repaired_polygons(polygons):
     empty = np.flatnonzero(~(shapely.area(polygons) > 0))
     if len(empty):
         raise InputError(
-            f"UNITS: {len(empty)} units have no area (the first is number {empty[0] + 1}); "
-            "remove them or give them an outline."
+            "UNITS: {} units have no area (the first is number {}); remove them or give "
+            "them an outline.",
+            len(empty),
+            empty[0] + 1,
         )
     return polygons, int(broken.sum())
 

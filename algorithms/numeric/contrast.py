@@ -151,17 +151,19 @@ def pool(record_places, background_places, weights_mean="counts"):
     groups = [checked_records(*places) for places in (record_places, background_places)]
     x, y, weights = (np.concatenate(columns) for columns in zip(*groups))
     if weights_mean not in WEIGHTS_MEAN:
-        raise InputError(f"WEIGHTS_MEAN must be counts or values; found {weights_mean!r}.")
+        raise InputError("WEIGHTS_MEAN must be counts or values; found {!r}.", weights_mean)
     counted = weights_mean == "counts"
     if counted and not np.array_equal(weights, np.round(weights)):
         raise InputError(
-            "Weights that mean counts must be whole numbers; found "
-            f"{weights[weights != np.round(weights)][0]:.6g}. Say that they mean values instead."
+            "Weights that mean counts must be whole numbers; found {:.6g}. Say that they "
+            "mean values instead.",
+            weights[weights != np.round(weights)][0],
         )
     if counted and weights.sum() >= LARGEST_HYPERGEOMETRIC:
         raise InputError(
-            f"Counts that add up to {weights.sum():.4g} cannot be relabelled one by one; say that "
-            "weights mean values instead."
+            "Counts that add up to {:.4g} cannot be relabelled one by one; say that "
+            "weights mean values instead.",
+            weights.sum(),
         )
     if not counted:
         weights = np.concatenate([own * effective_size(own) / own.sum() for _, _, own in groups])
@@ -263,8 +265,10 @@ def density_contrast(
         shown &= mask >= 0.5
     if not shown.any():
         raise InputError(
-            f"No pixel has {least_support:g} effective background records behind it (the most is "
-            f"{support.max():.3g}); lower LEAST_BACKGROUND or widen BANDWIDTH."
+            "No pixel has {:g} effective background records behind it (the most is "
+            "{:.3g}); lower LEAST_BACKGROUND or widen BANDWIDTH.",
+            least_support,
+            support.max(),
         )
     log_ratio = np.full(grid.shape, np.nan)
     log_ratio[shown] = _log_ratio(records[shown], background[shown], pooled.totals)
@@ -324,7 +328,7 @@ def relabel(contrast, count, generator, progress=silent):
     Westfall & Young (1993), Resampling-Based Multiple Testing (p-values from the maximum).
     """
     if count < 1:
-        raise InputError(f"RELABELLINGS must be 1 or more; found {count}.")
+        raise InputError("RELABELLINGS must be 1 or more; found {}.", count)
     shown = contrast.shown
     observed, noise = contrast.log_ratio[shown], contrast.noise[shown]
     # Equal labellings must count as equal whatever the rounding of the transforms

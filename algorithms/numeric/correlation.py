@@ -78,22 +78,27 @@ def relation(graph, x_counts, x_totals, y_counts, y_totals):
     columns = {name: np.asarray(values, float) for name, values in given.items()}
     for name, values in columns.items():
         if values.shape != (graph.units,):
-            raise InputError(f"{name}: {graph.units} values are needed; found {values.shape}.")
+            raise InputError("{}: {} values are needed; found {}.", name, graph.units, values.shape)
         bad = ~(np.isfinite(values) & (values >= 0))
         if bad.any():
             raise InputError(
-                f"{name}: {bad.sum()} units have a missing or negative value (the first is number "
-                f"{np.argmax(bad) + 1}: {values[np.argmax(bad)]:g}); correct or leave them out."
+                "{}: {} units have a missing or negative value (the first is number {}: {:g}); "
+                "correct or leave them out.",
+                name,
+                bad.sum(),
+                np.argmax(bad) + 1,
+                values[np.argmax(bad)],
             )
         if name.endswith("TOTAL") and not values.sum() > 0:
-            raise InputError(f"{name}: it is 0 in every unit, so no zone has a rate.")
+            raise InputError("{}: it is 0 in every unit, so no zone has a rate.", name)
     made = Relation(graph, *columns.values())
     for axis in ("x", "y"):
         values = zone_values(getattr(made, f"{axis}_counts"), getattr(made, f"{axis}_totals"))
         if not np.nanmax(values) > np.nanmin(values):
             raise InputError(
-                f"{axis.upper()}_COUNT: its rate is the same in every unit, so it correlates "
-                "with nothing; choose another field."
+                "{}_COUNT: its rate is the same in every unit, so it correlates with nothing; "
+                "choose another field.",
+                axis.upper(),
             )
     return made
 
@@ -200,10 +205,10 @@ def simulate_correlation(relation, recipes, replicates, seed, executor=None, pro
     least = min(recipe.zone_count for recipe in recipes)
     if least < LEAST_ZONES:
         raise InputError(
-            f"ZONE_COUNTS: a correlation needs {LEAST_ZONES} zones or more; found {least}."
+            "ZONE_COUNTS: a correlation needs {} zones or more; found {}.", LEAST_ZONES, least
         )
     if not replicates >= 2:
-        raise InputError(f"REPLICATES: two zonings a scale are the least; found {replicates}.")
+        raise InputError("REPLICATES: two zonings a scale are the least; found {}.", replicates)
     root = seed if isinstance(seed, np.random.SeedSequence) else np.random.SeedSequence(seed)
     efforts = [EFFORTS[recipe.builder] for recipe in recipes]
     batches = plan_batches(relation.graph.units, [replicates] * len(recipes), root, efforts)

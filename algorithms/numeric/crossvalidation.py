@@ -180,7 +180,7 @@ def _log_sum(terms):
 def _checked_bandwidths(x, bandwidths):
     bandwidths = np.atleast_1d(np.asarray(bandwidths, float))
     if not (np.isfinite(bandwidths).all() and (bandwidths > 0).all() and bandwidths.size):
-        raise InputError(f"Bandwidths must be above 0; found {bandwidths.tolist()}.")
+        raise InputError("Bandwidths must be above 0; found {}.", bandwidths.tolist())
     if np.size(x) < 2:
-        raise InputError(f"Cross-validation needs two records; found {np.size(x)}.")
+        raise InputError("Cross-validation needs two records; found {}.", np.size(x))
     return bandwidths

@@ -19,6 +19,7 @@ from .overlay import atom_of_records, overlay
 from .progress import part, silent
 from .remainders import disclosing, search
 from .wording import derivation
+from .words import Words
 
 EFFORT = 20_000
 
@@ -199,8 +200,9 @@ def audit(tables, least_count, tolerance=0.0, records=None, effort=EFFORT, progr
 def _check(tables, least_count):
     if least_count < 2 or least_count != int(least_count):
         raise InputError(
-            f"The least count must be a whole number of 2 or more, since a count of 1 is always "
-            f"a person; found {least_count}."
+            "The least count must be a whole number of 2 or more, since a count of 1 is "
+            "always a person; found {}.",
+            least_count,
         )
     if not len(tables):
         raise InputError("The audit needs at least one published layer; found none.")
@@ -208,7 +210,10 @@ def _check(tables, least_count):
         for values in (table.lower, table.upper, table.labels):
             if len(values) != len(table.zones):
                 raise InputError(
-                    f"{table.name}: {len(table.zones)} zones but {len(values)} counts or labels."
+                    "{}: {} zones but {} counts or labels.",
+                    table.name,
+                    len(table.zones),
+                    len(values),
                 )
 
 
@@ -270,7 +275,7 @@ def _consistent(counts, tables, true_counts):
     searched, table, loosened = reconcile(counts)
     names = row_names(tables)
     words = [
-        f"{names[row]} would have to differ by {loosened[row]:.0f}"
+        Words("{} would have to differ by {:.0f}", names[row], loosened[row])
         for row in np.argsort(-loosened, kind="stable")
         if loosened[row] > 0
     ]
@@ -284,7 +289,9 @@ def _consistent(counts, tables, true_counts):
 def row_names(tables):
     """What a reader calls every row of the published counts."""
     zones = [f"{table.name} {label}" for table in tables for label in table.labels]
-    return zones + [f"the total of {table.name}" for table in tables if table.total is not None]
+    return zones + [
+        Words("the total of {}", table.name) for table in tables if table.total is not None
+    ]
 
 
 def _risk(finding, tables, laid, counts, atom_of, step_of, true_counts):
@@ -293,7 +300,7 @@ def _risk(finding, tables, laid, counts, atom_of, step_of, true_counts):
     true = np.nan if true_counts is None else float(true_counts[unknowns].sum())
     words = derivation(finding, tables, _sources(tables), counts)
     if step_of[unknowns].min() > 0:
-        words += ", added between the releases"
+        words = Words("{}, added between the releases", words)
     return Risk(
         kind=finding.kind,
         polygon=shapes[0] if len(shapes) == 1 else shapely.union_all(shapes),

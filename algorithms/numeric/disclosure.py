@@ -44,20 +44,21 @@ class Rules:
     def __post_init__(self):
         if self.least_count != int(self.least_count) or self.least_count < 2:
             raise InputError(
-                f"LEAST_COUNT must be a whole number of 2 or more; found {self.least_count}. "
-                "A threshold of 1 would publish single contributors."
+                "LEAST_COUNT must be a whole number of 2 or more; found {}. A threshold of 1 "
+                "would publish single contributors.",
+                self.least_count,
             )
         if self.dominance_n != int(self.dominance_n) or self.dominance_n < 0:
             raise InputError(
-                f"DOMINANCE_N must be a whole number, 0 for off; found {self.dominance_n}."
+                "DOMINANCE_N must be a whole number, 0 for off; found {}.", self.dominance_n
             )
         if self.dominance_n and not 0 < self.dominance_share < 100:
             raise InputError(
-                "DOMINANCE_SHARE must lie between 0 and 100 %, without either; "
-                f"found {self.dominance_share}."
+                "DOMINANCE_SHARE must lie between 0 and 100 %, without either; found {}.",
+                self.dominance_share,
             )
         if not (math.isfinite(self.p_percent) and self.p_percent >= 0):
-            raise InputError(f"P_PERCENT must be 0 (off) or more; found {self.p_percent}.")
+            raise InputError("P_PERCENT must be 0 (off) or more; found {}.", self.p_percent)
 
 
 @dataclass(frozen=True)
@@ -162,8 +163,9 @@ def contributions(cells, cell_count, weights=None, contributors=None, leading=0)
     if len(weights) and not (np.isfinite(weights).all() and weights.min() >= 0):
         bad = int((~np.isfinite(weights) | (weights < 0)).sum())
         raise InputError(
-            f"{bad} records have a negative or missing weight; leave them out or correct them, "
-            "because the disclosure rules hold for contributions of one sign only."
+            "{} records have a negative or missing weight; leave them out or correct them, "
+            "because the disclosure rules hold for contributions of one sign only.",
+            bad,
         )
     total = np.bincount(cells, weights, cell_count)
     unknown = np.zeros(cell_count)
@@ -287,8 +289,9 @@ def share_parts(weights, numerator, count):
     bad = ~np.isfinite(numerator) | (numerator < 0) | (rest < -1e-9 * np.maximum(weights, 1.0))
     if bad.any():
         raise InputError(
-            f"NUMERATOR: {int(bad.sum())} records hold a missing value, one below 0 or one above "
-            "the record's weight (1 without WEIGHT); a share needs 0 ≤ numerator ≤ weight."
+            "NUMERATOR: {} records hold a missing value, one below 0 or one above the "
+            "record's weight (1 without WEIGHT); a share needs 0 ≤ numerator ≤ weight.",
+            int(bad.sum()),
         )
     return numerator, np.maximum(rest, 0.0)
 

@@ -130,8 +130,9 @@ def record_factors(x, y, bandwidths, mask, grid, kernel="gaussian", progress=sil
     lost = np.count_nonzero(factors <= 1e-6)
     if lost:
         raise InputError(
-            f"{lost} records lie too far outside BOUNDARY for an edge correction by record; "
-            "leave out records outside the boundary."
+            "{} records lie too far outside BOUNDARY for an edge correction by record; "
+            "leave out records outside the boundary.",
+            lost,
         )
     return factors
 
@@ -162,7 +163,7 @@ def place_factors(bandwidths, mask, grid, kernel="gaussian", progress=silent):
     widths = np.broadcast_to(np.asarray(bandwidths, float) / grid.cell, mask.shape)
     low, high = float(widths.min()), float(widths.max())
     if not (np.isfinite(high) and low > 0):
-        raise InputError(f"BANDWIDTH must be above 0 at every pixel; found {low * grid.cell}.")
+        raise InputError("BANDWIDTH must be above 0 at every pixel; found {}.", low * grid.cell)
     steps = int(np.ceil(np.log(high / low) / np.log(_RUNG_RATIO) - 1e-9))
     rungs = np.geomspace(low, high, max(steps, 3) + 1) if steps else np.array([low])
     spectrum, period = _mask_spectrum(mask, kernel.reach * rungs[-1])

@@ -70,7 +70,7 @@ def estimate(
     Estimate
     """
     if edge not in EDGES:
-        raise InputError(f"EDGE must be none, record or place; found {edge!r}.")
+        raise InputError("EDGE must be none, record or place; found {!r}.", edge)
     edge = "none" if mask is None else edge
     weights = np.broadcast_to(np.asarray(weights, float), np.shape(x))
     steps = {"none": (0.0, 0.35), "record": (0.3, 0.5), "place": (0.0, 0.25)}[edge]
@@ -115,7 +115,7 @@ def without_noise(found, limit):
     Estimate
     """
     if not limit > 0:
-        raise InputError(f"MOST_ERROR must be above 0; found {limit}.")
+        raise InputError("MOST_ERROR must be above 0; found {}.", limit)
     with np.errstate(invalid="ignore"):
         steady = found.relative_error <= limit
     return replace(found, inside=found.inside & steady)

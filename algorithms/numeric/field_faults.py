@@ -4,6 +4,7 @@ import numpy as np
 
 from .record_faults import FAULT, FINE, LOOK, SMALL_NUMBER, Check
 from .record_words import of_all, share_words
+from .words import Words
 
 DOMINANT_SHARE = 0.1
 
@@ -25,21 +26,30 @@ def check_duplicates(records, content=None):
     """
     found = np.zeros(len(records.x), bool)
     if content is None:
-        return Check("duplicate", FINE, found, "Without fields, duplicates cannot be told.")
+        return Check(
+            Words("duplicate"), FINE, found, Words("Without fields, duplicates cannot be told.")
+        )
     placed = np.flatnonzero(records.placed)
     rows = np.column_stack([records.stored_x, records.stored_y, content])[placed]
     _, first, inverse = np.unique(rows, axis=0, return_index=True, return_inverse=True)
     repeated = np.arange(len(placed)) != first[inverse.ravel()]
     found[placed[repeated]] = True
     if not found.any():
-        return Check("duplicate", FINE, found, "No record repeats another in place and all fields.")
+        return Check(
+            Words("duplicate"),
+            FINE,
+            found,
+            Words("No record repeats another in place and all fields."),
+        )
     return Check(
-        "duplicate",
+        Words("duplicate"),
         FAULT,
         found,
-        f"{of_all(found)} repeat another record, with the same place and the same value in every "
-        f"field.",
-        "Most likely a file was loaded twice; remove the repeats, which would count double.",
+        Words(
+            "{} repeat another record, with the same place and the same value in every field.",
+            of_all(found),
+        ),
+        Words("Most likely a file was loaded twice; remove the repeats, which would count double."),
     )
 
 
@@ -61,14 +71,19 @@ def check_keys(keys):
     _, first, inverse = np.unique(labels.astype(str), return_index=True, return_inverse=True)
     repeated = (np.arange(len(labels)) != first[inverse.ravel()]) & ~missing
     found = repeated | missing
+    key = Words("record number")
     if not found.any():
-        return Check("record number", FINE, found, "Every record has a number of its own.")
+        return Check(key, FINE, found, Words("Every record has a number of its own."))
     return Check(
-        "record number",
+        key,
         FAULT,
         found,
-        f"{of_all(repeated)} have a number that was given before, {of_all(missing)} have none.",
-        "Find out whether a record was loaded twice or two records were given one number.",
+        Words(
+            "{} have a number that was given before, {} have none.",
+            of_all(repeated),
+            of_all(missing),
+        ),
+        Words("Find out whether a record was loaded twice or two records were given one number."),
     )
 
 
@@ -91,32 +106,33 @@ def check_weights(weights):
         dominant = known & (weights > DOMINANT_SHARE * total) & (known.sum() >= SMALL_NUMBER)
     return [
         _weight_check(
-            "null weight",
+            Words("null weight"),
             FAULT,
             ~known,
-            "have no weight or one that is not a number",
-            "Find the weight, or give 1 where a record counts once. They are left out.",
+            Words("{} have no weight or one that is not a number."),
+            Words("Find the weight, or give 1 where a record counts once. They are left out."),
         ),
         _weight_check(
-            "negative weight",
+            Words("negative weight"),
             FAULT,
             negative,
-            "have a negative weight",
-            "A weight is a number of events or people; correct it. They are left out.",
+            Words("{} have a negative weight."),
+            Words("A weight is a number of events or people; correct it. They are left out."),
         ),
         _weight_check(
-            "zero weight",
+            Words("zero weight"),
             LOOK,
             zero,
-            "have the weight 0",
-            "They count for nothing; make sure that 0 does not stand for “unknown”.",
+            Words("{} have the weight 0."),
+            Words("They count for nothing; make sure that 0 does not stand for “unknown”."),
         ),
         _weight_check(
-            "dominant weight",
+            Words("dominant weight"),
             LOOK,
             dominant,
-            f"have more than {share_words(DOMINANT_SHARE)} of the total weight each",
-            "A map of this weight shows these records and little else; check the value.",
+            Words("{} have more than {} of the total weight each."),
+            Words("A map of this weight shows these records and little else; check the value."),
+            share_words(DOMINANT_SHARE),
         ),
     ]
 
@@ -134,16 +150,20 @@ def check_nulls(name, values):
     Check
     """
     found = null_mask(values)
-    key = f"null {name}"
+    key = Words("null {}", name)
     if not found.any():
-        return Check(key, FINE, found, f"The field {name} has a value in every record.")
+        return Check(key, FINE, found, Words("The field {} has a value in every record.", name))
     share = found.mean()
     return Check(
         key,
         FAULT,
         found,
-        f"{of_all(found)} have no value in the field {name} ({share_words(share)} of all).",
-        "Records without a group form no group of their own; complete them or count them apart.",
+        Words(
+            "{} have no value in the field {} ({} of all).", of_all(found), name, share_words(share)
+        ),
+        Words(
+            "Records without a group form no group of their own; complete them or count them apart."
+        ),
     )
 
 
@@ -155,7 +175,7 @@ def null_mask(values):
     return np.array([value is None or value != value or value == "" for value in values], bool)
 
 
-def _weight_check(key, severity, found, words, advice):
+def _weight_check(key, severity, found, template, advice, *values):
     if not found.any():
-        return Check(key, FINE, found, f"No records {words}.")
-    return Check(key, severity, found, f"{of_all(found)} {words}.", advice)
+        return Check(key, FINE, found, template.filled(Words("No records"), *values))
+    return Check(key, severity, found, template.filled(of_all(found), *values), advice)

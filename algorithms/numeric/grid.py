@@ -29,10 +29,10 @@ class Grid:
 
     def __post_init__(self):
         if not (math.isfinite(self.cell) and self.cell > 0):
-            raise InputError(f"Cell size must be above 0; found {self.cell}.")
+            raise InputError("Cell size must be above 0; found {}.", self.cell)
         if self.rows < 1 or self.columns < 1:
             raise InputError(
-                f"A grid needs pixels; found {self.rows} rows x {self.columns} columns."
+                "A grid needs pixels; found {} rows x {} columns.", self.rows, self.columns
             )
 
     @property
@@ -105,7 +105,7 @@ def covering(bounds, cell, margin=0.0):
     Grid
     """
     if not (math.isfinite(cell) and cell > 0):
-        raise InputError(f"Cell size must be above 0; found {cell}.")
+        raise InputError("Cell size must be above 0; found {}.", cell)
     left, bottom, right, top = (float(value) for value in bounds)
     if not all(math.isfinite(value) for value in (left, bottom, right, top)):
         raise InputError(

@@ -67,13 +67,18 @@ def check_zone_count(graph, zone_count):
     """Say in words why a number of zones cannot be made, where it cannot."""
     if zone_count > graph.units:
         raise InputError(
-            f"ZONE_COUNTS: {zone_count} zones cannot be made of {graph.units} units; ask for fewer."
+            "ZONE_COUNTS: {} zones cannot be made of {} units; ask for fewer.",
+            zone_count,
+            graph.units,
         )
     parts = graph.components()[0]
     if zone_count < parts:
         raise InputError(
-            f"ZONE_COUNTS: the units fall into {parts} separate groups that no zone may cross, so "
-            f"{zone_count} zones are too few; ask for at least {parts}, or leave KEEP_WITHIN empty."
+            "ZONE_COUNTS: the units fall into {} separate groups that no zone may cross, "
+            "so {} zones are too few; ask for at least {}, or leave KEEP_WITHIN empty.",
+            parts,
+            zone_count,
+            parts,
         )
 
 

@@ -202,8 +202,12 @@ def _candidates(bounds, size, shape, orientation, origin, angle, most):
     number = (last_column - first_column + 1) * (last_row - first_row + 1)
     if number > most:
         raise InputError(
-            f"Cells of size {size:g} would cover the area with {number:,} cells, more than "
-            f"{most:,}; choose a size of {size * math.sqrt(number / most) * 1.05:.3g} or more."
+            "Cells of size {:g} would cover the area with {:,} cells, more than {:,}; "
+            "choose a size of {:.3g} or more.",
+            size,
+            number,
+            most,
+            size * math.sqrt(number / most) * 1.05,
         )
     row, column = np.meshgrid(
         np.arange(first_row, last_row + 1), np.arange(first_column, last_column + 1), indexing="ij"
@@ -220,9 +224,9 @@ def _candidates(bounds, size, shape, orientation, origin, angle, most):
 
 def _check(size, orientation=POINTY):
     if not (math.isfinite(size) and size > 0):
-        raise InputError(f"Cell size must be above 0; found {size}.")
+        raise InputError("Cell size must be above 0; found {}.", size)
     if orientation not in (POINTY, FLAT):
-        raise InputError(f"A hexagon's orientation is 'pointy' or 'flat'; found {orientation!r}.")
+        raise InputError("A hexagon's orientation is 'pointy' or 'flat'; found {!r}.", orientation)
 
 
 def _into_frame(x, y, origin, angle):

@@ -35,6 +35,7 @@ from .colour import (
 )
 from .errors import InputError
 from .ranks import look_up
+from .words import Words
 
 PAPER, DARK = 1.0, 0.2
 FULL_COVERAGE = 0.5
@@ -97,7 +98,7 @@ def default_inks(count):
         Another number of layers.
     """
     if not 1 <= count <= MOST_LAYERS:
-        raise InputError(f"Inks are for 1 to {MOST_LAYERS} layers; found {count}.")
+        raise InputError("Inks are for 1 to {} layers; found {}.", MOST_LAYERS, count)
     return np.array([from_hex(text) for text in DEFAULT_INKS[max(count, 2)][:count]])
 
 
@@ -141,7 +142,9 @@ def own_inks(text, count):
     """
     pieces = re.split(r"[;,\s]+", text.strip())
     if len(pieces) != count:
-        raise InputError(f"A colour for each of the {count} layers is needed; found {len(pieces)}.")
+        raise InputError(
+            "A colour for each of the {} layers is needed; found {}.", count, len(pieces)
+        )
     return as_inks([from_hex(piece) for piece in pieces])
 
 
@@ -375,23 +378,37 @@ def warnings_in_words(inks, names):
     normal = differences(inks)
     for first, second in combinations(range(len(inks)), 2):
         apart = normal[first, second]
-        pair = " and ".join(f"“{names[one]}” ({to_hex(inks[one])})" for one in (first, second))
+        pair = [f"“{names[one]}” ({to_hex(inks[one])})" for one in (first, second)]
         if apart < ALIKE:
             words.append(
-                f"The inks of {pair} cannot be told apart (CIEDE2000 {apart:.1f}); "
-                "choose other inks for one of them."
+                Words(
+                    "The inks of {} and {} cannot be told apart (CIEDE2000 {:.1f}); choose other "
+                    "inks for one of them.",
+                    *pair,
+                    apart,
+                )
             )
         elif apart < CLOSE:
             words.append(
-                f"The inks of {pair} are close (CIEDE2000 {apart:.1f}, below {CLOSE:.0f}); "
-                "a reader may mistake one for the other."
+                Words(
+                    "The inks of {} and {} are close (CIEDE2000 {:.1f}, below {:.0f}); a reader "
+                    "may mistake one for the other.",
+                    *pair,
+                    apart,
+                    CLOSE,
+                )
             )
     for vision in VISIONS[1:]:
         apart = differences(inks, vision)
         for first, second in combinations(range(len(inks)), 2):
             if apart[first, second] < ALIKE <= normal[first, second]:
                 words.append(
-                    f"Readers with {vision} cannot tell “{names[first]}” from “{names[second]}” "
-                    f"(CIEDE2000 {apart[first, second]:.1f})."
+                    Words(
+                        "Readers with {} cannot tell “{}” from “{}” (CIEDE2000 {:.1f}).",
+                        vision,
+                        names[first],
+                        names[second],
+                        apart[first, second],
+                    )
                 )
     return words

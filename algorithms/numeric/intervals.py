@@ -89,14 +89,17 @@ def rounded(values, base, at_random=True):
         at most half a base away, the half included because the rule for it is not known.
     """
     if base < 2 or base != int(base):
-        raise InputError(f"A rounding base must be a whole number of 2 or more; found {base}.")
+        raise InputError("A rounding base must be a whole number of 2 or more; found {}.", base)
     values = _whole_or_null(values)
     off = values % base != 0
     off &= ~np.isnan(values)
     if off.any():
         raise InputError(
-            f"Counts said to be rounded to {base} hold {values[off][0]:g}, which is no multiple "
-            f"of {base}; give the base that was used, or call them exact."
+            "Counts said to be rounded to {} hold {:g}, which is no multiple of {}; give "
+            "the base that was used, or call them exact.",
+            base,
+            values[off][0],
+            base,
         )
     reach = base - 1 if at_random else base // 2
     missing = np.isnan(values)
@@ -111,7 +114,7 @@ def noisy(values, epsilon, doubt=0.001):
     Sundararajan 2012 SIAM J. Comput. 41:1673), so that what follows is near certain, not certain.
     """
     if not epsilon > 0:
-        raise InputError(f"The privacy budget of a noisy layer must be above 0; found {epsilon}.")
+        raise InputError("The privacy budget of a noisy layer must be above 0; found {}.", epsilon)
     values = _whole_or_null(values, negative=True)
     ratio = np.exp(-epsilon)
     reach = max(0.0, np.ceil(np.log(doubt * (1 + ratio) / 2) / np.log(ratio) - 1))
@@ -126,7 +129,7 @@ def below_threshold(values, lower, upper, threshold):
     A layer that publishes zeros gives away that a withheld count is at least 1.
     """
     if threshold < 2 or threshold != int(threshold):
-        raise InputError(f"A withholding threshold must be 2 or more; found {threshold}.")
+        raise InputError("A withholding threshold must be 2 or more; found {}.", threshold)
     values = np.asarray(values, float)
     missing = np.isnan(values)
     least = 1.0 if (values == 0).any() else 0.0
@@ -138,9 +141,9 @@ def _whole_or_null(values, negative=False):
     known = values[~np.isnan(values)]
     if not np.isfinite(known).all() or (np.abs(known - np.round(known)) > WHOLE).any():
         wrong = known[~np.isfinite(known) | (np.abs(known - np.round(known)) > WHOLE)][0]
-        raise InputError(f"Published counts must be whole numbers; found {wrong:g}.")
+        raise InputError("Published counts must be whole numbers; found {:g}.", wrong)
     if not negative and (known < 0).any():
-        raise InputError(f"Published counts must be 0 or more; found {known.min():g}.")
+        raise InputError("Published counts must be 0 or more; found {:g}.", known.min())
     return np.round(values)
 
 

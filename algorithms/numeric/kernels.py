@@ -77,4 +77,4 @@ def kernel_named(name):
         return KERNELS[name]
     except (KeyError, TypeError):
         choices = " or ".join(KERNELS)
-        raise InputError(f"KERNEL must be {choices}; found {name!r}.") from None
+        raise InputError("KERNEL must be {}; found {!r}.", choices, name) from None

@@ -114,7 +114,7 @@ def run_scales(
     list of Scale
     """
     if replicates < 1:
-        raise InputError(f"REPLICATES must be at least 1; found {replicates}.")
+        raise InputError("REPLICATES must be at least 1; found {}.", replicates)
     batches = -(-replicates // BATCH)
     tasks = [
         (

@@ -70,7 +70,7 @@ def random_tiling(shape, size, rotate, generator):
     Tiling
     """
     if shape not in _HALF_NEIGHBOURS:
-        raise InputError(f"A cell's shape is 'hexagon' or 'square'; found {shape!r}.")
+        raise InputError("A cell's shape is 'hexagon' or 'square'; found {!r}.", shape)
     first, second, turn = generator.random(3)
     # Where the lattice spanned by the two shifts to a neighbour repeats, so does the tiling.
     if shape == HEXAGON:

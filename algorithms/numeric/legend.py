@@ -102,8 +102,10 @@ def draw_legend(inks, names, units, words, strengths=None):
     count = len(inks)
     if not count == len(names) == len(units):
         raise InputError(
-            f"A legend needs an ink, a name and a unit for each layer; found {count}, "
-            f"{len(names)} and {len(units)}."
+            "A legend needs an ink, a name and a unit for each layer; found {}, {} and {}.",
+            count,
+            len(names),
+            len(units),
         )
     strengths = np.ones(count) if strengths is None else np.asarray(strengths, float)
     drawing = _Drawing()

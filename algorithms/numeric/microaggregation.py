@@ -91,8 +91,10 @@ def neighbour_groups(x, y, least, weights=None, contributors=None, progress=sile
     found = behind.sum() ** 2 / max((behind**2).sum(), 1e-300)
     if found < least:
         raise InputError(
-            f"LEAST_COUNT {least}: all records together come from {found:.3g} effective "
-            "contributors (few, or a few who hold most); no surface of them can be released."
+            "LEAST_COUNT {}: all records together come from {:.3g} effective contributors "
+            "(few, or a few who hold most); no surface of them can be released.",
+            least,
+            found,
         )
     leaves, waiting, done = [], [np.arange(len(used))], 0
     while waiting:

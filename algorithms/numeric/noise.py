@@ -43,13 +43,13 @@ def scale_of(epsilon, sensitivity):
         If epsilon is not above 0 (and at most 50), or so small that no noise of use is left.
     """
     if not (math.isfinite(epsilon) and 0 < epsilon <= 50):
-        raise InputError(f"EPSILON must be above 0 and at most 50; found {epsilon}.")
+        raise InputError("EPSILON must be above 0 and at most 50; found {}.", epsilon)
     exact = Fraction(epsilon) / sensitivity
     near = exact.limit_denominator(FINEST)
     if near > exact:
         near = Fraction(math.floor(exact * FINEST), FINEST)
     if near <= 0:
-        raise InputError(f"EPSILON {epsilon} is too small to draw noise for; take 0.001 or more.")
+        raise InputError("EPSILON {} is too small to draw noise for; take 0.001 or more.", epsilon)
     return near
 
 
@@ -162,7 +162,7 @@ def bounded_contributions(contributors, limit, source):
     (n,) bool array, or None when nothing has to be left out
     """
     if limit != int(limit) or limit < 1:
-        raise InputError(f"CONTRIBUTION_LIMIT must be a whole number of 1 or more; found {limit}.")
+        raise InputError("CONTRIBUTION_LIMIT must be a whole number of 1 or more; found {}.", limit)
     if contributors is None:
         return None
     contributors = np.asarray(contributors)

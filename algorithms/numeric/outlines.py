@@ -92,7 +92,7 @@ def density_levels(density, shares):
     """
     shares = [float(share) for share in shares]
     if not shares or not all(0 < share <= 1 for share in shares):
-        raise InputError(f"Shares must lie above 0 and not above 1 (100 %); found {shares}.")
+        raise InputError("Shares must lie above 0 and not above 1 (100 %); found {}.", shares)
     values = _checked_values(density)
     falling = np.sort(values[values > 0])[::-1]
     sums = np.cumsum(falling)
@@ -168,8 +168,9 @@ def _checked_values(density):
         raise InputError("The density has no value above 0, so no share of it can be outlined.")
     if values.min() < 0:
         raise InputError(
-            f"The density has values below 0 (down to {values.min():.6g}), so shares of its total "
-            "have no meaning; choose a density, not a ratio or a difference."
+            "The density has values below 0 (down to {:.6g}), so shares of its total have "
+            "no meaning; choose a density, not a ratio or a difference.",
+            values.min(),
         )
     return values
 

@@ -196,8 +196,9 @@ class Deviations:
             return None
         if solution.status != 0:
             raise InputError(
-                "The linear programme over the published sums could not be solved "
-                f"({solution.message.strip()}); choose larger cells or publish no totals."
+                "The linear programme over the published sums could not be solved ({}); choose "
+                "larger cells or publish no totals.",
+                solution.message.strip(),
             )
         return solution
 

@@ -66,7 +66,7 @@ def overlay(layers, tolerance=0.0, progress=silent):
         A layer without polygons, a negative tolerance, or a zone without an area.
     """
     if not (np.isfinite(tolerance) and tolerance >= 0):
-        raise InputError(f"The sliver tolerance must be 0 or more; found {tolerance}.")
+        raise InputError("The sliver tolerance must be 0 or more; found {}.", tolerance)
     zones = [_areas_only(polygons, number) for number, polygons in enumerate(layers)]
     if not zones:
         raise InputError("The audit needs at least one published layer; found none.")
@@ -113,7 +113,7 @@ def _areas_only(polygons, number):
     """Valid polygons of one layer; lines and points that a repair leaves are dropped."""
     polygons = np.asarray(polygons, object)
     if not len(polygons):
-        raise InputError(f"Published layer {number + 1} holds no polygons; take it off the list.")
+        raise InputError("Published layer {} holds no polygons; take it off the list.", number + 1)
     repaired = polygons.copy()
     broken = ~shapely.is_valid(polygons)
     repaired[broken] = shapely.make_valid(polygons[broken])
@@ -124,8 +124,11 @@ def _areas_only(polygons, number):
     flat = np.flatnonzero(~(shapely.area(repaired) > 0))
     if len(flat):
         raise InputError(
-            f"Published layer {number + 1} holds {len(flat)} zones without an area "
-            f"(the first is number {flat[0] + 1}); repair or remove them."
+            "Published layer {} holds {} zones without an area (the first is number {}); "
+            "repair or remove them.",
+            number + 1,
+            len(flat),
+            flat[0] + 1,
         )
     return repaired
 

@@ -115,8 +115,13 @@ def record_spectrum(x, y, weights, narrowest, widest, progress=silent):
     columns, rows = (math.ceil((values.max() + room) / step) for values in (x, y))
     if rows * columns > LARGEST_LATTICE:
         raise InputError(
-            f"Bandwidths from {narrowest:.6g} up to {widest:.6g} need {rows} x {columns} nodes "
-            f"to cover the records; start at {narrowest_bandwidth(x, y, widest):.6g} or above."
+            "Bandwidths from {:.6g} up to {:.6g} need {} x {} nodes to cover the records; "
+            "start at {:.6g} or above.",
+            narrowest,
+            widest,
+            rows,
+            columns,
+            narrowest_bandwidth(x, y, widest),
         )
     columns, rows = (fft.next_fast_len(max(count, 16), real=True) for count in (columns, rows))
     lattice = _spread(x / step, y / step, weights, (rows, columns), progress)

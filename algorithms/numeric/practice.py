@@ -249,9 +249,9 @@ def make_district(seed, size=1.0, progress=silent):
 
 def _check(seed, size):
     if not (float(seed).is_integer() and seed >= 0):
-        raise InputError(f"SEED must be a whole number not below 0; found {seed}.")
+        raise InputError("SEED must be a whole number not below 0; found {}.", seed)
     if not SMALLEST <= size <= LARGEST:
-        raise InputError(f"SIZE must lie between {SMALLEST} and {LARGEST}; found {size}.")
+        raise InputError("SIZE must lie between {} and {}; found {}.", SMALLEST, LARGEST, size)
 
 
 def _named_order(zones, ward, industry):

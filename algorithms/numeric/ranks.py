@@ -118,7 +118,7 @@ def strength_table(masses, stretch="share"):
         The layer has no value above 0, or the stretch is unknown.
     """
     if stretch not in STRETCHES:
-        raise InputError(f"Stretch must be one of {', '.join(STRETCHES)}; found “{stretch}”.")
+        raise InputError("Stretch must be one of {}; found “{}”.", ", ".join(STRETCHES), stretch)
     usable = _usable(masses)
     occupied = np.flatnonzero(usable)
     if len(occupied) == 0:

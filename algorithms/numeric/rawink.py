@@ -70,7 +70,7 @@ def accumulate(counts, ink):
         The ink is out of range.
     """
     if not 0 < ink <= 1:
-        raise InputError(f"The ink of one feature must be above 0 and up to 1; found {ink}.")
+        raise InputError("The ink of one feature must be above 0 and up to 1; found {}.", ink)
     return np.asarray(1 - (1 - ink) ** np.asarray(counts, float), np.float32)
 
 

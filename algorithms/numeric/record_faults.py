@@ -13,7 +13,8 @@ import shapely
 
 from .coordinate_lattice import find_lattice, resolution
 from .progress import silent
-from .record_words import of_all, plural, share_words, whole
+from .record_words import of_all, share_words, spots_words, whole
+from .words import Words, joined
 
 FAULT, LOOK, FINE = "fault", "look", "fine"
 PLACED, MISSING, EMPTY, NOT_FINITE, UNPLACEABLE = range(5)
@@ -24,13 +25,14 @@ FEW_SPOTS_SHARE = 0.1
 CROWDED_SHARE = 0.2
 FAR_RANGES = 10.0
 
-STACK_ADVICE = (
-    "Look these spots up: a spot that stands for “address unknown” makes a false peak; leave its "
-    "records out or place them. A true large home may stay."
+STACK_ADVICE = Words(
+    "Look these spots up: a spot that stands for “address unknown” makes a false "
+    "peak; leave its records out or place them. A true large home may stay."
 )
-AREAS_ADVICE = (
-    "So many records on so few spots look like the middle points of areas. Map such data by those "
-    "areas; a density surface or small cells would show the middle points and not the people."
+AREAS_ADVICE = Words(
+    "So many records on so few spots look like the middle points of areas. Map "
+    "such data by those areas; a density surface or small cells would show the "
+    "middle points and not the people."
 )
 
 
@@ -108,33 +110,45 @@ def check_geometry(records):
         One for each of the four kinds.
     """
     kinds = (
-        (MISSING, "no geometry", "have no geometry", "Every record has a geometry."),
-        (EMPTY, "empty geometry", "have an empty geometry", "No geometry is empty."),
+        (
+            MISSING,
+            Words("no geometry"),
+            Words("{} have no geometry."),
+            Words("Every record has a geometry."),
+        ),
+        (
+            EMPTY,
+            Words("empty geometry"),
+            Words("{} have an empty geometry."),
+            Words("No geometry is empty."),
+        ),
         (
             NOT_FINITE,
-            "not finite",
-            "have a coordinate that is not a finite number",
-            "All coordinates are finite numbers.",
+            Words("not finite"),
+            Words("{} have a coordinate that is not a finite number."),
+            Words("All coordinates are finite numbers."),
         ),
         (
             UNPLACEABLE,
-            "outside the CRS",
-            "lie where their CRS is not defined",
-            "All places lie where their CRS is defined.",
+            Words("outside the CRS"),
+            Words("{} lie where their CRS is not defined."),
+            Words("All places lie where their CRS is defined."),
         ),
     )
     checks = []
-    for state, key, words, fine in kinds:
+    for state, key, template, fine in kinds:
         found = records.state == state
         if found.any():
-            advice = (
+            advice = Words(
                 "Place them from their source or count them apart: they are left out of every "
-                "map, and "
-                "if they are left out more in some areas than in others the map is biased."
+                "map, and if they are left out more in some areas than in others the map is "
+                "biased."
             )
             if state == UNPLACEABLE:
-                advice = "Check that the CRS set for the layer is the one of its coordinates."
-            checks.append(Check(key, FAULT, found, f"{of_all(found)} {words}.", advice))
+                advice = Words(
+                    "Check that the CRS set for the layer is the one of its coordinates."
+                )
+            checks.append(Check(key, FAULT, found, template.filled(of_all(found)), advice))
         else:
             checks.append(Check(key, FINE, found, fine))
     return checks
@@ -145,13 +159,15 @@ def check_number(records):
     count = int(records.placed.sum())
     none = np.zeros(len(records.x), bool)
     if count >= SMALL_NUMBER:
-        return Check("number", FINE, none, f"{whole(count)} records have a place.")
+        return Check(Words("number"), FINE, none, Words("{} records have a place.", whole(count)))
     return Check(
-        "number",
+        Words("number"),
         LOOK,
         none,
-        f"Only {count} records have a place.",
-        f"Below about {SMALL_NUMBER} a density surface or a zoning says little; use counts.",
+        Words("Only {} records have a place.", count),
+        Words(
+            "Below about {} a density surface or a zoning says little; use counts.", SMALL_NUMBER
+        ),
     )
 
 
@@ -180,31 +196,38 @@ def check_stacks(records, largest=0):
     placed = sizes[records.placed]
     count = len(placed)
     if count == 0:
-        return Check("stacked", FINE, sizes > 0, "No place to look at."), sizes
+        return Check(Words("stacked"), FINE, sizes > 0, Words("No place to look at.")), sizes
     spots = _spots(placed)
-    summary = (
-        f"{whole(count)} records lie on {whole(spots)} {plural(spots, 'spot')}; "
-        f"{share_words(np.mean(placed > 1))} share theirs with another."
+    summary = Words(
+        "{} records lie on {}; {} share theirs with another.",
+        whole(count),
+        spots_words(spots),
+        share_words(np.mean(placed > 1)),
     )
     crowded = sizes > (largest or HOUSE_STACK)
     if count >= SMALL_NUMBER and (
         spots < FEW_SPOTS_SHARE * count or crowded.sum() > CROWDED_SHARE * count
     ):
-        return Check("stacked", FAULT, sizes > 1, summary, AREAS_ADVICE), sizes
+        return Check(Words("stacked"), FAULT, sizes > 1, summary, AREAS_ADVICE), sizes
     limit = largest or _usual_limit(placed)
     found = sizes > limit
     if found.any():
         full = _spots(sizes[found])
-        words = (
-            f"{of_all(found)} lie on {whole(full)} {plural(full, 'spot')} of more than "
-            f"{whole(limit)} "
-            f"records each, the fullest with {whole(sizes.max())}. {summary}"
+        words = Words(
+            "{} lie on {} of more than {} records each, the fullest with {}. {}",
+            of_all(found),
+            spots_words(full),
+            whole(limit),
+            whole(sizes.max()),
+            summary,
         )
-        return Check("stacked", FAULT, found, words, STACK_ADVICE), sizes
-    words = (
-        f"{summary} The fullest spot has {whole(placed.max())}, as homes, flats or a care home may."
+        return Check(Words("stacked"), FAULT, found, words, STACK_ADVICE), sizes
+    words = Words(
+        "{} The fullest spot has {}, as homes, flats or a care home may.",
+        summary,
+        whole(placed.max()),
     )
-    return Check("stacked", FINE, found, words), sizes
+    return Check(Words("stacked"), FINE, found, words), sizes
 
 
 def check_rounding(records, least_step=5.0, progress=silent):
@@ -226,28 +249,36 @@ def check_rounding(records, least_step=5.0, progress=silent):
     found = np.zeros(len(records.x), bool)
     placed = np.flatnonzero(records.placed)
     if len(placed) == 0:
-        return Check("rounded", FINE, found, "No place to look at."), 0.0
+        return Check(Words("rounded"), FINE, found, Words("No place to look at.")), 0.0
     x, y = records.stored_x[placed], records.stored_y[placed]
     lattice = find_lattice(x, y, least_step / records.stored_metres, progress)
     if lattice is None:
         stored = resolution(x, y) * records.stored_metres
-        precision = f"to {stored:.2g} m" if stored else "to less than a millimetre"
-        words = f"Coordinates are written {precision}; no coarser rounding is seen."
-        return Check("rounded", FINE, found, words), 0.0
+        words = Words(
+            "Coordinates are written to less than a millimetre; no coarser rounding is seen."
+        )
+        if stored:
+            words = Words(
+                "Coordinates are written to {:.2g} m; no coarser rounding is seen.", stored
+            )
+        return Check(Words("rounded"), FINE, found, words), 0.0
     found[placed[lattice.on]] = True
     step = lattice.step * records.stored_metres
     ground = f"{step:.4g} m" if step < 1000 else f"{whole(step)} m"
     if records.stored_metres != 1.0:
-        ground += f" ({lattice.step:.6g} in the units in which they are stored)"
-    words = (
-        f"{of_all(found)} lie on a lattice of {ground}: "
-        f"{share_words(lattice.share)} of all distinct places."
+        ground = Words("{} ({:.6g} in the units in which they are stored)", ground, lattice.step)
+    words = Words(
+        "{} lie on a lattice of {}: {} of all distinct places.",
+        of_all(found),
+        ground,
+        share_words(lattice.share),
     )
-    advice = (
-        "Their coordinates were rounded. Choose cells and bandwidths of several times that step, "
-        "and cells that are not aligned with it, or get the places before rounding."
+    advice = Words(
+        "Their coordinates were rounded. Choose cells and bandwidths of several times "
+        "that step, and cells that are not aligned with it, or get the places before "
+        "rounding."
     )
-    return Check("rounded", FAULT, found, words, advice), step
+    return Check(Words("rounded"), FAULT, found, words, advice), step
 
 
 def check_boundary(records, boundary, progress=silent):
@@ -273,17 +304,25 @@ def check_boundary(records, boundary, progress=silent):
         found[placed[start:stop]] = ~shapely.intersects(boundary, places[start:stop])
         progress(min(stop / max(len(placed), 1), 1.0))
     if not found.any():
-        return Check("outside", FINE, found, "All placed records lie inside the boundary.")
+        return Check(
+            Words("outside"), FINE, found, Words("All placed records lie inside the boundary.")
+        )
     away = shapely.distance(boundary, places[found[placed]]) * records.metres
     return Check(
-        "outside",
+        Words("outside"),
         FAULT,
         found,
-        f"{of_all(found)} lie outside the boundary, the farthest {whole(away.max())} m away, "
-        f"half of them within {whole(np.median(away))} m.",
-        "Just outside: the boundary may be generalised, or these people came from elsewhere. Far "
-        "outside: "
-        "look for exchanged or mistyped coordinates. They are left out where a boundary is used.",
+        Words(
+            "{} lie outside the boundary, the farthest {} m away, half of them within {} m.",
+            of_all(found),
+            whole(away.max()),
+            whole(np.median(away)),
+        ),
+        Words(
+            "Just outside: the boundary may be generalised, or these people came from "
+            "elsewhere. Far outside: look for exchanged or mistyped coordinates. They are "
+            "left out where a boundary is used."
+        ),
     )
 
 
@@ -301,13 +340,13 @@ def check_far(records):
         low, middle, high = np.quantile(values[placed], (0.05, 0.5, 0.95))
         found[placed] |= np.abs(values[placed] - middle) > FAR_RANGES * max(high - low, 1e-9)
     if not found.any():
-        return Check("far away", FINE, found, "No record lies far from all others.")
+        return Check(Words("far away"), FINE, found, Words("No record lies far from all others."))
     return Check(
-        "far away",
+        Words("far away"),
         FAULT,
         found,
-        f"{of_all(found)} lie far from all others.",
-        "Look for coordinates that are exchanged, mistyped, zero, or in another CRS.",
+        Words("{} lie far from all others.", of_all(found)),
+        Words("Look for coordinates that are exchanged, mistyped, zero, or in another CRS."),
     )
 
 
@@ -329,28 +368,37 @@ def check_distortion(smallest, largest, count):
     none = np.zeros(count, bool)
     if not (np.isfinite(smallest) and np.isfinite(largest)):
         return Check(
-            "distortion",
+            Words("distortion"),
             LOOK,
             none,
-            "The coordinates are stored in degrees or in a CRS whose areas cannot be measured "
-            "here.",
-            "Distances and areas are taken in an equal-area CRS chosen for the data; nothing to "
-            "do.",
+            Words(
+                "The coordinates are stored in degrees or in a CRS whose areas cannot be "
+                "measured here."
+            ),
+            Words(
+                "Distances and areas are taken in an equal-area CRS chosen for the data; "
+                "nothing to do."
+            ),
         )
     worst = max(abs(smallest - 1.0), abs(largest - 1.0))
     if worst <= 0.01:
-        words = (
-            f"In the CRS in which they are stored areas are true within {100 * worst:.2f}\u2009%."
+        words = Words(
+            "In the CRS in which they are stored areas are true within {:.2f}\u2009%.", 100 * worst
         )
-        return Check("distortion", FINE, none, words)
+        return Check(Words("distortion"), FINE, none, words)
     return Check(
-        "distortion",
+        Words("distortion"),
         LOOK,
         none,
-        f"In the CRS in which they are stored an area appears {smallest:.3f} to {largest:.3f} "
-        f"times "
-        "its size.",
-        "Densities taken in that CRS would be off by as much; an equal-area CRS is used instead.",
+        Words(
+            "In the CRS in which they are stored an area appears {:.3f} to {:.3f} times its size.",
+            smallest,
+            largest,
+        ),
+        Words(
+            "Densities taken in that CRS would be off by as much; an equal-area CRS is "
+            "used instead."
+        ),
     )
 
 
@@ -372,7 +420,7 @@ def faults_in_words(checks, count):
         if check.severity == FINE:
             continue
         for row in np.flatnonzero(check.found):
-            words[row] = check.key if words[row] is None else f"{words[row]}; {check.key}"
+            words[row] = str(check.key) if words[row] is None else f"{words[row]}; {check.key}"
     return words
 
 
@@ -380,12 +428,16 @@ def verdict(checks):
     """The outcome of all checks in one sentence."""
     faults = [check for check in checks if check.severity == FAULT]
     looks = [check for check in checks if check.severity == LOOK]
-    also = f"; {len(looks)} more {plural(len(looks), 'thing')} worth a look" if looks else ""
-    if not faults:
-        return f"No fault was found{also}."
-    concerned = np.any([check.found for check in faults], axis=0)
-    named = ", ".join(f"{check.key} ({whole(check.count)})" for check in faults)
-    return f"{of_all(concerned)} are concerned by faults: {named}{also}."
+    words = Words("No fault was found.")
+    if faults:
+        concerned = np.any([check.found for check in faults], axis=0)
+        named = [Words("{} ({})", check.key, whole(check.count)) for check in faults]
+        words = Words("{} are concerned by faults: {}.", of_all(concerned), joined(named, ", "))
+    if not looks:
+        return words
+    if len(looks) == 1:
+        return Words("{} 1 more thing is worth a look.", words)
+    return Words("{} {} more things are worth a look.", words, len(looks))
 
 
 def _spots(sizes):

@@ -2,10 +2,12 @@
 
 import numpy as np
 
+from .words import Words
+
 
 def of_all(found):
     """``1,234 of 5,678 records``."""
-    return f"{whole(int(np.count_nonzero(found)))} of {whole(len(found))} records"
+    return Words("{} of {} records", whole(int(np.count_nonzero(found))), whole(len(found)))
 
 
 def whole(value):
@@ -18,5 +20,6 @@ def share_words(share):
     return f"{100 * share:.{0 if share >= 0.1 else 1}f}\u2009%"
 
 
-def plural(count, noun):
-    return noun if count == 1 else noun + "s"
+def spots_words(count):
+    """``1 spot`` or ``2 spots``."""
+    return Words("{} spot", whole(count)) if count == 1 else Words("{} spots", whole(count))

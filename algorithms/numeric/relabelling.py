@@ -57,8 +57,11 @@ class KernelSums:
         widths = np.asarray(bandwidths, float) / grid.cell
         if widths.min() < NARROWEST_PIXELS * (1 - 1e-9):
             raise InputError(
-                f"The narrowest kernel is {widths.min():.3g} pixels wide and {NARROWEST_PIXELS} "
-                f"are needed; choose a CELL_SIZE of {widths.min() * grid.cell / 1.5:.4g} or less."
+                "The narrowest kernel is {:.3g} pixels wide and {} are needed; choose a "
+                "CELL_SIZE of {:.4g} or less.",
+                widths.min(),
+                NARROWEST_PIXELS,
+                widths.min() * grid.cell / 1.5,
             )
         row = (grid.top - np.asarray(y, float)) / grid.cell - 0.5
         column = (np.asarray(x, float) - grid.left) / grid.cell - 0.5

@@ -74,7 +74,7 @@ class Plan:
 
     def __post_init__(self):
         if self.method not in METHODS:
-            raise InputError(f"METHOD must be one of {', '.join(METHODS)}; found {self.method}.")
+            raise InputError("METHOD must be one of {}; found {}.", ", ".join(METHODS), self.method)
         if self.method in (ROUND, CONTROLLED):
             check_base(self.base, self.rules)
         if self.method == NOISE and self.region_totals:
@@ -87,7 +87,7 @@ class Plan:
                 "Noise promises nothing for totals that are public already; choose another method."
             )
         if self.reach < 1:
-            raise InputError(f"A merged zone must be able to reach 1 step; found {self.reach}.")
+            raise InputError("A merged zone must be able to reach 1 step; found {}.", self.reach)
 
 
 @dataclass(frozen=True)

@@ -15,12 +15,17 @@ from .progress import silent
 def check_base(base, rules):
     """Refuse a base that would let an outsider tell that a cell is below the least count."""
     if base != int(base) or base < 2:
-        raise InputError(f"ROUNDING_BASE must be a whole number of 2 or more; found {base}.")
+        raise InputError("ROUNDING_BASE must be a whole number of 2 or more; found {}.", base)
     if base < rules.least_count:
         raise InputError(
-            f"ROUNDING_BASE {base} is below LEAST_COUNT {rules.least_count}: a rounded value of "
-            f"{base} would tell that a cell holds 1 to {2 * base - 1}. Choose {rules.least_count} "
-            "or more, or settle a lower LEAST_COUNT with the data's owner."
+            "ROUNDING_BASE {} is below LEAST_COUNT {}: a rounded value of {} would tell "
+            "that a cell holds 1 to {}. Choose {} or more, or settle a lower LEAST_COUNT "
+            "with the data's owner.",
+            base,
+            rules.least_count,
+            base,
+            2 * base - 1,
+            rules.least_count,
         )
 
 

@@ -174,9 +174,12 @@ def safe_surface(
     )  # fmt: skip
     if result.succeeded:
         raise InputError(
-            f"The finished surface points at {result.found} of {result.addresses} addresses that "
-            f"lie by themselves, against {result.by_chance:.1f} by chance; nothing is released. "
-            "Choose a larger BANDWIDTH or LEAST_COUNT."
+            "The finished surface points at {} of {} addresses that lie by themselves, "
+            "against {:.1f} by chance; nothing is released. Choose a larger BANDWIDTH or "
+            "LEAST_COUNT.",
+            result.found,
+            result.addresses,
+            result.by_chance,
         )
     return SafeSurface(
         density, groups, widths, float(max(effective[valued].min(), floor)), int(refused.sum()),

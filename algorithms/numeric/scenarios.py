@@ -86,12 +86,16 @@ def problem(graph, counts, totals, kind=None, threshold=None, budget=None, gener
     counts, totals = np.asarray(counts, float), np.asarray(totals, float)
     for name, values in (("COUNT", counts), ("TOTAL", totals)):
         if values.shape != (graph.units,):
-            raise InputError(f"{name}: {graph.units} values are needed; found {values.shape}.")
+            raise InputError("{}: {} values are needed; found {}.", name, graph.units, values.shape)
         bad = ~(np.isfinite(values) & (values >= 0))
         if bad.any():
             raise InputError(
-                f"{name}: {bad.sum()} units have a missing or negative value (the first is number "
-                f"{np.argmax(bad) + 1}: {values[np.argmax(bad)]:g}); correct or leave them out."
+                "{}: {} units have a missing or negative value (the first is number {}: {:g}); "
+                "correct or leave them out.",
+                name,
+                bad.sum(),
+                np.argmax(bad) + 1,
+                values[np.argmax(bad)],
             )
     if not totals.sum() > 0:
         raise InputError(

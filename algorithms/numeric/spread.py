@@ -30,7 +30,7 @@ def lattice_inside(area, spacing):
     lowest, highest = math.floor(bottom / spacing), math.ceil(top / spacing)
     if (last - first) * (highest - lowest) > MOST_POINTS * 10:
         raise InputError(
-            f"The area would be sampled at more than {MOST_POINTS:,} points; choose larger cells."
+            "The area would be sampled at more than {:,} points; choose larger cells.", MOST_POINTS
         )
     x, y = np.meshgrid(
         (np.arange(first, last) + 0.5) * spacing, (np.arange(lowest, highest) + 0.5) * spacing

@@ -19,15 +19,18 @@ def _records(x, y, weights, bandwidths):
     weights = np.broadcast_to(np.asarray(weights, float), x.shape)
     bandwidths = np.broadcast_to(np.asarray(bandwidths, float), x.shape)
     if x.shape != y.shape or x.ndim != 1:
-        raise InputError(f"x and y must be two lists of one length; found {x.shape} and {y.shape}.")
+        raise InputError(
+            "x and y must be two lists of one length; found {} and {}.", x.shape, y.shape
+        )
     for name, values in (("x", x), ("y", y), ("weights", weights)):
         if not np.all(np.isfinite(values)):
             raise InputError(
-                f"{np.count_nonzero(~np.isfinite(values))} values of {name} are not finite; "
-                "leave those records out."
+                "{} values of {} are not finite; leave those records out.",
+                np.count_nonzero(~np.isfinite(values)),
+                name,
             )
     if not np.all(np.isfinite(bandwidths) & (bandwidths > 0)):
-        raise InputError(f"BANDWIDTH must be above 0; found {np.nanmin(bandwidths)}.")
+        raise InputError("BANDWIDTH must be above 0; found {}.", np.nanmin(bandwidths))
     return x, y, weights, bandwidths
 
 
@@ -318,7 +321,7 @@ def workable_cell(bounds, narrowest, widest, records, available, kernel="gaussia
         When the records alone do not fit.
     """
     if _BYTES_PER_RECORD * records >= available:
-        raise InputError(f"{records} records do not fit into memory; work on part of the area.")
+        raise InputError("{} records do not fit into memory; work on part of the area.", records)
     extent = max(bounds[2] - bounds[0], bounds[3] - bounds[1], widest)
     cell = round_down(extent / 1e6)
     while memory_needed(covering(bounds, cell), narrowest, widest, records, kernel) > available:

@@ -109,11 +109,13 @@ def check_levels(levels, relabellings):
     """Raise InputError for levels out of range or out of reach of so many relabellings."""
     for level in levels:
         if not 0 < level < 0.5:
-            raise InputError(f"Levels must lie above 0 and below 50 %; found {100 * level:g} %.")
+            raise InputError("Levels must lie above 0 and below 50 %; found {:g} %.", 100 * level)
         if level * (relabellings + 1) < 1 - 1e-9:
             raise InputError(
-                f"A level of {100 * level:g} % needs at least {math.ceil(1 / level - 1e-9) - 1} "
-                f"relabellings; found {relabellings}."
+                "A level of {:g} % needs at least {} relabellings; found {}.",
+                100 * level,
+                math.ceil(1 / level - 1e-9) - 1,
+                relabellings,
             )
 
 

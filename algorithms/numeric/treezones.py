@@ -53,13 +53,15 @@ def tree_cut(graph, totals, least_total, replicates, generator):
 def check_least_total(graph, totals, least_total):
     """Say in words why a least total cannot be kept, where it cannot."""
     if not least_total > 0:
-        raise InputError(f"LEAST_TOTAL must be above 0; found {least_total:g}.")
+        raise InputError("LEAST_TOTAL must be above 0; found {:g}.", least_total)
     parts, part = graph.components()
     largest = np.bincount(part, totals, minlength=parts).max()
     if largest < least_total:
         raise InputError(
-            f"LEAST_TOTAL: {least_total:g} is more than there is (the largest connected part of "
-            f"the map holds {largest:g}), so no zone can hold it; choose a smaller one."
+            "LEAST_TOTAL: {:g} is more than there is (the largest connected part of the "
+            "map holds {:g}), so no zone can hold it; choose a smaller one.",
+            least_total,
+            largest,
         )
 
 
@@ -163,7 +165,7 @@ def _zones_of_parts(graph, totals, zone_count):
 
 def _check_balance(graph, totals, shares, tolerance):
     if not tolerance >= 0:
-        raise InputError(f"The balance tolerance must not be negative; found {tolerance:g}.")
+        raise InputError("The balance tolerance must not be negative; found {:g}.", tolerance)
     _, part = graph.components()
     ideal = np.bincount(part, totals, minlength=len(shares)) / shares
     if not (ideal > 0).all():
@@ -172,9 +174,13 @@ def _check_balance(graph, totals, shares, tolerance):
     worst = int(np.argmax(excess))
     if excess[worst] > 1 + tolerance:
         raise InputError(
-            f"ZONE_COUNTS: unit number {worst + 1} alone holds {totals[worst]:g}, "
-            f"{excess[worst]:.2f} times an equal share of {shares.sum()} zones; ask for fewer "
-            "zones, allow a larger tolerance, or choose another builder."
+            "ZONE_COUNTS: unit number {} alone holds {:g}, {:.2f} times an equal share of "
+            "{} zones; ask for fewer zones, allow a larger tolerance, or choose another "
+            "builder.",
+            worst + 1,
+            totals[worst],
+            excess[worst],
+            shares.sum(),
         )
 
 
@@ -261,9 +267,12 @@ class _Balancing:
         self.fresh_starts[stuck] += 1
         if self.fresh_starts.max() > FRESH_STARTS:
             raise InputError(
-                f"ZONE_COUNTS: {self.zones} zones within {self.tolerance:.0%} of equal totals were "
-                f"not found in {FRESH_STARTS} attempts; allow a larger tolerance, ask for fewer "
-                "zones, or choose another builder."
+                "ZONE_COUNTS: {} zones within {:.0%} of equal totals were not found in {} "
+                "attempts; allow a larger tolerance, ask for fewer zones, or choose another "
+                "builder.",
+                self.zones,
+                self.tolerance,
+                FRESH_STARTS,
             )
         for name in ("region", "share", "failures"):
             rows = getattr(self, name).reshape(self.many, -1)

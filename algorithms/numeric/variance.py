@@ -433,5 +433,5 @@ def _per_count(sums, count, empty=np.nan):
 
 def _known(kind):
     if kind not in (SHARE, RATE):
-        raise InputError(f"The kind of value is 'share' or 'rate'; found {kind!r}.")
+        raise InputError("The kind of value is 'share' or 'rate'; found {!r}.", kind)
     return kind

@@ -165,8 +165,9 @@ def complementary_withholding(sums, targets, withheld, cost, fixed, rng, progres
     published = ~withheld
     if (withheld & fixed).any():
         raise InputError(
-            f"{int((withheld & fixed).sum())} totals that are said to be public already are unsafe "
-            "by the rules; they cannot be protected here. Raise it with the data's owner."
+            "{} totals that are said to be public already are unsafe by the rules; they "
+            "cannot be protected here. Raise it with the data's owner.",
+            int((withheld & fixed).sum()),
         )
     costs = cost * np.exp(COST_SPREAD * rng.standard_normal(len(cost)))
     proofs = Proofs(sums, targets)

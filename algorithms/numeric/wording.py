@@ -1,17 +1,19 @@
 """Derivations of an audit in words."""
 
+from .words import Words
+
 LISTED = 8
 
 
 def interval_words(lower, upper):
     """An interval of whole numbers as a reader says it: 3, 1 to 4, at most 4, none."""
     if upper == 0:
-        return "none"
+        return Words("none")
     if lower == upper:
         return f"{lower:.0f}"
     if lower == 0:
-        return f"at most {upper:.0f}"
-    return f"{lower:.0f} to {upper:.0f}"
+        return Words("at most {:.0f}", upper)
+    return Words("{:.0f} to {:.0f}", lower, upper)
 
 
 def derivation(finding, tables, source, counts):
@@ -34,21 +36,22 @@ def derivation(finding, tables, source, counts):
     """
     words = interval_words(finding.lower, finding.upper)
     if not finding.added:
-        return f"all published counts together leave {words}"
+        return Words("all published counts together leave {}", words)
     added, subtracted = list(finding.added), list(finding.subtracted)
     low = counts.lower[added].sum() - counts.upper[subtracted].sum()
     high = counts.upper[added].sum() - counts.lower[subtracted].sum()
     plain = (max(low, 0), high) == (finding.lower, finding.upper)
     name = _rows(finding.added, tables, source)
     if subtracted:
-        sentence = f"{name} minus {_rows(finding.subtracted, tables, source)} leaves {words}"
+        less = _rows(finding.subtracted, tables, source)
+        sentence = Words("{} minus {} leaves {}", name, less, words)
     elif len(added) == 1 and plain:
-        sentence = f"{name} is published as {words}"
+        sentence = Words("{} is published as {}", name, words)
     elif len(added) == 1:
-        return f"{name} is left {words} by the other published counts"
+        return Words("{} is left {} by the other published counts", name, words)
     else:
-        sentence = f"{name} together hold {words}"
-    return sentence if plain else f"{sentence}, by all published counts together"
+        sentence = Words("{} together hold {}", name, words)
+    return sentence if plain else Words("{}, by all published counts together", sentence)
 
 
 def _rows(rows, tables, source):
@@ -63,15 +66,19 @@ def _rows(rows, tables, source):
         zones = [row for row in own if row < start]
         if zones:
             labels = [str(table.labels[row - starts[number]]) for row in zones]
-            phrases.append(f"{table.name} {_listed(labels)}")
+            phrases.append(Words("{} {}", table.name, _listed(labels)))
         if len(zones) < len(own):
-            phrases.append(f"the total of {table.name}")
-    return " with ".join(phrases)
+            phrases.append(Words("the total of {}", table.name))
+    words = phrases[0]
+    for phrase in phrases[1:]:
+        words = Words("{} with {}", words, phrase)
+    return words
 
 
 def _listed(labels):
     if len(labels) > LISTED:
-        return f"{', '.join(labels[: LISTED - 1])} and {len(labels) - LISTED + 1} more"
+        shown = labels[: LISTED - 1]
+        return Words("{} and {} more", ", ".join(shown), len(labels) - len(shown))
     if len(labels) == 1:
         return labels[0]
-    return f"{', '.join(labels[:-1])} and {labels[-1]}"
+    return Words("{} and {}", ", ".join(labels[:-1]), labels[-1])

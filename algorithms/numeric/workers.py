@@ -295,13 +295,14 @@ class SchedulerExecutor(Executor):
             )
         except (OSError, ValueError, TimeoutError) as error:
             raise InputError(
-                f"SCHEDULER: no Dask scheduler answers at {address}; check the address, or leave "
-                "it empty to work on this machine."
+                "SCHEDULER: no Dask scheduler answers at {}; check the address, or leave it "
+                "empty to work on this machine.",
+                address,
             ) from error
         threads = self._client.nthreads()
         if not threads:
             self._client.close()
-            raise InputError(f"SCHEDULER: the scheduler at {address} has no workers.")
+            raise InputError("SCHEDULER: the scheduler at {} has no workers.", address)
         self._max_workers = sum(threads.values())
         self._executor = self._client.get_executor(pure=False)
         scope = {}

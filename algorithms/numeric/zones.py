@@ -59,8 +59,9 @@ def recipes(
     graph, totals = problem.graph, problem.totals
     if least_total is not None and builder != TREE_CUT:
         raise InputError(
-            f"LEAST_TOTAL is kept by tree-cut zones only, and BUILDER is {builder}; choose "
-            "tree-cut or leave LEAST_TOTAL empty."
+            "LEAST_TOTAL is kept by tree-cut zones only, and BUILDER is {}; choose "
+            "tree-cut or leave LEAST_TOTAL empty.",
+            builder,
         )
     if not len(zone_counts):
         raise InputError("ZONE_COUNTS: no number of zones was given; give one or more.")
@@ -186,9 +187,9 @@ def simulate(
     """
     names = problem.statistic_names()
     if statistic not in names:
-        raise InputError(f"The statistic is one of {', '.join(names)}; found {statistic!r}.")
+        raise InputError("The statistic is one of {}; found {!r}.", ", ".join(names), statistic)
     if not replicates >= 2:
-        raise InputError(f"REPLICATES: two zonings a scale are the least; found {replicates}.")
+        raise InputError("REPLICATES: two zonings a scale are the least; found {}.", replicates)
     root = seed if isinstance(seed, np.random.SeedSequence) else np.random.SeedSequence(seed)
     pilot_seed, batch_seed = root.spawn(2)
     generator = np.random.default_rng(pilot_seed)
