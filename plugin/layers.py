@@ -22,6 +22,9 @@ from .text import tr
 # type ids of shapely: single and multiple
 POINT_KINDS, POLYGON_KINDS = (0, 4), (3, 6)
 
+# well-known binary of a point without height, least byte first
+PLAIN_POINT = np.dtype([("order", "u1"), ("kind", "<u4"), ("x", "<f8"), ("y", "<f8")])
+
 
 @dataclass(frozen=True)
 class Records:
@@ -88,10 +91,35 @@ def read_table(layer, source, fields):
     values : dict of str to (n,) array
     ids : (n,) int64 array
     """
-    plain = layer is not None and _plain_file_layer(layer, fields)
-    wkb, values, ids = _read_stream(layer, fields) if plain else _read_features(source, fields)
-    geometry = shapely.from_wkb(wkb, on_invalid="ignore") if len(wkb) else np.empty(0, object)
-    return geometry, values, ids
+    wkb, values, ids = _read_binary(layer, source, fields)
+    return _geometry_of(wkb), values, ids
+
+
+def _read_binary(layer, source, fields):
+    """As `read_table`, with geometry in well-known binary."""
+    if layer is not None and _plain_file_layer(layer, fields):
+        return _read_stream(layer, fields)
+    return _read_features(source, fields)
+
+
+def _geometry_of(wkb):
+    return shapely.from_wkb(wkb, on_invalid="ignore") if len(wkb) else np.empty(0, object)
+
+
+def _places_of(wkb):
+    """Coordinates in a column of points, and the row of each; points without height go fastest."""
+    filled = np.flatnonzero(np.not_equal(wkb, None))
+    stored = wkb[filled].tolist()
+    if set(map(len, stored)) == {PLAIN_POINT.itemsize}:
+        points = np.frombuffer(b"".join(stored), PLAIN_POINT)
+        if (points["order"] == 1).all() and (points["kind"] == 1).all():
+            places = np.column_stack([points["x"], points["y"]])
+            # a point of two not-a-numbers is how the format writes an empty one
+            placed = ~np.isnan(places).all(axis=1)
+            return places[placed], filled[placed]
+    geometry = _geometry_of(wkb)
+    check_kind(geometry, POINT_KINDS, tr("points"))
+    return shapely.get_coordinates(geometry, return_index=True)
 
 
 def _plain_file_layer(layer, fields):
@@ -286,12 +314,11 @@ def read_records(layer, source, target, transform_context, weight=None, fields=(
     Records
     """
     wanted = list(dict.fromkeys([*fields, *([weight] if weight else [])]))
-    geometry, values, _ = read_table(layer, source, wanted)
-    check_kind(geometry, POINT_KINDS, tr("points"))
-    places, feature = shapely.get_coordinates(geometry, return_index=True)
-    filled = np.zeros(len(geometry), bool)
+    wkb, values, _ = _read_binary(layer, source, wanted)
+    places, feature = _places_of(wkb)
+    filled = np.zeros(len(wkb), bool)
     filled[feature] = True
-    skipped = {tr("without geometry"): int(len(geometry) - filled.sum())}
+    skipped = {tr("without geometry"): int(len(wkb) - filled.sum())}
     finite = np.isfinite(places).all(axis=1)
     skipped[tr("with coordinates that are not finite")] = int((~finite).sum())
     places, feature = places[finite], feature[finite]

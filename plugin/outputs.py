@@ -89,13 +89,13 @@ def features_of(fields, columns, geometry):
 
 def as_multipolygons(geometry):
     """Polygons and multipolygons as multipolygons, so that one layer holds both."""
-    return np.array(
-        [
-            None if one is None else shapely.multipolygons(shapely.get_parts(one))
-            for one in np.atleast_1d(np.asarray(geometry, object))
-        ],
-        object,
-    )
+    geometry = np.atleast_1d(np.asarray(geometry, object))
+    parts, owners = shapely.get_parts(geometry, return_index=True)
+    whole = np.empty(len(geometry), object)
+    whole[~shapely.is_missing(geometry)] = shapely.MultiPolygon()
+    if len(parts):
+        shapely.multipolygons(parts, indices=owners, out=whole)
+    return whole
 
 
 def fill_sink(sink, fields, columns, geometry, progress):

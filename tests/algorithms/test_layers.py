@@ -16,7 +16,7 @@ from qgis.core import (
     QgsRectangle,
 )
 from steadfield.algorithms.numeric.errors import InputError
-from steadfield.plugin import layers, reference_system
+from steadfield.plugin import layers, outputs, reference_system
 
 CONTEXT = QgsCoordinateTransformContext()
 
@@ -146,3 +146,34 @@ def test_a_layer_without_crs_is_refused_in_words():
         reference_system.working_crs(
             QgsCoordinateReferenceSystem(), QgsRectangle(0, 0, 1, 1), CONTEXT
         )
+
+
+@pytest.mark.parametrize("others", [[], ["POINT Z (1 2 3)"], ["MULTIPOINT (4 5, 6 7)"]])
+def test_places_straight_from_binary_are_those_that_shapely_reads(others):
+    rng = np.random.default_rng(3)
+    # every mixture of finite, infinite and missing coordinates
+    odd = [(a, b) for a in (1.0, np.inf, -np.inf, np.nan) for b in (2.0, np.inf, np.nan)]
+    points = np.concatenate([shapely.points(rng.normal(0, 1e6, (50, 2))), shapely.points(odd)])
+    stored = shapely.to_wkb(np.concatenate([points, shapely.from_wkt(others)]), flavor="iso")
+    wkb = np.insert(stored.astype(object), [0, 7, 30, len(stored)], None)
+    places, row = layers._places_of(wkb)
+    expected, rows = shapely.get_coordinates(shapely.from_wkb(wkb), return_index=True)
+    np.testing.assert_array_equal(places, expected)
+    np.testing.assert_array_equal(row, rows)
+
+
+def test_columns_without_any_place_have_no_places():
+    for wkb in (np.empty(0, object), np.array([None, None], object)):
+        places, row = layers._places_of(wkb)
+        assert places.shape == (0, 2) and len(row) == 0
+
+
+def test_polygons_of_any_kind_become_multiple_ones_with_the_same_parts():
+    square, far = shapely.box(0, 0, 1, 1), shapely.box(5, 5, 6, 7)
+    mixed = [square, None, shapely.MultiPolygon([square, far]), shapely.Polygon(), far]
+    made = outputs.as_multipolygons(mixed)
+    for one, before in zip(made, mixed):
+        assert (one is None) == (before is None)
+        if one is not None:
+            assert one.geom_type == "MultiPolygon" and one.equals(before)
+            assert len(one.geoms) == len(shapely.get_parts(before))
