@@ -163,7 +163,10 @@ def table_of(
         members.append(
             sparse.csr_matrix((np.ones(len(used)), (sum_of_atom[used], used)), (sums, count))
         )
-        behinds.append(stand_behind(sum_of_atom[atom], sums, rules, **named))
+        if np.array_equal(sum_of_atom, np.arange(sums)):
+            behinds.append(atoms_behind)
+        else:
+            behinds.append(stand_behind(sum_of_atom[atom], sums, rules, **named))
     sums = Sums(
         sparse.vstack(members).tocsr(),
         atoms_behind.values(),

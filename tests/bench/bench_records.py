@@ -15,7 +15,7 @@ from pathlib import Path
 import numpy as np
 
 sys.path.insert(0, str(Path(__file__).resolve().parent.parent.parent / "tools"))
-from headless import Host  # noqa: E402
+from headless import Host
 
 COUNT, SIDE = 1_000_000, 60_000.0
 
@@ -68,7 +68,8 @@ def make_points(path, rng, hearts, spread):
     reference = osr.SpatialReference()
     reference.ImportFromEPSG(3035)
     chosen = hearts[rng.integers(0, len(hearts), COUNT)]
-    places = np.clip(chosen + rng.normal(0, spread, (COUNT, 2)), 0, SIDE) + [4e6, 3e6]
+    places = np.clip(chosen + rng.normal(0, spread, (COUNT, 2)), 0, SIDE)
+    places += np.array([4e6, 3e6])
     columns = {
         "weight": (ogr.OFTReal, rng.integers(1, 4, COUNT).astype(float)),
         "month": (ogr.OFTInteger, rng.integers(1, 13, COUNT)),
