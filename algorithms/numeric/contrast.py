@@ -372,8 +372,11 @@ def _relabelled_ratios(contrast, batch, generator):
     if pooled.counted:
         counts = pooled.weights.astype(np.int64)
         cases = int(counts[:split].sum())
-        planes = [relabelled_counts(counts, cases, generator) for _ in range(batch)]
-        surfaces = contrast.sums.sums(np.column_stack([*planes, pooled.weights]))
+        planes = np.empty((counts.size, batch + 1))
+        for one in range(batch):
+            planes[:, one] = relabelled_counts(counts, cases, generator)
+        planes[:, batch] = pooled.weights
+        surfaces = contrast.sums.sums(planes)
         total = surfaces[-1][shown]
         for surface in surfaces[:-1]:
             records = surface[shown]

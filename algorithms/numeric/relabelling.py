@@ -19,6 +19,8 @@ NARROWEST_PIXELS = 1.5
 NODES_PER_BANDWIDTH = 1.5
 # Values that all planes of one batch may hold together
 BATCH_VALUES = 6_000_000
+# values of records, over all planes, that are spread at once
+SPREAD_VALUES = 12_000_000
 LARGEST_HYPERGEOMETRIC = 1_000_000_000
 
 
@@ -102,8 +104,12 @@ class KernelSums:
 
     def _add_band(self, common, band, weights):
         rungs, sets = band.shares.shape[1], weights.shape[1]
-        planes = (band.shares[:, :, None] * weights[:, None, :]).reshape(len(weights), -1)
-        planes = spread(band.row, band.column, planes, band.lattice)
+        planes = np.zeros((*band.lattice, rungs * sets))
+        step = max(SPREAD_VALUES // (rungs * sets), 1)
+        for start in range(0, len(weights), step):
+            some = slice(start, start + step)
+            values = (band.shares[some, :, None] * weights[some, None, :]).reshape(-1, rungs * sets)
+            planes += spread(band.row[some], band.column[some], values, band.lattice)
         planes = np.ascontiguousarray(np.moveaxis(planes, 2, 0))
         half, width = (band.lattice[0] - 1) // 2, (band.lattice[1] - 1) // 2 + 1
         passed = fft.rfft2(planes, axes=(1, 2), workers=-1)[:, :, :width]
