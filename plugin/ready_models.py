@@ -9,6 +9,7 @@ from . import looks, model_looks
 from .text import tr
 
 FOLDER = Path(__file__).resolve().parent / "models"
+HELP = FOLDER.parent / "help"
 ICON = FOLDER.parent.parent / "icons" / "readymodel.svg"
 
 
@@ -44,6 +45,10 @@ class ReadyModel(QgsProcessingModelAlgorithm):
 
     def svgIconPath(self):
         return str(ICON)
+
+    def helpUrl(self):
+        page = HELP / f"{self._path.stem}.html"
+        return page.as_uri() if page.exists() else ""
 
     def createInstance(self):
         return ReadyModel(self._path)

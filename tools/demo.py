@@ -6,8 +6,10 @@ from pathlib import Path
 from headless import Host
 
 SEED = 1
-SAFE_SIZE = 800.0
+SAFE_SIZE, SECOND_SIZE = 800.0, 700.0
 LEAST_COUNT = 10
+RELABELLINGS = 199
+BUDGET = 0.1
 
 
 def analyse(host, folder):
@@ -20,11 +22,17 @@ def analyse(host, folder):
     def out(name):
         return str(folder / name)
 
-    done = {"table": table, "least count": LEAST_COUNT}
+    done = {
+        "table": table, "least count": LEAST_COUNT, "budget": BUDGET,
+        "ratio relabellings": RELABELLINGS,
+    }  # fmt: skip
     done["check"] = host.run(
         "recordcheck", RECORDS=falls, BOUNDARY=boundary, FLAGGED=out("flagged_records.gpkg"),
         REPORT=out("report_records.html"),
     )  # fmt: skip
+    done["advice"] = host.run(
+        "bandwidthadvice", RECORDS=falls, BOUNDARY=boundary, REPORT=out("report_bandwidth.html")
+    )
     done["density"] = host.run(
         "adaptivedensity", RECORDS=falls, BOUNDARY=boundary, DENSITY=out("density_falls.tif"),
         ERROR=out("density_falls_error.tif"), SUPPORT=out("density_falls_support.tif"),
@@ -32,7 +40,7 @@ def analyse(host, folder):
     )  # fmt: skip
     done["ratio"] = host.run(
         "densityratio", RECORDS=falls, BACKGROUND=residents, BOUNDARY=boundary, SEED=SEED,
-        RELABELLINGS=199, RATIO=out("ratio.tif"), P_VALUE=out("ratio_p_value.tif"),
+        RELABELLINGS=RELABELLINGS, RATIO=out("ratio.tif"), P_VALUE=out("ratio_p_value.tif"),
         OUTLINES=out("ratio_outlines.gpkg"), REPORT=out("report_ratio.html"),
     )  # fmt: skip
     done["grid"] = host.run(
@@ -42,8 +50,9 @@ def analyse(host, folder):
     )  # fmt: skip
     done["units"] = host.run(
         "unitvariance", UNITS=table + "base_units", COUNT="falls", TOTAL="residents",
-        OFFICIAL="ward", LABEL="unit", BUDGET=0.1, SEED=SEED, UNITS_OUT=out("units_variance.gpkg"),
-        TABLE=out("units_variance_table.csv"), EXTREMES=out("units_extremes.gpkg"),
+        OFFICIAL="ward", LABEL="unit", BUDGET=BUDGET, SEED=SEED,
+        UNITS_OUT=out("units_variance.gpkg"), TABLE=out("units_variance_table.csv"),
+        EXTREMES=out("units_extremes.gpkg"),
         REPORT=out("report_units.html"),
     )  # fmt: skip
     together = [done["density"]["DENSITY"]]
@@ -51,12 +60,13 @@ def analyse(host, folder):
         target = out(f"density_{name}.tif")
         host.run("adaptivedensity", RECORDS=table + name, BOUNDARY=boundary, DENSITY=target)
         together.append(target)
+    names = "falls; unlit paths; icy paths"
     done["blend"] = host.run(
-        "inkblend", LAYERS=together, PICTURE=out("blend.tif"), LEGEND=out("blend_legend.svg"),
-        REPORT=out("report_blend.html"),
+        "inkblend", LAYERS=together, NAMES=names, PICTURE=out("blend.tif"),
+        LEGEND=out("blend_legend.svg"), REPORT=out("report_blend.html"),
     )  # fmt: skip
     done["agreement"] = host.run(
-        "agreement", LAYERS=together, SEED=SEED, AGREEMENT=out("agreement.tif"),
+        "agreement", LAYERS=together, NAMES=names, SEED=SEED, AGREEMENT=out("agreement.tif"),
         ZONES=out("agreement_zones.gpkg"), REPORT=out("report_agreement.html"),
     )  # fmt: skip
     done["safe"] = host.run(
@@ -74,6 +84,17 @@ def analyse(host, folder):
         COUNT_FIELDS="count; falls", RECORDS=falls, LEAST_COUNT=LEAST_COUNT,
         RISKS=out("audit_risks.gpkg"), REPORT=out("report_audit.html"),
     )  # fmt: skip
+    # what a second release of the same records would give away
+    done["second safe"] = host.run(
+        "safehexagons", RECORDS=falls, CONTRIBUTOR="household", BOUNDARY=boundary,
+        HEXAGON_SIZE=SECOND_SIZE, LEAST_COUNT=LEAST_COUNT, SEED=SEED,
+        RELEASE=out("second_release.gpkg"),
+    )  # fmt: skip
+    done["second audit"] = host.run(
+        "releaseaudit", RELEASES=[done["safe"]["RELEASE"], done["second safe"]["RELEASE"]],
+        NAMES="hexagons; smaller hexagons", RECORDS=falls, LEAST_COUNT=LEAST_COUNT,
+        RISKS=out("second_audit_risks.gpkg"), REPORT=out("report_second_audit.html"),
+    )  # fmt: skip
     return done
 
 
@@ -83,8 +104,10 @@ def main(folder):
     host = Host()
     done = analyse(host, folder)
     import demo_pages
+    import worked_case
 
     demo_pages.write(folder, done)
+    worked_case.write_figures(folder, done)
     print(
         f"\nOpen {folder.name}/index.html; every layer stands styled in {folder.name}/ostermoor.qgz"
     )

@@ -28,7 +28,7 @@ def write(folder, done):
     """Write project, maps and index.html into the demo's folder."""
     layers = _layers(done)
     project = _project(folder, layers)
-    pictures = _maps(folder, project, layers)
+    pictures = _maps(folder, done, project, layers)
     _index(folder, done, pictures)
 
 
@@ -115,7 +115,7 @@ def _project(folder, layers):
     return project
 
 
-def _maps(folder, project, layers):
+def _maps(folder, done, project, layers):
     """Draw the map sheets; returns their paths by name."""
     sheets = {
         "district": (
@@ -143,18 +143,26 @@ def _maps(folder, project, layers):
         "blend": (
             "Falls, unlit paths and icy paths in one picture",
             ["zones", "blend"],
-            ["streets", "land cover"],
+            ["land cover"],
         ),
         "release": ("To publish: falls by disclosure-safe hexagon", ["outlines", "release"], []),
         "safe surface": ("To publish: disclosure-safe density", ["outlines", "safe surface"], []),
     }
     extent = layers["district"].extent()
+    # where the areas of raised risk lie, base units are small
+    close = layers["truth"].extent().buffered(500)
+    ink_legend = str(Path(done["blend"]["LEGEND"]).with_suffix(".png"))
+    more = {
+        "verdict": {"inset": close},
+        "units": {"inset": close},
+        "blend": {"beside": ink_legend},
+    }
     pictures = {}
     for name, (title, over, under) in sheets.items():
         path = folder / f"map_{name.replace(' ', '_')}.png"
         drawn = [layers[one] for one in [*over, *under, "district"]]
         legend = [layers[one] for one in over if one != "blend"]
-        map_sheet(project, drawn, title, str(path), extent, legend)
+        map_sheet(project, drawn, title, str(path), extent, legend, **more.get(name, {}))
         pictures[name] = path
     return pictures
 
@@ -240,9 +248,6 @@ def _index(folder, done, pictures):
         "The darker a place, the more is there; the hue says of what. Outlined: zones where "
         "the layers agree.",
     )
-    legend = Path(done["blend"]["LEGEND"]).with_suffix(".png")
-    if legend.exists():
-        page.picture("", legend.read_bytes(), "How to read the blended picture.")
     show(
         "5. What may be published",
         "release",
@@ -288,6 +293,7 @@ def safe_words(results):
 def _reports(folder):
     titles = {
         "report_records.html": "Check of the records",
+        "report_bandwidth.html": "Bandwidth advice",
         "report_density.html": "Density of falls",
         "report_ratio.html": "Falls against residents",
         "report_zoning_variance.html": "Zoning variance from points",
@@ -297,5 +303,6 @@ def _reports(folder):
         "report_release.html": "Safe hexagons",
         "report_release_surface.html": "Safe surface",
         "report_audit.html": "Release audit",
+        "report_second_audit.html": "Release audit of two releases of the same records",
     }
     return [(title, name) for name, title in titles.items() if (folder / name).exists()]

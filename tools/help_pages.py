@@ -1,105 +1,149 @@
 """Write the help pages that ship with the plugin: ``python tools/help_pages.py``.
 
-One page per algorithm, made from its own names, help texts and parameters, and an index that helps
-to choose between them. Pictures of the practice district come from plugin/help/pictures.
+A page is made from an algorithm's own names, help and parameters, from its text in
+tools/help_texts, and from the bands and fields that its example has written (help_examples.py).
+Beside them stand an index that helps to choose, the worked case and the command line.
+Pictures of the practice district come from plugin/help/pictures.
 """
 
 import html
+import re
 from pathlib import Path
+
+from help_parts import (
+    CAUTION,
+    STYLE,
+    code,
+    inner_table,
+    linked,
+    output_table,
+    page,
+    parameter_table,
+    sections,
+    stored,
+    table,
+)
+from model_drawing import drawing, sources_of
+from worked_case import filled
 
 ROOT = Path(__file__).resolve().parent.parent
 HELP = ROOT / "plugin" / "help"
-
-STYLE = """body { font: 16px/1.5 "Source Sans 3", "Noto Sans", Helvetica, Arial, sans-serif;
-  color: #23262b; background: #fcfbf8; margin: 0 auto; max-width: 54rem; padding: 1rem 2rem 3rem; }
-h1 { font-size: 1.6rem; margin-bottom: 0.2rem; } h2 { font-size: 1.15rem; margin-top: 2rem; }
-img { max-width: 100%; border: 1px solid #d9d4c7; } .question { color: #5b6068; }
-table { border-collapse: collapse; } td, th { text-align: left; vertical-align: top;
-  padding: 0.3rem 1rem 0.3rem 0; border-bottom: 1px solid #e6e1d5; } code { color: #1d4763; }
-.caution { background: #f4eede; padding: 0.5rem 1rem; }"""
-
-CAUTION = (
-    "Thresholds, and whether anything may be published, are for the data's owner, local rules and "
-    "law to decide, and a map is no substitute for licensed practice. The tool shows what its "
-    "stated rules give on the data it was handed."
-)
-
-CHOOSING = [
-    ("Are the records fit to be mapped at all?", "recordcheck", "Run it first, on every layer."),
-    ("Where are records dense?", "adaptivedensity", "Detail where there are many, calm elsewhere."),
-    ("How smooth should the surface be?", "bandwidthadvice", "Chains into the surface."),
-    ("Is it more than where people live?", "densityratio", "Records against a background."),
-    ("Which outline holds half of all records?", "densityoutlines", "From any density raster."),
-    ("Where is the middle, and did it move?", "centrespread", "By group, in an order."),
-    ("Does the map depend on size and place of cells?", "gridvariance", "From points."),
-    ("Does the map depend on how zones are drawn?", "unitvariance", "From small base units."),
-    ("Would a correlation survive other zones?", "correlationspread", "From base units."),
-    ("How large should cells be?", "cellsize", "A sweep with advice."),
-    ("How do several densities look together?", "inkblend", "2 to 6 layers, one picture."),
-    ("What do the raw layers look like together?", "rawink", "Before any smoothing."),
-    ("Where do the layers agree?", "agreement", "Zones that a policy can name."),
-    ("What may be published as counts?", "safehexagons", "Five protection methods."),
-    ("What may be published as a surface?", "safesurface", "Attacked before release."),
-    ("Can releases be subtracted from each other?", "releaseaudit", "Run it before publishing."),
-    ("Where can I practise?", "practicedistrict", "The invented district of Ostermoor."),
-]
+BACK = '<p><a href="index.html">All tools</a> · <a href="workedcase.html">Worked case</a></p>'
 
 
-def page(title, body):
-    """One HTML page."""
-    return (
-        '<!DOCTYPE html>\n<html lang="en">\n<head>\n<meta charset="utf-8">\n'
-        f"<title>{html.escape(title)}</title>\n"
-        '<link rel="stylesheet" href="style.css">\n</head>\n<body>\n'
-        f"{body}\n</body>\n</html>\n"
-    )
-
-
-def algorithm_page(algorithm, question):
-    """The page of one algorithm."""
-    lines = [
-        '<p><a href="index.html">All tools</a></p>',
-        f"<h1>{html.escape(algorithm.displayName())}</h1>",
+def algorithm_page(algorithm, question, outputs):
+    """The page of one algorithm, links to other tools not yet set."""
+    text = sections(algorithm.name())
+    reading = text["reading"]
+    if "{tables}" in reading:
+        reading, outputs = reading.replace("{tables}", _practice_tables(outputs)), {}
+    parts = [
         f'<p class="question">{html.escape(question)}</p>',
         f"<p>{html.escape(algorithm.HELP)}</p>",
+        f'<figure><img src="pictures/{algorithm.name()}.png" alt="A result on the practice '
+        f'district"><figcaption>{text["caption"]}</figcaption></figure>',
+        "<h2>When to use it</h2>",
+        text["use"],
+        "<h2>When to use another, or what it does not do</h2>",
+        text["not"],
+        *_example(algorithm, text),
+        "<h2>Parameters</h2>",
+        parameter_table(algorithm),
+        "<h2>Outputs</h2>",
+        output_table(algorithm, outputs),
+        "<h2>How to read them</h2>",
+        reading,
+        "<h2>Method</h2>",
+        text["method"],
+        '<p class="note">Full references stand in the report of each run.</p>',
+        "<h2>Limits and cautions</h2>",
+        text["cautions"],
     ]
-    if (HELP / "pictures" / f"{algorithm.name()}.png").exists():
-        lines.append(f'<p><img src="pictures/{algorithm.name()}.png" alt="A result"></p>')
-    lines.append("<h2>Parameters</h2>\n<table><tr><th>key</th><th>meaning</th></tr>")
-    for definition in algorithm.parameterDefinitions():
-        words = f"<b>{html.escape(definition.description())}</b>"
-        if definition.help():
-            words += f"<br>{html.escape(definition.help())}"
-        lines.append(f"<tr><td><code>{definition.name()}</code></td><td>{words}</td></tr>")
-    lines.append("</table>\n<h2>Outputs</h2>\n<table><tr><th>key</th><th>what it is</th></tr>")
-    for output in algorithm.outputDefinitions():
-        words = html.escape(output.description())
-        lines.append(f"<tr><td><code>{output.name()}</code></td><td>{words}</td></tr>")
-    lines.append("</table>")
-    lines.append(f"<p>On the command line: <code>qgis_process help {algorithm.id()}</code></p>")
-    lines.append(f'<p class="caution">{CAUTION}</p>')
-    return page(algorithm.displayName(), "\n".join(lines))
+    return _framed(algorithm.displayName(), parts)
 
 
-def index_page(algorithms):
-    """The page on choosing between the tools."""
-    by_id = {algorithm.name(): algorithm for algorithm in algorithms}
-    lines = [
-        "<h1>Choosing between the tools</h1>",
-        "<p>A map of confidential records has to survive three questions: would it say the same "
-        "under another cut, is what looks like a concentration real, and can anyone be picked "
-        "out? Start from the question you have.</p>",
-        "<table><tr><th>question</th><th>tool</th><th></th></tr>",
+def model_page(model):
+    """The page of one ready model, links to other tools not yet set."""
+    text = sections(model.name())
+    words = model.helpContent().get("ALG_DESC", "")
+    parts = [
+        '<p class="question">Ready model: a chain of tools in one step</p>',
+        f"<p>{html.escape(words)}</p>",
+        "<h2>When to use it</h2>",
+        text["use"],
+        "<h2>When to use another</h2>",
+        text["not"],
+        "<h2>Steps</h2>",
+        step_table(model),
+        f"<figure>\n{drawing(model)}\n<figcaption>Inputs, steps and outputs as the model designer "
+        "shows them. In the toolbox a right click on the model opens a copy there, to be changed "
+        "and saved under a name of your own.</figcaption></figure>",
+        *_example(model, text),
+        "<h2>Parameters</h2>",
+        parameter_table(model),
+        "<h2>How to read the results</h2>",
+        text["reading"],
     ]
-    for question, name, remark in CHOOSING:
-        if name in by_id:
-            title = html.escape(by_id[name].displayName())
-            lines.append(
-                f'<tr><td>{html.escape(question)}</td><td><a href="{name}.html">{title}</a></td>'
-                f"<td>{html.escape(remark)}</td></tr>"
-            )
-    lines.append(f'</table>\n<p class="caution">{CAUTION}</p>')
-    return page("Choosing between the tools", "\n".join(lines))
+    return _framed(model.displayName(), parts)
+
+
+def step_table(model):
+    """The steps in their order: what each is and what flows into it."""
+    steps = model.childAlgorithms()
+    rows = []
+    for name in _in_order(model):
+        step = steps[name]
+        algorithm = step.algorithm()
+        tool = html.escape(algorithm.displayName())
+        if step.algorithmId().startswith("steadfield:"):
+            tool = f"{{tool:{algorithm.name()}}}"
+        takes = [
+            html.escape(model.parameterDefinition(one).description())
+            if kind == "input"
+            else f"<i>{html.escape(steps[one].description())}</i>"
+            for kind, one in sources_of(model, step)
+        ]
+        rows.append([str(len(rows) + 1), html.escape(step.description()), tool, ", ".join(takes)])
+    return table(["", "step", "tool", "takes (results of earlier steps in italics)"], rows)
+
+
+def _in_order(model):
+    """Names of the steps, each after those it takes something from."""
+    steps = model.childAlgorithms()
+    placed = []
+    while len(placed) < len(steps):
+        for name in steps:
+            before = {one for kind, one in sources_of(model, steps[name]) if kind == "step"}
+            if name not in placed and before <= set(placed):
+                placed.append(name)
+    return placed
+
+
+def _example(algorithm, text):
+    return [
+        "<h2>On the command line</h2>",
+        f"<pre><code>{html.escape(text['example'], quote=False)}</code></pre>",
+        f'<p class="note">The file comes from {{tool:practicedistrict}}. Every parameter: '
+        f"{code('qgis_process help ' + algorithm.id())}; chains of steps: "
+        '<a href="commands.html">Tools on the command line</a>.</p>',
+    ]
+
+
+def _practice_tables(tables):
+    rows = [[code(name), inner_table(fields, "field")] for name, fields in tables.items()]
+    return table(["table", "fields"], rows)
+
+
+def _framed(title, parts):
+    head = [BACK, f"<h1>{html.escape(title)}</h1>"]
+    return page(title, "\n".join([*head, *parts, f'<p class="caution">{CAUTION}</p>']))
+
+
+def commands_page():
+    """The page on the command line."""
+    text = sections("commands")
+    chain = f'<pre id="chain"><code>{html.escape(text["chain"], quote=False)}</code></pre>'
+    return _framed("Tools on the command line", [text["before"], chain, text["after"]])
 
 
 def pages(algorithms, questions):
@@ -107,15 +151,37 @@ def pages(algorithms, questions):
 
     Parameters
     ----------
-    algorithms : sequence of SteadfieldAlgorithm
+    algorithms : sequence of QgsProcessingAlgorithm
+        Of the provider: algorithms, and ready models.
     questions : dict of str to str
         The words of each algorithm's QUESTION.
     """
-    chosen = [algorithm for algorithm in algorithms if hasattr(algorithm, "QUESTION")]
-    made = {f"{one.name()}.html": algorithm_page(one, questions[one.QUESTION]) for one in chosen}
-    made["index.html"] = index_page(chosen)
-    made["style.css"] = STYLE + "\n"
-    return made
+    by_name = {one.name(): one for one in algorithms}
+    outputs = stored("outputs")
+    made = {
+        f"{name}.html": algorithm_page(one, questions[one.QUESTION], outputs[name])
+        if hasattr(one, "QUESTION")
+        else model_page(one)
+        for name, one in by_name.items()
+    }
+    title = "Choosing between the tools"
+    text = (Path(__file__).parent / "help_texts" / "index.html").read_text(encoding="utf-8")
+    made["index.html"] = _framed(title, [text]).replace(BACK + "\n", "")
+    made["commands.html"] = commands_page()
+    made["workedcase.html"] = _framed("From question to publication", [filled("workedcase.html")])
+    made = {name: linked(text, by_name) for name, text in made.items()}
+    return {**made, "style.css": STYLE + "\n"}
+
+
+def readme():
+    """README.md with the short version of the worked case put in anew."""
+    path = ROOT / "README.md"
+    short = filled("readme.md")
+    pattern = r"(<!-- worked case -->\n).*?(<!-- end of worked case -->)"
+    return re.sub(
+        pattern, lambda found: found.group(1) + short + "\n" + found.group(2),
+        path.read_text(encoding="utf-8"), flags=re.DOTALL,
+    )  # fmt: skip
 
 
 def main():
@@ -127,6 +193,7 @@ def main():
     HELP.mkdir(exist_ok=True)
     for name, text in pages(host.provider.algorithms(), QUESTIONS).items():
         (HELP / name).write_text(text, encoding="utf-8")
+    (ROOT / "README.md").write_text(readme(), encoding="utf-8")
     host.leave()
 
 

@@ -1,16 +1,21 @@
-"""Maps drawn by the host: a sheet with title, map, legend and scale bar as PNG."""
+"""Maps drawn by the host: a sheet with title, map, legend, inset and scale bar as PNG."""
 
 from osgeo import gdal
 from qgis.core import (
+    QgsFillSymbol,
     QgsLayoutExporter,
     QgsLayoutItemLabel,
     QgsLayoutItemLegend,
     QgsLayoutItemMap,
+    QgsLayoutItemMapOverview,
+    QgsLayoutItemPicture,
     QgsLayoutItemScaleBar,
     QgsLayoutPoint,
     QgsLayoutSize,
     QgsLegendStyle,
+    QgsMapLayerLegendUtils,
     QgsPrintLayout,
+    QgsRasterLayer,
     QgsRectangle,
     QgsUnitTypes,
 )
@@ -23,6 +28,8 @@ LEGEND_PARTS = [
 ]
 MILLIMETRES = QgsUnitTypes.LayoutUnit.LayoutMillimeters
 WIDTH, HEIGHT, LEGEND_WIDTH, TITLE_HEIGHT = 245, 150, 77, 14
+INSET_HEIGHT = 56
+LEFT_OF_LEGEND = WIDTH - LEGEND_WIDTH - 3
 
 
 def _place(item, layout, x, y, width, height):
@@ -31,7 +38,9 @@ def _place(item, layout, x, y, width, height):
     item.attemptResize(QgsLayoutSize(width, height, MILLIMETRES))
 
 
-def map_sheet(project, layers, title, path, extent, legend_of=None, dpi=120):
+def map_sheet(
+    project, layers, title, path, extent, legend_of=None, dpi=120, inset=None, beside=None
+):
     """Draw layers, the first on top, as one sheet.
 
     Parameters
@@ -46,6 +55,10 @@ def map_sheet(project, layers, title, path, extent, legend_of=None, dpi=120):
     legend_of : sequence of QgsMapLayer or None
         Layers in the legend; all by default.
     dpi : int
+    inset : QgsRectangle or None
+        Ground that is drawn again, larger, under the legend.
+    beside : str or None
+        SVG or PNG that is drawn under the legend instead, such as a legend of its own.
 
     Raises
     ------
@@ -70,6 +83,13 @@ def map_sheet(project, layers, title, path, extent, legend_of=None, dpi=120):
     drawn.setFrameStrokeColor(QColor("#b9b2a0"))
     _add_legend(layout, drawn, legend_of or layers)
     _add_scale(layout, drawn, extent.width())
+    if inset is not None:
+        _add_inset(layout, drawn, inset)
+    if beside is not None:
+        picture = QgsLayoutItemPicture(layout)
+        picture.setPicturePath(beside)
+        top = TITLE_HEIGHT + 12
+        _place(picture, layout, LEFT_OF_LEGEND, top, LEGEND_WIDTH - 3, HEIGHT - 20 - top)
     settings = QgsLayoutExporter.ImageExportSettings()
     settings.dpi = dpi
     # the host tries to note the map's place inside the PNG, which that format cannot hold
@@ -101,14 +121,38 @@ def _add_legend(layout, drawn, layers):
     tree = legend.model().rootGroup()
     tree.removeAllChildren()
     for layer in layers:
-        tree.addLayer(layer)
+        node = tree.addLayer(layer)
+        if isinstance(layer, QgsRasterLayer):
+            # the first entry names the band, which the title of the layer says better
+            entries = len(legend.model().layerLegendNodes(node))
+            QgsMapLayerLegendUtils.setLegendNodeOrder(node, list(range(1, entries)))
+            legend.model().refreshLayerLegend(node)
     for part in LEGEND_PARTS:
         legend.setStyleFont(part, QFont("Noto Sans", 8))
     legend.setSymbolWidth(5)
     legend.setSymbolHeight(3.5)
     legend.setResizeToContents(True)
-    _place(legend, layout, WIDTH - LEGEND_WIDTH - 3, TITLE_HEIGHT, LEGEND_WIDTH, 100)
+    _place(legend, layout, LEFT_OF_LEGEND, TITLE_HEIGHT, LEGEND_WIDTH, 100)
     legend.adjustBoxSize()
+
+
+def _add_inset(layout, drawn, ground):
+    inset = QgsLayoutItemMap(layout)
+    width, top = LEGEND_WIDTH - 3, HEIGHT - 20 - INSET_HEIGHT
+    _place(inset, layout, LEFT_OF_LEGEND, top, width, INSET_HEIGHT)
+    inset.setCrs(drawn.crs())
+    inset.setLayers(drawn.layers())
+    inset.setKeepLayerSet(True)
+    inset.setExtent(_shaped(ground, width / INSET_HEIGHT))
+    inset.setFrameEnabled(True)
+    inset.setFrameStrokeColor(QColor("#3b3f46"))
+    overview = QgsLayoutItemMapOverview("inset", drawn)
+    drawn.overviews().addOverview(overview)
+    overview.setLinkedMap(inset)
+    frame = QgsFillSymbol.createSimple(
+        {"color": "transparent", "outline_color": "#3b3f46", "outline_width": "0.3"}
+    )
+    overview.setFrameSymbol(frame)
 
 
 def _add_scale(layout, drawn, width):
