@@ -69,7 +69,15 @@ class Agreement(SteadfieldAlgorithm):
         "it would stay if the layers were weighted otherwise; each pair of layers with a test "
         "whether their cores meet more than unrelated ones would."
     )
-    TAGS = ("overlap", "consensus", "multi-criteria", "priority", "zones", "weights", "overlay")
+    TAGS = (
+        tr("overlap"),
+        tr("consensus"),
+        tr("multi-criteria"),
+        tr("priority"),
+        tr("zones"),
+        tr("weights"),
+        tr("overlay"),
+    )
 
     def define(self):
         self.add_rasters(

@@ -215,7 +215,7 @@ def _add_tests(page, findings, pixel_area):
             f"{findings.names[one]} – {findings.names[other]}",
             number(test.shared * pixel_area),
             number(test.expected * pixel_area),
-            f"{number(test.low * pixel_area)} to {number(test.high * pixel_area)}",
+            tr("{} to {}").format(number(test.low * pixel_area), number(test.high * pixel_area)),
             number(test.p_value),
             tr("more than chance") if test.p_value <= SIGNIFICANT else tr("no more than chance"),
         )

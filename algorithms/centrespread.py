@@ -75,7 +75,15 @@ class CentreSpread(SteadfieldAlgorithm):
         "confidence. With an order, such as months, the centres form a path, and for every step "
         "the chance is given that the centres lie so far apart though nothing moved."
     )
-    TAGS = ("centre", "mean", "median", "standard distance", "ellipse", "path", "centroid")
+    TAGS = (
+        tr("centre"),
+        tr("mean"),
+        tr("median"),
+        tr("standard distance"),
+        tr("ellipse"),
+        tr("path"),
+        tr("centroid"),
+    )
 
     def define(self):
         self.add_points("RECORDS", tr("Records"), tr("Points, in any CRS."))

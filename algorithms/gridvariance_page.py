@@ -271,10 +271,10 @@ def method_words(job, study, shape):
             number(study.grid.cell * job.working.metres),
         ),
         tr(
-            "Movement is split by the law of total variance. {}: variance between sizes of the "
-            "mean over zonings. {}: mean over sizes of the variance between zonings. Every size "
-            "weighs the same; a zoning that gives a place no value drops out."
-        ).format(_sentence(source["scale"]), _sentence(source["zoning"])),
+            "Movement is split by the law of total variance into two: {} (variance between sizes "
+            "of the mean over zonings) and {} (mean over sizes of the variance between zonings). "
+            "Every size weighs the same; a zoning that gives a place no value drops out."
+        ).format(source["scale"], source["zoning"]),
         tr(
             "Counting noise is v (1 − v) / N for a share and v / N for a rate or a density, v the "
             "value and N the total of the cell, averaged over zonings."
@@ -311,7 +311,3 @@ def caution_words(study):
     if study.dense:
         words.insert(1, tr("Without a background a high density may only show where people live."))
     return words
-
-
-def _sentence(words):
-    return words[:1].upper() + words[1:]

@@ -33,7 +33,16 @@ class InkBlend(SteadfieldAlgorithm):
         "that a base map shows; the legend shows every ink from faint to full and every mixture, "
         "and drops into a print layout. The layers may differ in CRS, cell size, extent and type."
     )
-    TAGS = ("bivariate", "multivariate", "blend", "mix", "colour", "overlay", "composite", "legend")
+    TAGS = (
+        tr("bivariate"),
+        tr("multivariate"),
+        tr("blend"),
+        tr("mix"),
+        tr("colour"),
+        tr("overlay"),
+        tr("composite"),
+        tr("legend"),
+    )
 
     def define(self):
         self.add_rasters(

@@ -50,7 +50,7 @@ class PracticeDistrict(SteadfieldAlgorithm):
         "the marsh has the highest rate by chance alone; its falls were drawn until it had. "
         "Nothing in it is real."
     )
-    TAGS = ("example", "demo", "simulate", "test data", "Ostermoor")
+    TAGS = (tr("example"), tr("demo"), tr("simulate"), tr("test data"), tr("Ostermoor"))
 
     def define(self):
         self.add_number(

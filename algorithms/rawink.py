@@ -46,7 +46,15 @@ class RawInk(SteadfieldAlgorithm):
         "where features overlap, the ink adds up. Set it beside the blended picture of densities "
         "to see what the smoothing made of the data. Not for release: it shows single records."
     )
-    TAGS = ("points", "overplotting", "transparency", "raw", "blend", "colour", "overlay")
+    TAGS = (
+        tr("points"),
+        tr("overplotting"),
+        tr("transparency"),
+        tr("raw"),
+        tr("blend"),
+        tr("colour"),
+        tr("overlay"),
+    )
 
     def define(self):
         self.add(

@@ -34,7 +34,14 @@ class RecordCheck(SteadfieldAlgorithm):
         "areas. The report says what was found and what to do; the records concerned come out as "
         "a layer. People who share a house, a block of flats or a care home are no fault."
     )
-    TAGS = ("quality", "duplicates", "geocoding", "stacked", "rounded", "validate")
+    TAGS = (
+        tr("quality"),
+        tr("duplicates"),
+        tr("geocoding"),
+        tr("stacked"),
+        tr("rounded"),
+        tr("validate"),
+    )
 
     def define(self):
         self.add_points("RECORDS", tr("Records"), tr("Points to check, in any CRS."))

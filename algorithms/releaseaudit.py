@@ -30,7 +30,14 @@ class ReleaseAudit(SteadfieldAlgorithm):
         "completed. The audit knows nothing of what people know from elsewhere, nor of what "
         "everyone in a cell shares."
     )
-    TAGS = ("disclosure", "differencing", "confidentiality", "privacy", "subtraction", "overlap")
+    TAGS = (
+        tr("disclosure"),
+        tr("differencing"),
+        tr("confidentiality"),
+        tr("privacy"),
+        tr("subtraction"),
+        tr("overlap"),
+    )
 
     def define(self):
         self.add(

@@ -77,6 +77,14 @@ class Settings:
         if not self.given(name):
             value = self.algorithm.parameterDefinition(name).defaultValue()
             return None if value is None else float(value)
+        value = self.parameters[name]
+        # the host takes text that is no number for nothing where nothing is allowed
+        if isinstance(value, str) and not math.isfinite(_number(value)):
+            raise InputError(
+                tr("{}: a number is expected, decimals with a point; found “{}”.").format(
+                    self.label(name), value
+                )
+            )
         return self.algorithm.parameterAsDouble(self.parameters, name, self.context)
 
     def whole(self, name):
@@ -106,21 +114,10 @@ class Settings:
 
     def numbers(self, name):
         """Numbers from a text such as ``100, 200; 400``; empty list where none is given."""
-        text = self.words(name)
-        found = []
-        for piece in re.split(r"[;,\s]+", text.strip()) if text else []:
-            try:
-                value = float(piece)
-            except ValueError:
-                value = math.nan
-            if not math.isfinite(value):
-                raise InputError(
-                    tr("{}: numbers are expected, apart by commas; found “{}”.").format(
-                        self.label(name), piece
-                    )
-                )
-            found.append(value)
-        return found
+        try:
+            return numbers_in(self.words(name))
+        except InputError as error:
+            raise InputError(f"{self.label(name)}: {said(error)}") from error
 
     def seed(self):
         """The seed of this run: given, or drawn and then logged, reported and returned."""
@@ -186,6 +183,53 @@ class Settings:
             return tr("a layer")
         table = table_name(layer)
         return layer.name() if table in layer.name() else f"{layer.name()}: {table}"
+
+
+def numbers_in(text):
+    """Numbers of a list as it is typed, whether decimals are written with commas there or not.
+
+    Commas and semicolons set numbers apart. A comma between two digits may also be a decimal one,
+    and a point may set thousands apart; what could be either is refused and never guessed.
+
+    Parameters
+    ----------
+    text : str
+        Such as ``100, 200; 400``.
+
+    Returns
+    -------
+    list of float
+    """
+    found = []
+    for word in re.sub(r"[;\s]+|,(?=[;\s])|(?<=[;\s]),", " ", text).split():
+        pieces = word.strip(",").split(",")
+        thousands = [piece for piece in pieces if re.fullmatch(r"[1-9]\d{0,2}\.\d{3}", piece)]
+        decimal = len(pieces) == 2 and all(piece.isdigit() for piece in pieces)
+        # no list of whole numbers has one such as 05 or 000
+        grouped = len(pieces) > 2 and any(re.fullmatch(r"0\d+", piece) for piece in pieces)
+        if decimal or grouped or (thousands and (len(pieces) > 1 or word.endswith("0"))):
+            raise InputError(
+                tr(
+                    "“{}” can be read in more than one way; write decimals with a point, thousands "
+                    "without any sign, and a semicolon between two numbers, such as 0.5; 1200."
+                ).format(word)
+            )
+        for piece in pieces:
+            value = _number(piece)
+            if not math.isfinite(value):
+                raise InputError(
+                    tr("numbers are expected, apart by commas; found “{}”.").format(piece)
+                )
+            found.append(value)
+    return found
+
+
+def _number(text):
+    """The number that a text is, NaN for what is none; Python would read 1_000."""
+    try:
+        return math.nan if "_" in text else float(text)
+    except ValueError:
+        return math.nan
 
 
 def table_name(layer):

@@ -27,9 +27,26 @@ class ReadyModel(QgsProcessingModelAlgorithm):
         self._path = path
         if not self.fromFile(str(path)):
             raise OSError(tr("{}: the model cannot be read.").format(path.name))
+        self._translate()
+
+    def _translate(self):
+        """Say in the user's language what is shown; keys of inputs and outputs stay."""
+        shown = [*self.parameterDefinitions(), *self.outputDefinitions()]
+        for definition in shown:
+            definition.setDescription(translated(definition.description()))
+        for definition in _asked(self):
+            definition.setHelp(translated(definition.help()))
+        for child in self.childAlgorithms():
+            step = self.childAlgorithm(child)
+            step.setDescription(translated(step.description()))
+        texts = self.helpContent()
+        self.setHelpContent({key: translated(words) for key, words in texts.items()})
 
     def name(self):
         return self._path.stem
+
+    def displayName(self):
+        return translated(super().displayName())
 
     def group(self):
         return tr("Ready models")
@@ -59,6 +76,36 @@ class ReadyModel(QgsProcessingModelAlgorithm):
             if results.get(output):
                 looks.style_output(results[output], kind, look, {}, context)
         return results
+
+
+def translated(words):
+    """Words of a model, which `words_of` gives to translators."""
+    return tr(words) if words else words
+
+
+def words_of(model):
+    """What a user reads of a model, in English.
+
+    Parameters
+    ----------
+    model : QgsProcessingModelAlgorithm
+        As it was read from its file.
+
+    Returns
+    -------
+    list of str
+    """
+    shown = [*model.parameterDefinitions(), *model.outputDefinitions()]
+    words = [model.displayName(), *(definition.description() for definition in shown)]
+    words += [definition.help() for definition in _asked(model)]
+    words += [model.childAlgorithm(child).description() for child in model.childAlgorithms()]
+    words += model.helpContent().values()
+    return list(dict.fromkeys(filter(None, words)))
+
+
+def _asked(model):
+    """Parameters but for outputs, whose help is that of the step that writes them."""
+    return [one for one in model.parameterDefinitions() if not one.isDestination()]
 
 
 def ready_models():

@@ -13,7 +13,7 @@ from qgis.core import Qgis
 from .text import said, tr
 
 PAGE = """<!DOCTYPE html>
-<html lang="en">
+<html lang="{language}">
 <head>
 <meta charset="utf-8">
 <meta name="viewport" content="width=device-width, initial-scale=1">
@@ -170,7 +170,9 @@ class Report:
 
     def html(self):
         """The whole page as text."""
-        return PAGE.format(title=html.escape(self.title), body="\n".join(self._parts))
+        return PAGE.format(
+            language=tr("en"), title=html.escape(self.title), body="\n".join(self._parts)
+        )
 
 
 def versions():

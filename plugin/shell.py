@@ -3,6 +3,7 @@
 from qgis.core import Qgis, QgsApplication, QgsMessageLog
 
 from .packages import missing_packages
+from .translation import install_translator, remove_translator
 
 
 class Shell:
@@ -17,9 +18,11 @@ class Shell:
     def __init__(self, iface):
         self.iface = iface
         self.provider = None
+        self._translator = None
 
     def initProcessing(self):
         """Register the provider, or say which package is missing."""
+        self._translator = install_translator()
         problems = missing_packages()
         for sentence in problems:
             QgsMessageLog.logMessage(sentence, "Steadfield", Qgis.MessageLevel.Warning)
@@ -41,3 +44,5 @@ class Shell:
         if self.provider is not None:
             QgsApplication.processingRegistry().removeProvider(self.provider)
             self.provider = None
+        remove_translator(self._translator)
+        self._translator = None

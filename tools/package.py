@@ -13,6 +13,7 @@ ROOT = Path(__file__).resolve().parent.parent
 PARTS = ["plugin", "algorithms", "icons"]
 FILES = ["__init__.py", "metadata.txt", "LICENSE", "README.md", "CHANGELOG.md"]
 ENDINGS = {".py", ".txt", ".md", ".svg", ".model3", ".html", ".css", ".png", ""}
+LANGUAGES = re.compile(r"steadfield/plugin/i18n/steadfield_[\w@]+\.(ts|qm)")
 NEEDED = [
     "name",
     "qgisMinimumVersion",
@@ -57,6 +58,10 @@ def problems():
     for path, name in contents():
         if not path.exists():
             found.append(f"{name} is missing")
+        elif LANGUAGES.fullmatch(name):
+            # what is compiled comes with what it was compiled from
+            if not path.with_suffix(".ts").exists():
+                found.append(f"{name} comes without its source, the .ts file")
         elif path.suffix not in ENDINGS:
             found.append(f"{name} is of a kind that does not belong into the package")
         elif path.suffix == ".py":

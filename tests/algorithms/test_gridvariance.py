@@ -205,7 +205,7 @@ def test_what_cannot_be_used_is_left_out_and_counted(simulate, point_layer):
 def test_one_record_over_a_background_still_makes_a_map(simulate, point_layer):
     x, y = people(number=300)
     bands, results, _ = simulate(
-        RECORDS=point_layer(x[:1], y[:1]), BACKGROUND=point_layer(x, y), CELL_SIZES="2000,3000"
+        RECORDS=point_layer(x[:1], y[:1]), BACKGROUND=point_layer(x, y), CELL_SIZES="2000, 3000"
     )
     assert results["THRESHOLD_USED"] == pytest.approx(1000 / 300)
     assert not (bands["verdict"] == 1).any()
