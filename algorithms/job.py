@@ -5,6 +5,7 @@ import os
 from qgis.core import QgsProcessingException
 
 from ..plugin import outputs, rasters
+from ..plugin.files import partial_path, put_in_place
 from ..plugin.looks import style_output
 from ..plugin.pictures import drawing_to_png
 from ..plugin.report import versions
@@ -71,10 +72,32 @@ class Job(Inputs):
         fields = outputs.fields_of(columns)
         if kind == "polygon":
             geometry = outputs.as_multipolygons(geometry)
-        shape = outputs.GEOMETRIES[kind]
+        target = self._fill(name, fields, columns, geometry, outputs.GEOMETRIES[kind])
+        aliases = {column.name: column.alias for column in columns if column.alias}
+        self._keep(name, target, "vector", look, aliases)
+
+    def _fill(self, name, fields, columns, geometry, shape):
+        """Write features to the sink of a parameter; returns its path or id."""
+        aside = outputs.FileAside.asked_for(self.parameters.get(name), self.context)
+        if aside is None:
+            return self._fill_sink(name, self.parameters, fields, columns, geometry, shape)
+        try:
+            with aside:
+                asked = {**self.parameters, name: aside.request()}
+                self._fill_sink(name, asked, fields, columns, geometry, shape)
+                definition = self.algorithm.parameterDefinition(name)
+                aside.finish(definition, self.context)
+        except OSError as error:
+            raise InputError(
+                tr("{}: the file cannot be written: {}").format(self.label(name), error.strerror)
+            ) from error
+        self._written.append(aside.path)
+        return aside.path
+
+    def _fill_sink(self, name, parameters, fields, columns, geometry, shape):
         try:
             sink, target = self.algorithm.parameterAsSink(
-                self.parameters, name, self.context, fields, shape, self.working.crs
+                parameters, name, self.context, fields, shape, self.working.crs
             )
         except QgsProcessingException as error:
             raise InputError(f"{self.label(name)}: {error}") from error
@@ -85,8 +108,7 @@ class Job(Inputs):
         del sink
         if not taken:
             raise InputError(tr("{}: the layer cannot be written.").format(self.label(name)))
-        aliases = {column.name: column.alias for column in columns if column.alias}
-        self._keep(name, target, "vector", look, aliases)
+        return target
 
     def _check(self, share):
         if self.feedback.isCanceled():
@@ -121,11 +143,11 @@ class Job(Inputs):
     def write_file(self, name, text):
         """Write a text output that appears only when it is whole."""
         path = self.algorithm.parameterAsFileOutput(self.parameters, name, self.context)
-        waiting = rasters.partial_path(path)
+        waiting = partial_path(path)
         try:
             with open(waiting, "w", encoding="utf-8") as file:
                 file.write(text)
-            os.replace(waiting, path)
+            put_in_place(waiting, path)
         except OSError as error:
             raise InputError(
                 tr("{}: the file cannot be written: {}").format(self.label(name), error.strerror)

@@ -9,8 +9,8 @@ from qgis.core import QgsVectorFileWriter, QgsVectorLayer, QgsWkbTypes
 
 from ..algorithms.numeric.errors import InputError
 from ..algorithms.numeric.progress import part
+from .files import partial_path, put_in_place
 from .outputs import as_multipolygons, fields_of, fill_sink
-from .rasters import partial_path
 from .text import tr
 
 KINDS = {
@@ -74,7 +74,7 @@ def write_geopackage(path, crs, tables, transform_context, progress):
         for number, table in enumerate(tables):
             _save_style(waiting, table)
             progress(0.9 + 0.1 * (number + 1) / len(tables))
-        os.replace(waiting, path)
+        put_in_place(waiting, path)
     finally:
         for left_over in (waiting, waiting + "-wal", waiting + "-shm", waiting + "-journal"):
             if os.path.exists(left_over):

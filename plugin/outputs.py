@@ -1,5 +1,8 @@
 """Arrays to vector layers: features are written only when everything is computed."""
 
+import os
+import shutil
+import tempfile
 from dataclasses import dataclass
 
 import numpy as np
@@ -10,9 +13,14 @@ from qgis.core import (
     QgsField,
     QgsFields,
     QgsGeometry,
+    QgsProcessingContext,
+    QgsProcessingOutputLayerDefinition,
+    QgsProcessingUtils,
+    QgsProperty,
     QgsWkbTypes,
 )
 
+from .files import put_in_place
 from .host import BIG_INTEGER, REAL, TEXT
 
 FIELD_TYPES = {"int": BIG_INTEGER, "float": REAL, "text": TEXT}
@@ -23,6 +31,8 @@ GEOMETRIES = {
     "none": QgsWkbTypes.Type.NoGeometry,
 }
 CHUNK = 20_000
+# formats that keep a layer in one file
+SINGLE_FILES = (".gpkg", ".geojson", ".fgb", ".csv")
 
 
 @dataclass(frozen=True)
@@ -117,3 +127,67 @@ def fill_sink(sink, fields, columns, geometry, progress):
             chunk = []
             progress(written / total)
     return not chunk or sink.addFeatures(chunk, QgsFeatureSink.Flag.FastInsert)
+
+
+class FileAside:
+    """A vector file that is written in a folder of its own and appears when it is whole.
+
+    Leaving the ``with`` block without `finish` leaves nothing behind, and spares a file that
+    already carried the name.
+
+    Parameters
+    ----------
+    path : str
+        Where the file will be.
+    wanted : QgsProcessingOutputLayerDefinition
+        As the host was asked for it.
+    """
+
+    def __init__(self, path, wanted):
+        self.path = path
+        self._wanted = wanted
+        self._folder = self._waiting = None
+
+    @classmethod
+    def asked_for(cls, value, context):
+        """The file that the value of a sink parameter asks for; None for any other kind of sink."""
+        if isinstance(value, str):
+            value = QgsProcessingOutputLayerDefinition(value)
+        if not isinstance(value, QgsProcessingOutputLayerDefinition) or value.useRemapping():
+            return None
+        path, known = value.sink.valueAsString(context.expressionContext())
+        single = known and os.path.splitext(path)[1].lower() in SINGLE_FILES
+        # what is no path, such as a table of a database, has no folder that is there
+        return cls(path, value) if single and os.path.isdir(os.path.dirname(path)) else None
+
+    def __enter__(self):
+        folder, name = os.path.split(self.path)
+        self._folder = tempfile.mkdtemp(prefix=".steadfield-", dir=folder)
+        self._waiting = os.path.join(self._folder, name)
+        return self
+
+    def __exit__(self, *trouble):
+        shutil.rmtree(self._folder, ignore_errors=True)
+
+    def request(self):
+        """What to ask the host for instead: the same file in the folder aside, not loaded."""
+        aside = QgsProcessingOutputLayerDefinition(self._wanted)
+        aside.sink = QgsProperty.fromValue(self._waiting)
+        aside.destinationProject = None
+        return aside
+
+    def finish(self, definition, context):
+        """Move the file to its place and let the host load it, as the sink would have done.
+
+        Raises
+        ------
+        OSError
+            The place cannot be taken.
+        """
+        put_in_place(self._waiting, self.path)
+        project = self._wanted.destinationProject
+        if project is not None:
+            title = self._wanted.destinationName or definition.description()
+            hint = QgsProcessingUtils.LayerHint.Vector
+            details = QgsProcessingContext.LayerDetails(title, project, definition.name(), hint)
+            context.addLayerToLoadOnCompletion(self.path, details)

@@ -1,7 +1,6 @@
 """Arrays to rasters and back; warping, tiling and formats are the raster library's."""
 
 import os
-import uuid
 from dataclasses import dataclass
 
 import numpy as np
@@ -10,6 +9,7 @@ from osgeo import gdal, ogr, osr
 
 from ..algorithms.numeric.errors import InputError
 from ..algorithms.numeric.grid import Grid
+from .files import partial_path, put_in_place
 from .text import tr
 
 NO_DATA = -9999.0
@@ -44,13 +44,6 @@ def _options(driver, columns, rows):
     return options
 
 
-def partial_path(path):
-    """A name beside the final one that a half-written file carries."""
-    folder, name = os.path.split(path)
-    stem, ending = os.path.splitext(name)
-    return os.path.join(folder, f".{stem}-{uuid.uuid4().hex[:8]}{ending}")
-
-
 def write_raster(path, grid, crs, bands, progress, no_data=NO_DATA, kind=gdal.GDT_Float32):
     """Write bands to a raster file that appears only when it is whole.
 
@@ -75,7 +68,7 @@ def write_raster(path, grid, crs, bands, progress, no_data=NO_DATA, kind=gdal.GD
     waiting = partial_path(path)
     try:
         _write_bands(driver, waiting, grid, crs, bands, progress, no_data, kind)
-        os.replace(waiting, path)
+        put_in_place(waiting, path)
     except (RuntimeError, OSError) as error:
         raise InputError(
             tr("The raster {} cannot be written: {}").format(
@@ -121,7 +114,7 @@ def write_picture(path, grid, crs, windows, levels_of, progress):
         if dataset.FlushCache() not in (None, 0):
             raise OSError(gdal.GetLastErrorMsg())
         dataset = None
-        os.replace(waiting, path)
+        put_in_place(waiting, path)
     except (RuntimeError, OSError) as error:
         raise InputError(
             tr("The raster {} cannot be written: {}").format(

@@ -17,6 +17,7 @@ from qgis.core import (
 )
 from steadfield.algorithms.base import SteadfieldAlgorithm
 from steadfield.algorithms.numeric.grid import covering
+from steadfield.plugin import outputs
 from steadfield.plugin.looks import SEQUENCE, ramp, single, spread
 from steadfield.plugin.outputs import Column
 from steadfield.plugin.rasters import Band, read_raster
@@ -151,11 +152,41 @@ def test_a_failure_takes_back_what_was_written(count, tmp_path):
 
 
 def test_an_earlier_result_survives_a_cancelled_run(count, tmp_path):
-    count(PLACES=None, REPORT=None)
-    before = (tmp_path / "counts.tif").read_bytes()
+    count(REPORT=None)
+    before = {file.name: file.read_bytes() for file in tmp_path.iterdir()}
     with pytest.raises(QgsProcessingException, match="Cancelled"):
-        count(cancel_at=0.2, PLACES=None, REPORT=None)
-    assert (tmp_path / "counts.tif").read_bytes() == before
+        count(cancel_at=0.2, REPORT=None)
+    assert {file.name: file.read_bytes() for file in tmp_path.iterdir()} == before
+
+
+@pytest.mark.parametrize("ending", ["gpkg", "geojson", "fgb", "csv", "shp"])
+def test_a_layer_appears_only_when_it_is_whole(count, tmp_path, monkeypatch, ending):
+    path = tmp_path / f"places.{ending}"
+    seen = []
+    fill = outputs.fill_sink
+
+    def look_and_fill(*arguments):
+        seen.append(path.exists())
+        return fill(*arguments)
+
+    monkeypatch.setattr(outputs, "fill_sink", look_and_fill)
+    count(PLACES=str(path), REPORT=None)
+    # the host writes a shapefile, which is several files, in its place
+    assert seen == [ending == "shp"]
+    layer = QgsVectorLayer(str(path), "places", "ogr")
+    assert layer.featureCount() == 3
+    if ending == "gpkg":
+        assert layer.dataProvider().subLayers()[0].split("!!::!!")[1] == "places"
+
+
+def test_an_earlier_layer_survives_a_run_that_fails_while_writing(count, tmp_path, monkeypatch):
+    count(REPORT=None)
+    before = (tmp_path / "places.gpkg").read_bytes()
+    monkeypatch.setattr(outputs, "fill_sink", lambda *arguments: False)
+    with pytest.raises(QgsProcessingException, match="PLACES"):
+        count(REPORT=None)
+    assert (tmp_path / "places.gpkg").read_bytes() == before
+    assert not list(tmp_path.glob(".steadfield*"))
 
 
 def test_a_geographic_layer_is_worked_on_in_metres(count, point_layer):
