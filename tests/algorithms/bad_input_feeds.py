@@ -7,6 +7,10 @@ import shapely
 CRS = {"deg": data.DEGREES, "nocrs": None, "feet": data.FEET, "far": data.FAR}
 
 
+# base units along a side that keep a run busy for seconds
+LONGER_UNITS = 45
+
+
 class Feeds:
     """Makes the input layers of every sort and kind once and keeps them."""
 
@@ -33,7 +37,8 @@ class Feeds:
         if sort == "features":
             return [self("points", kind), self("units", "good")]
         if sort == "releases":
-            return [self("units", kind), self("zones", "good")]
+            longer = kind == "longer"
+            return [self("units", kind), self("zones", "longer" if longer else "good")]
         if sort == "raster":
             return None if kind == "none" else self._raster(kind)
         if sort == "rasters":
@@ -51,7 +56,7 @@ class Feeds:
         if sort == "points":
             count = 20_000 if longer else data.RECORDS
             return self._vector(data.points(count), "Point", kind, sort)
-        fine = data.units(20 if longer else 8)
+        fine = data.units(LONGER_UNITS if longer else 8)
         if sort == "zones":
             return self._vector(data.zones(fine), "Polygon", kind, sort)
         return self._vector(fine, "Polygon", kind, sort)
