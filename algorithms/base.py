@@ -329,7 +329,13 @@ class SteadfieldAlgorithm(QgsProcessingAlgorithm):
         """Add REPORT, a page for the results viewer."""
         self.add(
             QgsProcessingParameterFileDestination(
-                "REPORT", tr("Report"), tr("HTML pages (*.html)"), None, optional, True
+                "REPORT",
+                # the results viewer lists the pages of all runs by these words alone
+                tr("{}: report").format(self.NAME),
+                tr("HTML pages (*.html)"),
+                None,
+                optional,
+                True,
             ),
             tr("A page with the answer in a sentence, plots, method, parameters and cautions."),
         )

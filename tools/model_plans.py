@@ -171,7 +171,7 @@ def places_that_hold():
         [
             ("UNITS_OUT", "Units with variance", (0, 3.4), "Every unit with figures and verdict."),
             ("TABLE", "Table of statistics", (1, 3.4), "By number of zones and statistic."),
-            ("REPORT", "Report", (3, 3.4), "How far the map depends on the cut."),
+            ("REPORT", "Report on the places", (3, 3.4), "How far the map depends on the cut."),
         ],
         note="Verdict: 1 holds above the threshold, -1 below, 0 depends on the cut or on chance.",
     )  # fmt: skip
