@@ -18,6 +18,7 @@ class Shell:
     def __init__(self, iface):
         self.iface = iface
         self.provider = None
+        self._actions = []
         self._translator = None
 
     def initProcessing(self):
@@ -39,9 +40,17 @@ class Shell:
 
     def initGui(self):
         self.initProcessing()
+        if self.provider is not None:
+            from .model_actions import register_actions
+
+            self._actions = register_actions()
 
     def unload(self):
         if self.provider is not None:
+            from .model_actions import remove_actions
+
+            remove_actions(self._actions)
+            self._actions = []
             QgsApplication.processingRegistry().removeProvider(self.provider)
             self.provider = None
         remove_translator(self._translator)

@@ -14,7 +14,6 @@ from help_parts import (
     CAUTION,
     STYLE,
     code,
-    inner_table,
     linked,
     output_table,
     page,
@@ -130,7 +129,13 @@ def _example(algorithm, text):
 
 
 def _practice_tables(tables):
-    rows = [[code(name), inner_table(fields, "field")] for name, fields in tables.items()]
+    rows = [
+        [
+            code(name),
+            ", ".join(f"{code(key)} ({html.escape(words)})" for key, words in fields.items()),
+        ]
+        for name, fields in tables.items()
+    ]
     return table(["table", "fields"], rows)
 
 

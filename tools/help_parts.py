@@ -17,7 +17,8 @@ figure { margin: 1rem 0; } figcaption, .question, .note { color: #5b6068; }
 figcaption { max-width: 46rem; font-size: 0.92rem; }
 table { border-collapse: collapse; font-size: 0.94rem; } td, th { text-align: left;
   vertical-align: top; padding: 0.3rem 1rem 0.3rem 0; border-bottom: 1px solid #e6e1d5; }
-code { color: #1d4763; } td:first-child code { white-space: nowrap; } .value { color: #5b6068; }
+code { color: #1d4763; } td:first-child code { white-space: nowrap; } .value { color: #5b6068;
+  display: inline-block; min-width: 13rem; }
 pre { background: #f1eee5; padding: 0.7rem 1rem; overflow-x: auto; font-size: 0.88rem;
   line-height: 1.4; } pre code { color: inherit; }
 td.figure { text-align: right; } .say { border-left: 5px solid #8a5a1c; padding-left: 1rem; }

@@ -40,7 +40,10 @@ def keep(name, png):
         picture = picture.resize((factor * picture.width, factor * picture.height), Image.NEAREST)
     if picture.width > WIDTH:
         picture = picture.resize((WIDTH, round(picture.height * WIDTH / picture.width)))
-    picture.quantize(160).save(PICTURES / f"{name}.png", optimize=True)
+    # a palette that keeps the rare colours of a legend, spread so that ramps stay smooth
+    palette = picture.quantize(256, method=Image.Quantize.MAXCOVERAGE)
+    few = picture.quantize(palette=palette, dither=Image.Dither.FLOYDSTEINBERG)
+    few.save(PICTURES / f"{name}.png", optimize=True)
 
 
 def first_picture(report):

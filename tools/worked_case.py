@@ -36,8 +36,33 @@ def write_figures(folder, done):
         **_cut(done),
         **_release(done),
     }
-    text = json.dumps(words, ensure_ascii=False, indent=1) + "\n"
+    check_story(done, words)
+    # a number keeps together at the end of a line
+    text = json.dumps(words, ensure_ascii=False, indent=1).replace("\u2009", "\u202f") + "\n"
     (folder / "figures.json").write_text(text, encoding="utf-8")
+
+
+def check_story(done, words):
+    """Refuse results that the sentences of the worked case do not fit.
+
+    Raises
+    ------
+    RuntimeError
+        The text in tools/help_texts has to be written anew.
+    """
+    told = {
+        "records without faults": done["check"]["FAULTS"] == 0,
+        "areas raised over the whole map": done["ratio"]["P_RAISED"] <= 0.05,
+        "none lowered": done["ratio"]["P_LOWERED"] > 0.05,
+        "the worst ward by chance alone": words["worst_ward"] not in words["areas"],
+        "units that hold, none of them in the worst ward": bool(words["holding_names"])
+        and words["worst_ward"] not in words["holding_names"],
+        "a clean audit": done["audit"]["CLEAN"] == 1,
+        "a second release that discloses": done["second audit"]["DISCLOSED_REGIONS"] > 0,
+    }
+    missing = [part for part, holds in told.items() if not holds]
+    if missing:
+        raise RuntimeError(f"the worked case tells of {missing}, which the demo has not shown")
 
 
 def _rows(path, table=None):

@@ -100,23 +100,28 @@ def desktop(profile, tmp_path):
 
 
 @pytest.fixture
-def command_line(profile, tmp_path):
-    """Run the command line of the host with the same profile; returns what it said."""
+def headless(profile, tmp_path):
+    """Environment of the command line of the host with the fresh profile."""
     if PROCESS is None:
         pytest.skip("needs the command line of the host")
+    return {
+        **os.environ,
+        "QT_QPA_PLATFORM": "offscreen",
+        "PYTHONPATH": os.pathsep.join(path for path in sys.path if "site-packages" in path),
+        "QGIS_CUSTOM_CONFIG_PATH": str(profile),
+        "HOME": str(tmp_path),
+        "LC_ALL": "C.UTF-8",
+    }
+
+
+@pytest.fixture
+def command_line(headless):
+    """Run the command line of the host with the same profile; returns what it said."""
 
     def run(*words):
-        environment = {
-            **os.environ,
-            "QT_QPA_PLATFORM": "offscreen",
-            "PYTHONPATH": os.pathsep.join(path for path in sys.path if "site-packages" in path),
-            "QGIS_CUSTOM_CONFIG_PATH": str(profile),
-            "HOME": str(tmp_path),
-            "LC_ALL": "C.UTF-8",
-        }
         ran = subprocess.run(
             [PROCESS, *words],
-            env=environment,
+            env=headless,
             capture_output=True,
             text=True,
             timeout=100,

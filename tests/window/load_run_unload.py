@@ -16,6 +16,7 @@ from inside import (
     wait,
     write_records,
 )
+from processing.gui.ProviderActions import ProviderContextMenuActions
 from qgis.core import QgsApplication, QgsProject
 from qgis.PyQt.QtWidgets import QDockWidget
 from qgis.utils import iface, loadPlugin, plugins, startPlugin, unloadPlugin
@@ -53,6 +54,7 @@ def seen():
         "providers": sorted(one.id() for one in QgsApplication.processingRegistry().providers()),
         "toolbox": toolbox_rows(),
         "bar": bar_texts(),
+        "menu entries": sorted(str(one.name) for one in ProviderContextMenuActions.actions),
         "docks": sorted(one.objectName() for one in iface.mainWindow().findChildren(QDockWidget)),
         "modules": sorted(
             name for name in sys.modules if name == "steadfield" or name.startswith("steadfield.")

@@ -19,8 +19,9 @@ from qgis.core import (
     QgsVectorLayer,
 )
 from qgis.gui import QgsModelComponentGraphicItem
-from qgis.PyQt.QtCore import Qt
-from qgis.PyQt.QtWidgets import QGraphicsView
+from qgis.PyQt.QtCore import Qt, QTimer
+from qgis.PyQt.QtWidgets import QApplication, QDockWidget, QGraphicsView
+from qgis.utils import iface
 
 
 def boxes(scene):
@@ -32,6 +33,71 @@ def boxes(scene):
             words = item.component().description()
             found.append([words, place.left(), place.top(), place.right(), place.bottom()])
     return found
+
+
+ENTRY = "Open a copy in the model designer"
+
+
+def row_of(model, words, parent):
+    """Index of a row of the toolbox below another, by its words."""
+    rows = (model.index(row, 0, parent) for row in range(model.rowCount(parent)))
+    return next(index for index in rows if str(index.data()) == words)
+
+
+def right_click(*path):
+    """Open the menu of a row of the toolbox and click on the entry if it is there.
+
+    Returns the entries of the menu.
+    """
+    dock = iface.mainWindow().findChild(QDockWidget, "ProcessingToolbox")
+    dock.show()
+    dock.raise_()
+    tree = dock.algorithmTree
+    index = tree.rootIndex()
+    for words in path:
+        index = row_of(tree.model(), words, index)
+        tree.expand(index)
+    tree.scrollTo(index)
+    tree.setCurrentIndex(index)
+    wait(300)
+    entries = []
+
+    def choose():
+        menu = QApplication.activePopupWidget()
+        entries.extend(action.text().replace("&", "") for action in menu.actions())
+        chosen = [action for action in menu.actions() if action.text().replace("&", "") == ENTRY]
+        menu.close()
+        for action in chosen:
+            action.trigger()
+
+    QTimer.singleShot(500, choose)
+    dock.showPopupMenu(tree.visualRect(index).center())
+    wait(500)
+    return entries
+
+
+def copies():
+    """Open a copy by the menu of the toolbox; note what its designer holds and the menus."""
+    model = QgsApplication.processingRegistry().algorithmById("steadfield:cleanrelease")
+    before = len(ModelerDialog.dlgs)
+    notes["menu of a model"] = right_click("Steadfield", "Ready models", model.displayName())
+    notes["menu of a tool"] = right_click("Steadfield", "Records", "Check point records")
+    opened = ModelerDialog.dlgs[before:]
+    notes["copies"] = []
+    for dialog in opened:
+        copy = dialog.model()
+        notes["copies"].append(
+            {
+                "name": copy.displayName(),
+                "file": copy.sourceFilePath(),
+                "steps": sorted(copy.childAlgorithms()),
+                "steps of the model": sorted(model.childAlgorithms()),
+                "valid": copy.validate()[0],
+            }
+        )
+        dialog.grab().save(str(PICTURES / "model copy.png"))
+        dialog.setDirty(False)
+        dialog.close()
 
 
 def points(name, east):
@@ -92,6 +158,7 @@ def steps():
         notes["opened"][path.stem] = boxes(scene)
         dialog.setDirty(False)
         dialog.close()
+    copies()
     run_from_dialog()
 
 

@@ -34,6 +34,9 @@ def test_the_packaged_plugin_loads_runs_from_its_dialog_and_leaves_nothing_behin
     # the host itself may say something, about a font for one
     assert without["bar"] == second["bar"] == first["bar"]
     assert not any("needed" in sentence for sentence in first["bar"])
+    added = [one for one in first["menu entries"] if one not in without["menu entries"]]
+    assert added == ["Open a copy in the model designer"]
+    assert second["menu entries"] == first["menu entries"]
     assert without["docks"] == second["docks"] == first["docks"]
     for title, words in notes["log"].items():
         assert "Traceback" not in words and "Python error" not in title, words
