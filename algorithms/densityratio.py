@@ -18,12 +18,13 @@ from .numeric.tolerance import check_levels, tolerance_areas
 
 # factors that the colours of a ratio may reach either way
 FACTORS = (1.25, 1.5, 2.0, 3.0, 4.0, 6.0, 10.0, 20.0, 100.0)
-# class of an area: side, and twice that where it holds over the whole map
+# class of an area: side, and twice that where it holds over the whole map; no two shades are alike
+# in grey print
 CLASSES = (
-    (1, "#e8c79c", tr("raised, pixel by pixel")),
-    (-1, "#c9d9e3", tr("lowered, pixel by pixel")),
-    (2, "#7a3d10", tr("raised over the whole map")),
-    (-2, "#1f4e79", tr("lowered over the whole map")),
+    (1, "#d8a35c", tr("raised, pixel by pixel")),
+    (-1, "#cfe3ef", tr("lowered, pixel by pixel")),
+    (2, "#641f10", tr("raised over the whole map")),
+    (-2, "#3f78ad", tr("lowered over the whole map")),
 )
 
 

@@ -9,7 +9,7 @@ from .numeric.grouping import reading_order
 from .numeric.record_faults import FAULT, FINE, LOOK
 
 LISTED_GROUPS = 30
-COLOURS = ("#8c2d19", "#1d4763", "#b8862b", "#5b3f7d", "#2e7179", "#7a3d10", "#4c7a34", "#6b665b")
+COLOURS = ("#650008", "#e0b942", "#7f64c1", "#00a791", "#361b73", "#966d00", "#23625b", "#c1b0ff")
 SEVERITIES = {FAULT: tr("fault"), LOOK: tr("worth a look"), FINE: tr("fine")}
 
 

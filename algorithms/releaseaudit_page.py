@@ -15,7 +15,7 @@ KIND_WORDS = {
     "at most": tr("known to be few, perhaps none"),
     "empty": tr("known to be empty"),
 }
-FILLS = {"exact": "#7d1f1f", "range": "#c07d3c", "at most": "#e8c79c", "empty": "#c9d9e3"}
+FILLS = {"exact": "#7d1f1f", "range": "#b36a2a", "at most": "#dda968", "empty": "#dbe7ee"}
 
 METHOD = (
     tr(

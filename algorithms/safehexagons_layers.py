@@ -9,6 +9,11 @@ from ..plugin.text import tr
 from .numeric.errors import InputError
 from .numeric.release import MERGE, NOISE
 
+# why a hexagon carries a figure or not, in the custodian's layer, and its colour
+UNSAFE, COMPLEMENTARY = tr("unsafe by the rules"), tr("withheld to protect others")
+EMPTY, SAFE = tr("empty"), tr("safe")
+REASONS = {SAFE: "#93bb93", UNSAFE: "#6b1f3f", COMPLEMENTARY: "#a9803f", EMPTY: "#f6f2e8"}
+
 
 def _names(study, made):
     """Name of each zone: axial coordinates of its first hexagon."""
@@ -129,8 +134,8 @@ def write_custodian(job, study, made, shapes):
     whole, values = behind.whole, behind.values()
     reasons = np.select(
         [made.unsafe, made.complementary, whole.records == 0],
-        [tr("unsafe by the rules"), tr("withheld to protect others"), tr("empty")],
-        tr("safe"),
+        [UNSAFE, COMPLEMENTARY, EMPTY],
+        SAFE,
     )
     columns = [
         Column("cell", "text", _names(study, made), tr("Hexagon (axial q r)")),
@@ -145,10 +150,5 @@ def write_custodian(job, study, made, shapes):
         columns.insert(
             2, Column("true_numerator", "float", values[0], tr("True numerator (confidential)"))
         )
-    classes = [
-        (tr("safe"), looks.SEQUENCE[2], tr("safe")),
-        (tr("unsafe by the rules"), "#6b1f3f", tr("unsafe by the rules")),
-        (tr("withheld to protect others"), "#c9a978", tr("withheld to protect others")),
-        (tr("empty"), "#f6f2e8", tr("empty")),
-    ]
+    classes = [(words, colour, words) for words, colour in REASONS.items()]
     job.write_layer("CUSTODIAN", columns, shapes, "polygon", looks.categories("reason", classes))

@@ -4,6 +4,7 @@ A look is a callable that takes a loaded layer and sets its renderer.
 """
 
 import os
+from itertools import cycle
 
 from qgis.core import (
     QgsCategorizedSymbolRenderer,
@@ -38,6 +39,7 @@ DIVERGING = ("#1f4e79", "#6c9bc0", "#c9d9e3", "#f6f2e8", "#e8c79c", "#c07d3c", "
 # Dark, light, middle grey when printed without colour.
 VERDICTS = {1: "#6b1f3f", 0: "#efe9da", -1: "#7fa6bd"}
 OUTLINE = "#3b3f46"
+MARKERS = ("circle", "square", "triangle", "diamond", "pentagon", "cross_fill", "star")
 MISSING = "#ecebe6"
 # What cannot be told from noise.
 NOISE = "#b9b6b0"
@@ -152,7 +154,7 @@ def raster_verdicts(band):
     return raster_classes(band, [(code, colour, words[code]) for code, colour in VERDICTS.items()])
 
 
-def _symbol(layer, colour, outline=OUTLINE, width=0.1):
+def _symbol(layer, colour, outline=OUTLINE, width=0.1, marker="circle"):
     kind = QgsWkbTypes.geometryType(layer.wkbType())
     if kind == QgsWkbTypes.GeometryType.PolygonGeometry:
         return QgsFillSymbol.createSimple(
@@ -161,7 +163,13 @@ def _symbol(layer, colour, outline=OUTLINE, width=0.1):
     if kind == QgsWkbTypes.GeometryType.LineGeometry:
         return QgsLineSymbol.createSimple({"color": colour, "width": str(max(width, 0.5))})
     return QgsMarkerSymbol.createSimple(
-        {"color": colour, "outline_color": outline, "outline_width": "0.1", "size": "2"}
+        {
+            "name": marker,
+            "color": colour,
+            "outline_color": outline,
+            "outline_width": "0.1",
+            "size": "2",
+        }
     )
 
 
@@ -176,7 +184,7 @@ def single(colour, outline=OUTLINE, width=0.3):
 
 
 def categories(field, classes, width=0.1):
-    """Look: classes of a field.
+    """Look: classes of a field; those of points differ in shape, too.
 
     Parameters
     ----------
@@ -187,9 +195,10 @@ def categories(field, classes, width=0.1):
 
     def look(layer):
         entries = []
-        for value, colour, words in classes:
+        for (value, colour, words), marker in zip(classes, cycle(MARKERS)):
             key = "" if value is None else value
-            entries.append(QgsRendererCategory(key, _symbol(layer, colour, width=width), words))
+            symbol = _symbol(layer, colour, width=width, marker=marker)
+            entries.append(QgsRendererCategory(key, symbol, words))
         layer.setRenderer(QgsCategorizedSymbolRenderer(field, entries))
 
     return look
