@@ -22,8 +22,8 @@ RAMP_WIDTH, RAMP_HEIGHT = 40.0, 5.0
 LARGEST_SQUARE, GAP = 11.0, 1.2
 INK_COLOUR, QUIET_COLOUR = "#23262b", "#5b6068"
 FONT = "Source Sans 3, Noto Sans, DejaVu Sans, Helvetica, Arial, sans-serif"
-# An average letter is about half as wide as the type is high.
-LETTER = 0.52
+# Width of an average letter over the height of the type, in the widest of these fonts.
+LETTER, BOLD_LETTER = 0.58, 0.66
 
 
 class _Drawing:
@@ -55,9 +55,9 @@ class _Drawing:
         )
 
 
-def _lines(text, width, size):
+def _lines(text, width, size, letter=LETTER):
     """A text in lines of about a width, long words cut."""
-    letters = max(int(width / (LETTER * size)), 8)
+    letters = max(int(width / (letter * size)), 8)
     return wrap(text, letters, break_long_words=True) or [""]
 
 
@@ -110,7 +110,7 @@ def draw_legend(inks, names, units, words, strengths=None):
     strengths = np.ones(count) if strengths is None else np.asarray(strengths, float)
     drawing = _Drawing()
     top = MARGIN
-    for line in _lines(words["title"], WIDTH - 2 * MARGIN, 4.4):
+    for line in _lines(words["title"], WIDTH - 2 * MARGIN, 4.4, BOLD_LETTER):
         top += 5.2
         drawing.words(MARGIN, top, line, 4.4, weight=600)
     top = _draw_ramps(drawing, top + 3.0, inks, names, units, words, strengths)

@@ -76,11 +76,33 @@ def test_everything_lies_on_the_page(count):
         assert float(rectangle.get("y", 0)) + float(rectangle.get("height")) <= height + 1e-6
     for text in drawing.iter(f"{SVG}text"):
         assert 0 < float(text.get("y")) < height
-        # letters are about half as wide as high
-        if text.get("text-anchor") == "start":
-            assert (
-                float(text.get("x")) + 0.52 * float(text.get("font-size")) * len(text.text) < width
-            )
+
+
+@pytest.mark.parametrize(
+    "name",
+    [
+        "An exceedingly long name of a layer that nobody would type by hand, and more",
+        "density_of_falls_and_stumbles_at_home_and_outdoors",
+    ],
+)
+def test_no_line_runs_off_the_page_in_the_widest_font(name):
+    """Measured by the outlines of DejaVu Sans, which ships with matplotlib."""
+    outlines = pytest.importorskip("matplotlib.textpath")
+    font = pytest.importorskip("matplotlib.font_manager").FontProperties
+    text = legend.draw_legend(
+        ink.default_inks(3),
+        [name] * 3,
+        ["records per square kilometre"] * 3,
+        {**WORDS, "title": f"{name} and {name}", "scale": name, "pairs_note": f"{name}, {name}"},
+    )
+    drawing = ElementTree.fromstring(text.encode())
+    width = float(drawing.get("viewBox").split()[2])
+    for line in drawing.iter(f"{SVG}text"):
+        weight = "bold" if line.get("font-weight") == "600" else "normal"
+        shape = font(family="DejaVu Sans", weight=weight, size=float(line.get("font-size")))
+        taken = outlines.TextPath((0, 0), line.text, prop=shape).get_extents().width
+        if line.get("text-anchor") == "start":
+            assert float(line.get("x")) + taken <= width, line.text
 
 
 def test_ramp_darkens_from_faint_to_full():
