@@ -48,6 +48,8 @@ def test_classes_of_points_differ_in_shape_as_well_as_in_colour(point_layer):
     look = looks.categories("kind", [(shade, shade, shade) for shade in shades])
     points = point_layer([0.0], [0.0], kind=["a"])
     look(points)
-    symbols = [category.symbol() for category in points.renderer().categories()]
+    # a symbol lives as long as its category
+    categories = points.renderer().categories()
+    symbols = [category.symbol() for category in categories]
     assert len({one.symbolLayer(0).shape() for one in symbols}) == len(shades)
     assert [one.color().name() for one in symbols] == shades
