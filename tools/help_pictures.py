@@ -11,11 +11,13 @@ import sys
 import tempfile
 from pathlib import Path
 
+import numpy as np
 from headless import ROOT, Host
 from help_parts import TEXTS
 
 PICTURES = ROOT / "plugin" / "help" / "pictures"
 WIDTH = 900
+WHITE = 255
 SHEETS = {
     "adaptivedensity": "map_density.png",
     "densityratio": "map_ratio.png",
@@ -41,8 +43,11 @@ def keep(name, png):
     if picture.width > WIDTH:
         picture = picture.resize((WIDTH, round(picture.height * WIDTH / picture.width)))
     # a palette that keeps the rare colours of a legend, spread so that ramps stay smooth
-    palette = picture.quantize(256, method=Image.Quantize.MAXCOVERAGE)
+    palette = picture.quantize(255, method=Image.Quantize.MAXCOVERAGE)
+    palette.putpalette([*palette.getpalette()[: 3 * WHITE], 255, 255, 255])
     few = picture.quantize(palette=palette, dither=Image.Dither.FLOYDSTEINBERG)
+    paper = Image.fromarray((np.asarray(picture) == 255).all(axis=2))
+    few.paste(WHITE, mask=paper)
     few.save(PICTURES / f"{name}.png", optimize=True)
 
 
