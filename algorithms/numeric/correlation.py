@@ -19,7 +19,7 @@ from .builders import EFFORTS, build
 from .contiguity import Contiguity
 from .errors import InputError
 from .progress import silent
-from .scenarios import zone_sums
+from .scenarios import amounts, zone_sums
 from .variance import zone_values
 
 LEAST_ZONES = 3
@@ -75,20 +75,8 @@ def relation(graph, x_counts, x_totals, y_counts, y_totals):
         Values missing or negative, no total at all, or a rate that is the same everywhere.
     """
     given = {"X_COUNT": x_counts, "X_TOTAL": x_totals, "Y_COUNT": y_counts, "Y_TOTAL": y_totals}
-    columns = {name: np.asarray(values, float) for name, values in given.items()}
+    columns = {name: amounts(name, values, graph.units) for name, values in given.items()}
     for name, values in columns.items():
-        if values.shape != (graph.units,):
-            raise InputError("{}: {} values are needed; found {}.", name, graph.units, values.shape)
-        bad = ~(np.isfinite(values) & (values >= 0))
-        if bad.any():
-            raise InputError(
-                "{}: {} units have a missing or negative value (the first is number {}: {:g}); "
-                "correct or leave them out.",
-                name,
-                bad.sum(),
-                np.argmax(bad) + 1,
-                values[np.argmax(bad)],
-            )
         if name.endswith("TOTAL") and not values.sum() > 0:
             raise InputError("{}: it is 0 in every unit, so no zone has a rate.", name)
     made = Relation(graph, *columns.values())

@@ -58,6 +58,37 @@ class Problem:
         return names if self.budget is None else (*names, "events_reached")
 
 
+def amounts(name, values, units):
+    """One amount for each unit as floats.
+
+    Parameters
+    ----------
+    name : str
+        What they are called in an error.
+    values : (units,) array
+    units : int
+
+    Raises
+    ------
+    InputError
+        Too many, too few, missing or negative values.
+    """
+    values = np.asarray(values, float)
+    if values.shape != (units,):
+        raise InputError("{}: {} values are needed; found {}.", name, units, values.shape)
+    bad = ~(np.isfinite(values) & (values >= 0))
+    if bad.any():
+        raise InputError(
+            "{}: {} units have a missing or negative value (the first is number {}: {:g}); "
+            "correct or leave them out.",
+            name,
+            bad.sum(),
+            np.argmax(bad) + 1,
+            values[np.argmax(bad)],
+        )
+    return values
+
+
 def problem(graph, counts, totals, kind=None, threshold=None, budget=None, generator=None):
     """Check the counts and totals and put a problem together.
 
@@ -83,20 +114,8 @@ def problem(graph, counts, totals, kind=None, threshold=None, budget=None, gener
     InputError
         Values missing or negative, or no total at all.
     """
-    counts, totals = np.asarray(counts, float), np.asarray(totals, float)
-    for name, values in (("COUNT", counts), ("TOTAL", totals)):
-        if values.shape != (graph.units,):
-            raise InputError("{}: {} values are needed; found {}.", name, graph.units, values.shape)
-        bad = ~(np.isfinite(values) & (values >= 0))
-        if bad.any():
-            raise InputError(
-                "{}: {} units have a missing or negative value (the first is number {}: {:g}); "
-                "correct or leave them out.",
-                name,
-                bad.sum(),
-                np.argmax(bad) + 1,
-                values[np.argmax(bad)],
-            )
+    counts = amounts("COUNT", counts, graph.units)
+    totals = amounts("TOTAL", totals, graph.units)
     if not totals.sum() > 0:
         raise InputError(
             "TOTAL: it is 0 in every unit, so no zone has a value; choose the field that "
