@@ -37,6 +37,9 @@ def write_page(job, groups, steps, fields, records):
     if not job.wanted("REPORT"):
         return
     metres, level = job.working.metres, job.real("LEVEL") / 100.0
+    # names follow each other by letter only, and arrows between them would tell of a move
+    ordered = fields["ORDER"] or all(group.name[:1].isdigit() for group in groups)
+    arrows = steps if ordered else []
     report = Report(
         tr("Centre and spread"),
         tr("Where are the records centred, how far do they spread, and did the centre move?"),
@@ -45,19 +48,19 @@ def write_page(job, groups, steps, fields, records):
     )
     report.plot(
         tr("Map"),
-        lambda figure: _draw(figure, groups, steps, records, metres),
+        lambda figure: _draw(figure, groups, arrows, records, metres),
         tr(
             "Records in grey, mean centres as dots, geometric medians as crosses, the ellipse of "
-            "each group's spread in blue and of the confidence in its centre in orange, the path "
-            "in order. Kilometres, north is up."
+            "each group's spread in blue and of the confidence in its centre in orange; arrows "
+            "lead from group to group where these have an order. Kilometres, north is up."
         ),
         size=(8.0, 6.0),
     )
     if len(groups) > 1:
         report.plot(
             tr("The centres from near"),
-            lambda figure: _draw(figure, groups, steps, None, metres),
-            tr("The same without records: centres, path and confidence ellipses only."),
+            lambda figure: _draw(figure, groups, arrows, None, metres),
+            tr("The same without records: centres, arrows and confidence ellipses only."),
             size=(8.0, 6.0),
         )
     _tables(report, groups, steps, fields, metres, level)

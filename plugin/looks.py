@@ -44,7 +44,7 @@ MISSING = "#ecebe6"
 # What cannot be told from noise.
 NOISE = "#b9b6b0"
 
-DATA_ENDINGS = (".tif", ".tiff", ".img", ".gpkg", ".shp", ".geojson", ".fgb", ".sqlite")
+DATA_ENDINGS = (".tif", ".tiff", ".img", ".gpkg", ".shp", ".geojson", ".fgb", ".csv", ".sqlite")
 
 _kept = {}
 

@@ -25,7 +25,7 @@ def said(words):
 
 
 def number(value, digits=3):
-    """Write a number with so many significant digits and a thin space between thousands.
+    """Write a number with so many significant digits and a narrow no-break space between thousands.
 
     Parameters
     ----------
@@ -47,7 +47,7 @@ def number(value, digits=3):
         return "0"
     magnitude = abs(value)
     if magnitude >= 1000 or value == int(value):
-        return f"{value:,.0f}".replace(",", "\u2009").replace("-", "−")
+        return f"{value:,.0f}".replace(",", "\u202f").replace("-", "−")
     if magnitude < 10**-4:
         return f"{value:.{digits - 1}e}".replace("-", "−")
     written = f"{value:#.{digits}g}"
@@ -62,7 +62,7 @@ def percent(share, digits=1):
     """Write a share as a percentage; a dash for what is missing."""
     if share is None or share != share:
         return "–"
-    return f"{100 * share:.{digits}f}\u2009%".replace("-", "−")
+    return f"{100 * share:.{digits}f}\u202f%".replace("-", "−")
 
 
 def listed(items, limit=8):

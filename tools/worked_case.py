@@ -37,8 +37,7 @@ def write_figures(folder, done):
         **_release(done),
     }
     check_story(done, words)
-    # a number keeps together at the end of a line
-    text = json.dumps(words, ensure_ascii=False, indent=1).replace("\u2009", "\u202f") + "\n"
+    text = json.dumps(words, ensure_ascii=False, indent=1) + "\n"
     (folder / "figures.json").write_text(text, encoding="utf-8")
 
 

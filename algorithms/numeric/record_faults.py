@@ -383,7 +383,7 @@ def check_distortion(smallest, largest, count):
     worst = max(abs(smallest - 1.0), abs(largest - 1.0))
     if worst <= 0.01:
         words = Words(
-            "In the CRS in which they are stored areas are true within {:.2f}\u2009%.", 100 * worst
+            "In the CRS in which they are stored areas are true within {:.2f}\u202f%.", 100 * worst
         )
         return Check(Words("distortion"), FINE, none, words)
     return Check(

@@ -12,12 +12,12 @@ def of_all(found):
 
 def whole(value):
     """A number written to the unit, thousands set apart."""
-    return f"{float(value):,.0f}".replace(",", "\u2009")
+    return f"{float(value):,.0f}".replace(",", "\u202f")
 
 
 def share_words(share):
     """A share as a percentage, small ones with a decimal."""
-    return f"{100 * share:.{0 if share >= 0.1 else 1}f}\u2009%"
+    return f"{100 * share:.{0 if share >= 0.1 else 1}f}\u202f%"
 
 
 def spots_words(count):

@@ -71,7 +71,7 @@ def test_stacked_null_and_negative_records_are_counted_in_warnings(sweep, point_
     weight[200], weight[201], weight[202] = None, -1.0, 0.0
     _, watcher = sweep(RECORDS=point_layer(x, y, n=weight), WEIGHT="n")
     words = " ".join(watcher.warnings)
-    assert "34 % of the records share their spot" in words.replace("\u2009", " ")
+    assert "34 % of the records share their spot" in words.replace("\u202f", " ")
     assert "1 features with a null weight" in words and "1 records of weight 0" in words
     assert "1 features with a negative weight" in words
 

@@ -6,6 +6,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 from qgis.core import QgsProcessingException
+from steadfield.algorithms import centrespread_page
 
 EAST, NORTH = 3_840_000.0, 3_560_000.0
 
@@ -167,8 +168,27 @@ def test_the_page_answers_in_words_and_names_no_folder(spread, square, save_laye
     results, _ = spread(save_layer(square), GROUP="quarter", ORDER="day")
     page = Path(results["REPORT"]).read_text(encoding="utf-8")
     # 1000 m to the east and 300 m to the north is nearest to east.
-    assert "From b to a the mean centre lies 1\u2009044 m further to the east." in page
+    assert "From b to a the mean centre lies 1\u202f044 m further to the east." in page
     assert str(tmp_path) not in page and "not for release" in page
+
+
+@pytest.mark.parametrize(
+    ("group", "order", "arrows"),
+    [("quarter", None, 0), ("quarter", "day", 1), ("day", None, 1), ("calls", None, 1)],
+)
+def test_arrows_join_only_groups_that_have_an_order(
+    spread, square, monkeypatch, group, order, arrows
+):
+    seen = []
+    draw = centrespread_page._draw
+
+    def count_arrows(figure, groups, steps, *rest):
+        seen.append(len(steps))
+        draw(figure, groups, steps, *rest)
+
+    monkeypatch.setattr(centrespread_page, "_draw", count_arrows)
+    spread(square, GROUP=group, ORDER=order)
+    assert seen == [arrows, arrows]
 
 
 def test_outputs_that_are_not_asked_for_are_not_made(spread, square):

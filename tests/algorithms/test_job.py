@@ -207,7 +207,8 @@ def test_memory_outputs_are_loaded_styled(count):
     assert results["PLACES"].featureCount() == 3
 
 
-def test_a_style_file_is_not_shared_by_two_outputs_of_one_stem(count, tmp_path):
-    count(PLACES=str(tmp_path / "counts.gpkg"))
+@pytest.mark.parametrize("ending", ["gpkg", "csv"])
+def test_a_style_file_is_not_shared_by_two_outputs_of_one_stem(count, tmp_path, ending):
+    count(PLACES=str(tmp_path / f"counts.{ending}"))
     style = (tmp_path / "counts.qml").read_text(encoding="utf-8")
     assert "singlebandpseudocolor" in style

@@ -41,7 +41,7 @@ def test_qt_6_has_every_name_that_the_plugin_takes_from_qt(with_qt6):
     assert with_qt6["qt"].startswith("6.")
     assert with_qt6["seen"] > 40
     assert with_qt6["missing"] == []
-    assert with_qt6["words"] == "12\u2009345 records"
+    assert with_qt6["words"] == "12\u202f345 records"
 
 
 def test_pictures_come_out_alike_with_qt_6_and_the_qt_of_the_host(with_qt6):

@@ -121,7 +121,7 @@ def test_records_outside_the_boundary_are_found_with_their_distance(falls, distr
     check = record_faults.check_boundary(falls, district.boundary)
     assert rows_of(check) == [4, 90]
     away = district.boundary.distance(shapely.Point(falls.x[4], falls.y[4]))
-    assert f"{away:,.0f} m".replace(",", "\u2009") in check.words
+    assert f"{away:,.0f} m".replace(",", "\u202f") in check.words
 
 
 def test_exchanged_coordinates_are_far_away(falls):
