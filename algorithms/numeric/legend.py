@@ -58,7 +58,7 @@ class _Drawing:
 def _lines(text, width, size, letter=LETTER):
     """A text in lines of about a width, long words cut."""
     letters = max(int(width / (letter * size)), 8)
-    return wrap(text, letters, break_long_words=True) or [""]
+    return wrap(text, letters, break_long_words=True, break_on_hyphens=False) or [""]
 
 
 def _colour(strengths, inks):
