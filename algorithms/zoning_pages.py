@@ -164,7 +164,7 @@ def draw_allocation(figure, found):
     axes.set_xlabel(tr("share of held-out events reached (%)"))
     axes.set_ylabel(tr("zonings"))
     axes.set_ylim(top=1.3 * axes.get_ylim()[1])
-    axes.legend(frameon=False, fontsize=9, loc="upper left", ncols=len(lines))
+    axes.legend(frameon=False, fontsize=9, loc="upper left", ncol=len(lines))
 
 
 def allocation_words(found):

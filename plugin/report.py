@@ -49,8 +49,32 @@ td.figure, th.figure {{ text-align: right; font-variant-numeric: tabular-nums; }
 """
 
 
+PLOT_STYLE = {
+    "font.size": 10,
+    "axes.spines.top": False,
+    "axes.spines.right": False,
+    "axes.grid": True,
+    "grid.color": "#e6e1d5",
+    "axes.axisbelow": True,
+    "axes.edgecolor": "#5b6068",
+}
+
+
 def _looks_like_figure(cell):
     return bool(cell) and cell[0] in "−–+0123456789" and len(cell) < 20
+
+
+def _new_figure(size):
+    """The plotting library and an empty figure of a size in inches; ImportError where it is old."""
+    import matplotlib
+    from matplotlib.backends.backend_agg import FigureCanvasAgg
+    from matplotlib.figure import Figure
+
+    if not hasattr(matplotlib, "__version_info__"):
+        raise ImportError("matplotlib is older than 3.5, where layouts and labelled ticks begin")
+    figure = Figure(figsize=size, layout="constrained")
+    FigureCanvasAgg(figure)
+    return matplotlib, figure
 
 
 class Report:
@@ -113,7 +137,7 @@ class Report:
             self._parts.append(f'<p class="note">{html.escape(said(note))}</p>')
 
     def plot(self, title, draw, caption, size=(8.0, 4.2)):
-        """Add a plot; without matplotlib only its caption is shown.
+        """Add a plot; without matplotlib 3.5 or newer only its caption is shown.
 
         Parameters
         ----------
@@ -125,25 +149,16 @@ class Report:
             Inches.
         """
         try:
-            from matplotlib import rc_context
-            from matplotlib.backends.backend_agg import FigureCanvasAgg
-            from matplotlib.figure import Figure
+            matplotlib, figure = _new_figure(size)
         except ImportError:
-            missing = tr("The plot is left out because the package matplotlib is not installed.")
+            missing = tr("The plot is left out: it needs the package matplotlib, 3.5 or newer.")
             self.text(title, caption, missing)
             return
-        style = {
-            "font.size": 10,
-            "axes.spines.top": False,
-            "axes.spines.right": False,
-            "axes.grid": True,
-            "grid.color": "#e6e1d5",
-            "axes.axisbelow": True,
-            "axes.edgecolor": "#5b6068",
-        }
-        with rc_context(style):
-            figure = Figure(figsize=size, layout="constrained")
-            FigureCanvasAgg(figure)
+        style = dict(PLOT_STYLE)
+        # names of groups and layers may hold dollar signs, which are not meant as formulas
+        if "text.parse_math" in matplotlib.rcParams:
+            style["text.parse_math"] = False
+        with matplotlib.rc_context(style):
             draw(figure)
             drawn = io.BytesIO()
             figure.savefig(drawn, format="png", dpi=144, metadata={"Software": None})
