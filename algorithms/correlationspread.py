@@ -1,6 +1,7 @@
 """Correlation under re-zoning: how far r and the slope depend on the zones they are taken over."""
 
 from dataclasses import dataclass
+from types import SimpleNamespace
 
 import numpy as np
 
@@ -144,8 +145,6 @@ def examine(job):
 
 def both_as_problem(both):
     """The part of a relation that zones are made by: the graph and the totals of y."""
-    from types import SimpleNamespace
-
     return SimpleNamespace(graph=both.graph, totals=both.y_totals)
 
 

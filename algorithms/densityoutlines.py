@@ -128,9 +128,7 @@ def read_density(job, shares):
     density : (rows, columns) float array
         NaN for no data.
     """
-    layer = job.algorithm.parameterAsRasterLayer(job.parameters, "DENSITY", job.context)
-    if layer is None or not layer.isValid():
-        raise InputError(tr("{}: the raster cannot be read.").format(job.label("DENSITY")))
+    layer = job.raster("DENSITY")
     with job.naming("DENSITY"):
         working, grid = alignment.common_grid(layer, job.context.transformContext())
     job.take_working_crs(working)

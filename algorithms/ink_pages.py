@@ -59,7 +59,7 @@ class Preview:
         self.levels = np.zeros((4, rows, columns), np.uint8)
 
     def take(self, window, levels):
-        """Keep every so-manieth pixel of a window."""
+        """Keep the pixels of a window that fall on the preview's coarser lattice."""
         first_row, first_column = -window.row % self.step, -window.column % self.step
         kept = levels[:, first_row :: self.step, first_column :: self.step]
         row = (window.row + first_row) // self.step

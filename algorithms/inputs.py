@@ -5,7 +5,7 @@ from dataclasses import replace
 from qgis.core import QgsVectorLayer
 
 from ..plugin import alignment, layers, reference_system
-from ..plugin.host import field_names
+from ..plugin.host import field_names, is_null
 from ..plugin.text import number, tr
 from .numeric.cell_size import two_digits
 from .numeric.errors import InputError
@@ -36,30 +36,42 @@ class Inputs(Settings):
 
     def choose_working_crs(self, name):
         """Settle the working CRS on the layer of a parameter, unless it is settled or given."""
-        if self._working is not None:
-            return self._working
-        _, source = self._source(name)
-        transform_context = self.context.transformContext()
-        given = self.algorithm.parameterDefinition("WORKING_CRS") and self.given("WORKING_CRS")
-        if given:
-            crs = self.algorithm.parameterAsCrs(self.parameters, "WORKING_CRS", self.context)
-            with self.naming("WORKING_CRS"):
-                self._working = reference_system.chosen_crs(crs)
-        else:
-            with self.naming(name):
-                self._working = reference_system.working_crs(
-                    source.sourceCrs(), layers.finite_extent(source), transform_context
-                )
-        self.inform(
-            tr("Working CRS: {} ({})").format(
-                self._working.crs.userFriendlyIdentifier(), self._working.note
-            )
-        )
+        if self._working is None:
+            self.settle_working_crs(self._source(name)[1], name)
         return self._working
 
+    def settle_working_crs(self, source, name, *which, extent=None):
+        """Settle the working CRS: as given, or as suits a source.
+
+        Parameters
+        ----------
+        source : QgsProcessingFeatureSource
+        name : str
+            Parameter of the source, and which of its layers, for errors.
+        which : tuple of str
+        extent : QgsRectangle or None
+            Where the data lie, in the CRS of the source; None: over all that is finite.
+        """
+        if self.algorithm.parameterDefinition("WORKING_CRS") and self.given("WORKING_CRS"):
+            crs = self.algorithm.parameterAsCrs(self.parameters, "WORKING_CRS", self.context)
+            with self.naming("WORKING_CRS"):
+                self.take_working_crs(reference_system.chosen_crs(crs))
+            return
+        with self.naming(name, *which):
+            self.take_working_crs(
+                reference_system.working_crs(
+                    source.sourceCrs(),
+                    layers.finite_extent(source) if extent is None else extent,
+                    self.context.transformContext(),
+                )
+            )
+
     def take_working_crs(self, working):
-        """Settle the working CRS from outside, for algorithms that start from rasters."""
+        """Settle the working CRS on one that is found already, and say so."""
         self._working = working
+        self.inform(
+            tr("Working CRS: {} ({})").format(working.crs.userFriendlyIdentifier(), working.note)
+        )
 
     def check_cells(self, name, size, cells, most):
         """Refuse cells of a size of which there would be too many, and name a size that serves.
@@ -174,13 +186,41 @@ class Inputs(Settings):
         with self.naming(name):
             return layers.union_of(polygons)
 
+    def raster(self, name):
+        """The raster layer of a parameter; InputError where it cannot be read."""
+        layer = self.algorithm.parameterAsRasterLayer(self.parameters, name, self.context)
+        if layer is None or not layer.isValid():
+            raise InputError(
+                tr("{}: the raster cannot be read; choose another.").format(self.label(name))
+            )
+        return layer
+
+    def layer_list(self, name):
+        """The layers of a list, in the order chosen.
+
+        Raises
+        ------
+        InputError
+            One of them cannot be read. In a step of a model the host would leave it out without a
+            word, and an audit of the rest would say nothing of it.
+        """
+        found = self.algorithm.parameterAsLayerList(self.parameters, name, self.context)
+        asked = _count_of_values(self.parameters.get(name))
+        if len(found) < asked:
+            raise InputError(
+                tr(
+                    "{}: {} of the {} layers cannot be read; check that they are still there."
+                ).format(self.label(name), asked - len(found), asked)
+            )
+        return found
+
     def layer_names(self, name):
         """Names of the layers of a list, for legends and reports; no two are alike.
 
         The names of NAMES are taken where they are given; otherwise those of the layers, or of
         their tables when a file of several was named by its path.
         """
-        found = self.algorithm.parameterAsLayerList(self.parameters, name, self.context)
+        found = self.layer_list(name)
         given = self.words("NAMES")
         names = [piece.strip() for piece in given.split(";")] if given else []
         if given and (len(names) != len(found) or not all(names)):
@@ -211,7 +251,7 @@ class Inputs(Settings):
         list of plugin.alignment.Aligned
             In the order chosen.
         """
-        chosen = self.algorithm.parameterAsLayerList(self.parameters, name, self.context)
+        chosen = self.layer_list(name)
         if len(chosen) < least or (most is not None and len(chosen) > most):
             wanted = f"{least} – {most}" if most is not None else tr("{} or more").format(least)
             raise InputError(
@@ -219,9 +259,7 @@ class Inputs(Settings):
                     self.label(name), wanted, len(chosen)
                 )
             )
-        followed = chosen[0]
-        if self.given("GRID"):
-            followed = self.algorithm.parameterAsRasterLayer(self.parameters, "GRID", self.context)
+        followed = self.raster("GRID") if self.given("GRID") else chosen[0]
         transform_context = self.context.transformContext()
         with self.naming("GRID" if self.given("GRID") else name):
             self._working, grid = alignment.common_grid(
@@ -248,3 +286,10 @@ class Inputs(Settings):
         for layer in aligned:
             self.inform(tr("{}: {}").format(layer.name, layer.how))
         return grid, aligned
+
+
+def _count_of_values(value):
+    """How many values a list holds, lists in it counted through and nulls left out."""
+    if isinstance(value, (list, tuple)):
+        return sum(_count_of_values(one) for one in value)
+    return 0 if is_null(value) else 1

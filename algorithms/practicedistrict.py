@@ -1,6 +1,7 @@
 """The practice district as a GeoPackage."""
 
 import os
+from dataclasses import replace
 
 import numpy as np
 import shapely
@@ -84,7 +85,8 @@ class PracticeDistrict(SteadfieldAlgorithm):
         )
 
     def work(self, job):
-        job.take_working_crs(chosen_crs(QgsCoordinateReferenceSystem(CRS)))
+        note = tr("that of the practice district")
+        job.take_working_crs(replace(chosen_crs(QgsCoordinateReferenceSystem(CRS)), note=note))
         seed = job.whole("SEED")
         size = job.choice("SIZE", SIZES)
         district = make_district(seed, size, part(job.progress, 0.0, 0.6))

@@ -10,7 +10,7 @@ from qgis.core import (
 
 from ..plugin import alignment, layers, looks, rasters
 from ..plugin.host import ANY_VECTOR
-from ..plugin.reference_system import reproject, working_crs
+from ..plugin.reference_system import reproject
 from ..plugin.text import listed, number, said, tr
 from . import ink_pages
 from .base import SteadfieldAlgorithm
@@ -137,7 +137,7 @@ def stretches(start, stop, count):
 
 def chosen_sources(job):
     """The layers as feature sources, 1 to 6 of them."""
-    found = job.algorithm.parameterAsLayerList(job.parameters, "LAYERS", job.context)
+    found = job.layer_list("LAYERS")
     if not 1 <= len(found) <= ink.MOST_LAYERS:
         raise InputError(
             tr("{}: 1 to {} layers are wanted; found {}.").format(
@@ -156,22 +156,11 @@ def chosen_sources(job):
 
 def settle_crs(job, sources):
     """Work in the CRS of the grid to follow, or in the one that suits the first layer."""
-    transform_context = job.context.transformContext()
-    if job.given("GRID"):
-        followed = job.algorithm.parameterAsRasterLayer(job.parameters, "GRID", job.context)
-        working, _ = alignment.common_grid(followed, transform_context)
-    else:
-        first = sources[0]
-        try:
-            working = working_crs(first.sourceCrs(), layers.finite_extent(first), transform_context)
-        except InputError as error:
-            raise InputError(
-                f"{job.label('LAYERS')}: {first.sourceName()}: {said(error)}"
-            ) from error
+    if not job.given("GRID"):
+        job.settle_working_crs(sources[0], "LAYERS", sources[0].sourceName())
+        return
+    working, _ = alignment.common_grid(job.raster("GRID"), job.context.transformContext())
     job.take_working_crs(working)
-    job.inform(
-        tr("Working CRS: {} ({})").format(working.crs.userFriendlyIdentifier(), working.note)
-    )
 
 
 def read_features(job, source, name, progress):
@@ -204,8 +193,7 @@ def picture_grid(job, features):
     """The grid of the picture: the raster's to follow, or one that covers all features."""
     cell = job.metres("CELL_SIZE")
     if job.given("GRID"):
-        followed = job.algorithm.parameterAsRasterLayer(job.parameters, "GRID", job.context)
-        _, grid = alignment.common_grid(followed, job.context.transformContext(), cell)
+        _, grid = alignment.common_grid(job.raster("GRID"), job.context.transformContext(), cell)
     else:
         bounds = shapely.total_bounds(np.concatenate(features))
         longer = max(bounds[2] - bounds[0], bounds[3] - bounds[1]) or 100.0 / job.working.metres

@@ -185,25 +185,14 @@ def _raw_records(job, source, geometry):
 
 def _settle_crs(job, source, places):
     """Choose the working CRS from the middle of the places, so that one mistyped place cannot."""
-    if job.given("WORKING_CRS"):
-        job.choose_working_crs("RECORDS")
-        return
-    if len(places) == 0:
+    if len(places) == 0 and not job.given("WORKING_CRS"):
         raise InputError(
             tr("{}: no record has a usable place; check the geometry of the layer.").format(
                 job.label("RECORDS")
             )
         )
-    try:
-        working = reference_system.working_crs(
-            source.sourceCrs(), _middle_extent(places), job.context.transformContext()
-        )
-    except InputError as error:
-        raise InputError(f"{job.label('RECORDS')}: {said(error)}") from error
-    job.take_working_crs(working)
-    job.inform(
-        tr("Working CRS: {} ({})").format(working.crs.userFriendlyIdentifier(), working.note)
-    )
+    extent = _middle_extent(places) if len(places) else None
+    job.settle_working_crs(source, "RECORDS", extent=extent)
 
 
 def _middle_extent(places):

@@ -7,7 +7,6 @@ import numpy as np
 from qgis.core import QgsProcessingFeatureSource
 
 from ..plugin import layers as vector_layers
-from ..plugin import reference_system
 from ..plugin.host import BIG_INTEGER, INTEGER, REAL, TEXT
 from ..plugin.text import number, said, tr
 from .numeric import intervals
@@ -53,7 +52,7 @@ def read_releases(job):
     list of Published
     """
     name = "RELEASES"
-    chosen = job.algorithm.parameterAsLayerList(job.parameters, name, job.context)
+    chosen = job.layer_list(name)
     if not 1 <= len(chosen) <= MOST_LAYERS:
         raise InputError(
             tr("{}: 1 to {} layers are wanted; found {}.").format(
@@ -61,7 +60,8 @@ def read_releases(job):
             )
         )
     names = job.layer_names(name)
-    _settle_working_crs(job, chosen[0])
+    first = QgsProcessingFeatureSource(chosen[0], job.context)
+    job.settle_working_crs(first, name, chosen[0].name())
     pieces = {
         key: _pieces(job, key, len(chosen))
         for key in ("COUNT_FIELDS", "KINDS", "TOTALS", "RELEASE_ORDER", "LABEL_FIELDS")
@@ -71,24 +71,6 @@ def read_releases(job):
         _read(job, layer, names[place], orders[place], {k: v[place] for k, v in pieces.items()})
         for place, layer in enumerate(chosen)
     ]
-
-
-def _settle_working_crs(job, layer):
-    transform_context = job.context.transformContext()
-    try:
-        if job.given("WORKING_CRS"):
-            crs = job.algorithm.parameterAsCrs(job.parameters, "WORKING_CRS", job.context)
-            working = reference_system.chosen_crs(crs)
-        else:
-            source = QgsProcessingFeatureSource(layer, job.context)
-            extent = vector_layers.finite_extent(source)
-            working = reference_system.working_crs(layer.crs(), extent, transform_context)
-    except InputError as error:
-        raise InputError(f"{job.label('RELEASES')}: {layer.name()}: {said(error)}") from error
-    job.take_working_crs(working)
-    job.inform(
-        tr("Working CRS: {} ({})").format(working.crs.userFriendlyIdentifier(), working.note)
-    )
 
 
 def _pieces(job, key, count):

@@ -270,7 +270,7 @@ class SafeHexagons(SteadfieldAlgorithm):
             study.records, study.q, study.r, len(study.regions), study.plan,
             part(job.progress, 0.15, 0.9), study.apart(),
         )  # fmt: skip
-        shown = zones_to_show(study, made)
+        shown = zones_to_show(study, made, job.working.metres)
         polygons = hexagons.hexagon_polygons(study.q, study.r, study.size, study.orientation)
         shapes = zone_polygons(polygons, made.zones, len(made.unsafe))
         if study.plan.method == NOISE and study.plan.seed is not None:
@@ -282,8 +282,8 @@ class SafeHexagons(SteadfieldAlgorithm):
         write_page(self, job, study, made, shown, shapes, loss)
 
 
-def zones_to_show(study, made):
-    """Zones that go into the release, in the order of the tiling.
+def zones_to_show(study, made, metres):
+    """Zones that go into the release, in the order of the tiling; metres: in a unit of the CRS.
 
     Without a given area it is the rectangle of hexagons around the published ones: the outline of
     the records themselves would show where the outermost lie.
@@ -299,7 +299,7 @@ def zones_to_show(study, made):
             tr(
                 "No hexagon of {} m can be published on its own; choose larger hexagons, or give "
                 "the boundary."
-            ).format(number(study.size))
+            ).format(number(study.size * metres))
         )
     kept = study.around(public[made.zones])
     whole = np.bincount(made.zones, kept) == np.bincount(made.zones)

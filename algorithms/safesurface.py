@@ -16,7 +16,7 @@ from .numeric.disclosure import Rules, contributor_codes
 from .numeric.errors import InputError
 from .numeric.grid import covering
 from .numeric.progress import part
-from .numeric.safe_surface import hidden_groups, kernel_widths, safe_surface
+from .numeric.safe_surface import FAINT, hidden_groups, kernel_widths, safe_surface
 
 MOST_PIXELS = 4_000_000
 # bandwidths beyond a group that a surface without a boundary reaches
@@ -289,7 +289,7 @@ def write_page(algorithm, job, study, found, density):
             tr(
                 "Below {} of the peak the density is set to 0: the error of the surface lies "
                 "there. At the boundary kernels are made up for what they lose (Jones 1993)."
-            ).format("0.0002"),
+            ).format(f"{FAINT:g}"),
             tr(
                 "Attack: peaks and holes of the raster and of its Richardson-Lucy deconvolution at "
                 "several bandwidths, compared with true addresses that lie by themselves; chance "

@@ -4,7 +4,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from ..plugin.text import number, tr
+from ..plugin.text import number, said, tr
 from .numeric import zones
 from .numeric.errors import InputError
 from .numeric.growth import check_zone_count
@@ -143,7 +143,7 @@ def read_official(job, units):
             job.warn(
                 tr(
                     "{}: {} units lie across a line of the official zoning; each went to the zone "
-                    "with most of its area (see the field official_share)."
+                    "with most of its area (see the field straddles)."
                 ).format(name, number(straddling.sum()))
             )
     outside = int((labels < 0).sum())
@@ -169,7 +169,7 @@ def reference_recipe(job, setting, builder, many, settings):
         check_zone_count(setting.graph, many)
         return zones.recipes(setting, builder, [many], *settings)[0]
     except InputError as error:
-        job.warn(tr("The official zoning has nothing to be compared with. {}").format(error))
+        job.warn(tr("The official zoning has nothing to be compared with. {}").format(said(error)))
         return None
 
 

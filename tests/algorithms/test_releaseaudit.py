@@ -1,7 +1,9 @@
+"""Audits of published layers, through the host: what is found, said and refused."""
+
 import numpy as np
 import pytest
 import shapely
-from qgis.core import QgsProcessingException
+from qgis.core import QgsProcessingContext, QgsProcessingException, QgsProject
 
 SIDE = 1000
 ORIGIN = 4_000_000, 3_000_000
@@ -226,3 +228,23 @@ def test_cancelling_leaves_nothing_behind(run, cells, wards, tmp_path):
     with pytest.raises(QgsProcessingException):
         run("releaseaudit", {"RELEASES": [cells, wards], "RISKS": str(target)}, cancel_at=0.2)
     assert not target.exists()
+
+
+def test_a_layer_that_cannot_be_read_is_refused_and_never_left_out(
+    provider, cells, watch, tmp_path
+):
+    """As in a step of a model, where the host does not check the values before it runs."""
+    algorithm = provider.algorithm("releaseaudit").create()
+    context = QgsProcessingContext()
+    context.setProject(QgsProject.instance())
+    watcher = watch()
+    gone = str(tmp_path / "gone.gpkg")
+    given = {"RELEASES": [cells, gone], "LEAST_COUNT": 10, "RISKS": "TEMPORARY_OUTPUT"}
+    _, well = algorithm.run(given, context, watcher)
+    assert not well
+    assert any("1 of the 2 layers cannot be read" in words for words in watcher.errors)
+
+
+def test_a_geographic_working_crs_is_refused_by_the_name_of_its_parameter(audit, cells):
+    with pytest.raises(QgsProcessingException, match=r"WORKING_CRS\): A working CRS must be"):
+        audit([cells], WORKING_CRS="EPSG:4326")

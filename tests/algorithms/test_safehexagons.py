@@ -416,6 +416,21 @@ def test_settings_that_cannot_be_kept_are_refused_in_words(made, words, paramete
         made(**parameters)
 
 
+def test_the_size_of_hexagons_in_a_refusal_is_in_metres_where_the_crs_is_in_feet(
+    run, point_layer, tmp_path
+):
+    rng = np.random.default_rng(5)
+    x, y = 990_000 + rng.uniform(0, 9000, (2, 40))
+    given = {
+        "RECORDS": point_layer(x, y - 790_000, crs="EPSG:2263"),
+        "HEXAGON_SIZE": 250,
+        "LEAST_COUNT": 30,
+        "RELEASE": str(tmp_path / "release.gpkg"),
+    }
+    with pytest.raises(QgsProcessingException, match="No hexagon of 250 m can be published"):
+        run("safehexagons", given)
+
+
 def test_regions_that_overlap_are_refused_and_gaps_are_said(made, polygon_layer):
     west, east = two_regions()
     overlapping = polygon_layer([west, east.union(west.buffer(-300))])

@@ -1,3 +1,5 @@
+"""Zoning variance from base units, through the host."""
+
 import re
 
 import numpy as np
@@ -147,10 +149,14 @@ def test_official_polygons_report_the_units_that_straddle(run, given, polygon_la
     ]
     official = polygon_layer(zones, name=["west", "east"])
     results, watcher = run("unitvariance", given(parameters={"OFFICIAL_ZONES": official}))
-    rows = rows_of(open_output(results, "UNITS_OUT"))
+    layer = open_output(results, "UNITS_OUT")
+    rows = rows_of(layer)
     assert sum(row["straddles"] for row in rows) == 8
     assert all(row["straddles"] == (int(row["code"][1:]) % 8 == 3) for row in rows)
-    assert any("8 units lie across a line" in words for words in watcher.warnings)
+    told = [words for words in watcher.warnings if "8 units lie across a line" in words]
+    assert len(told) == 1
+    named = re.search(r"see the field (\w+)", told[0])[1]
+    assert named in layer.fields().names()
 
 
 def test_kept_groups_are_never_crossed(run, given, open_output):
