@@ -45,8 +45,9 @@ mount_release() {
 }
 
 unmount_release() {
-  ! mountpoint -q "$1/dev" || umount "$1/dev"
-  ! mountpoint -q "$1/proc" || umount "$1/proc"
+  # a program that is still ending keeps a mount busy; a lazy one goes when the program does
+  ! mountpoint -q "$1/dev" || umount "$1/dev" 2>/dev/null || umount --lazy "$1/dev"
+  ! mountpoint -q "$1/proc" || umount "$1/proc" 2>/dev/null || umount --lazy "$1/proc"
 }
 
 # copy_checkout FOLDER: the files of the checkout, new ones among them, in place of an older copy.
