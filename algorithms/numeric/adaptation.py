@@ -119,11 +119,6 @@ def adapt_bandwidths(
     return Adaptation(np.maximum(bandwidths, least), pilot, mean, narrowest, widest, raised)
 
 
-def adaptive_bandwidths(*arguments, **settings):
-    """Bandwidths alone, (n,) array in units of the CRS; arguments of adapt_bandwidths."""
-    return adapt_bandwidths(*arguments, **settings).bandwidths
-
-
 def _check(weights, pilot_bandwidth, adapt, trim, least_records):
     if not (math.isfinite(pilot_bandwidth) and pilot_bandwidth > 0):
         raise InputError("BANDWIDTH must be above 0; found {}.", pilot_bandwidth)

@@ -13,6 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from .errors import InputError
+from .variance import zone_values
 
 
 @dataclass(frozen=True)
@@ -160,8 +161,8 @@ def held_out_events(half, counts, totals, budget):
         Out of all events; each event is counted once, in the half that did not choose.
     """
     other = np.asarray(counts, float) - half
-    return events_reached(ratio(half, totals), totals, other, budget) + events_reached(
-        ratio(other, totals), totals, half, budget
+    return events_reached(zone_values(half, totals), totals, other, budget) + events_reached(
+        zone_values(other, totals), totals, half, budget
     )
 
 
@@ -201,12 +202,4 @@ def best_possible(counts, totals, budget):
     -------
     float
     """
-    return events_reached(ratio(counts, totals), totals, counts, budget)
-
-
-def ratio(counts, totals):
-    """counts / totals, NaN where the total is not above 0."""
-    counts, totals = np.broadcast_arrays(
-        np.asarray(counts, dtype=float), np.asarray(totals, dtype=float)
-    )
-    return np.divide(counts, totals, out=np.full(counts.shape, np.nan), where=totals > 0)
+    return events_reached(zone_values(counts, totals), totals, counts, budget)

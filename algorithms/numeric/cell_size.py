@@ -65,17 +65,21 @@ class Advice:
     at_the_end: bool
 
 
-def cross_validation_score(counts, area):
+def cross_validation_score(cell, weight, area):
     """Cross-validation score of a histogram; its minimum estimates the least squared error.
 
-    J = 2 / ((n - 1) A) - (n + 1) / (n^2 (n - 1) A) sum_k N_k^2, N_k records in cell k of area A.
+    sum_k W_k^2 / (W^2 A) - 2 sum_i (w_i / W) (W_k(i) - w_i) / ((W - w_i) A): the integrated
+    square of the histogram less twice its mean at each record, the record itself left out. With
+    equal weights this is 2 / ((n - 1) A) - (n + 1) / (n^2 (n - 1) A) sum_k N_k^2, N_k records in
+    cell k.
 
     Parameters
     ----------
-    counts : (cells,) array
-        Empty cells may be left out.
+    cell : (n,) int array
+        Cell of each record.
+    weight : (n,) array
     area : float
-        Area of a cell.
+        Area A of a cell.
 
     Returns
     -------
@@ -85,25 +89,6 @@ def cross_validation_score(counts, area):
     References
     ----------
     Rudemo (1982), Scand. J. Stat. 9:65.
-    """
-    counts = np.asarray(counts, float)
-    n = counts.sum()
-    return 2 / ((n - 1) * area) - (n + 1) / (n**2 * (n - 1) * area) * np.square(counts).sum()
-
-
-def weighted_cross_validation_score(cell, weight, area):
-    """The same score from its definition, for records that carry weights.
-
-    sum_k W_k^2 / (W^2 A) - 2 sum_i (w_i / W) (W_k(i) - w_i) / ((W - w_i) A): the integrated
-    square of the histogram less twice its mean at each record, the record itself left out. With
-    equal weights this is `cross_validation_score`.
-
-    Parameters
-    ----------
-    cell : (n,) int array
-        Cell of each record.
-    weight : (n,) array
-    area : float
     """
     total = weight.sum()
     in_cell = np.bincount(cell, weights=weight)
@@ -315,7 +300,7 @@ def _figures(x, y, weight, tiling, bounds, inside, least_records):
         np.mean(number[held] < least_records),
         np.mean(number[cell] < least_records),
         np.median(error),
-        weighted_cross_validation_score(cell, weight, area),
+        cross_validation_score(cell, weight, area),
         mean_variance_cost(total[within], area, squares[within]),
     )
 

@@ -21,6 +21,7 @@ from .errors import InputError
 from .progress import silent
 from .scenarios import amounts, zone_sums
 from .variance import zone_values
+from .zone_statistics import summarise
 
 LEAST_ZONES = 3
 MEASURES = ("r", "slope", "weighted_r", "weighted_slope")
@@ -145,14 +146,9 @@ class CorrelationSpread:
         for recipe, found in zip(self.recipes, self.scenarios):
             for column, name in enumerate(MEASURES):
                 values = found[:, column]
-                values = values[~np.isnan(values)]
-                if not len(values):
-                    rows.append((recipe.zone_count, name, *([np.nan] * 6)))
-                    continue
-                levels = np.quantile(values, (0, 0.05, 0.5, 0.95, 1))
-                rows.append(
-                    (recipe.zone_count, name, *map(float, levels), float(np.mean(values > 0)))
-                )
+                known = values[~np.isnan(values)]
+                above = float(np.mean(known > 0)) if len(known) else np.nan
+                rows.append((recipe.zone_count, name, *map(float, summarise(values)), above))
         return rows
 
 

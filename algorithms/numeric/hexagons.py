@@ -21,7 +21,6 @@ HEXAGON = "hexagon"
 SQUARE = "square"
 
 HEXAGON_NEIGHBOURS = np.array([(1, 0), (0, 1), (-1, 1), (-1, 0), (0, -1), (1, -1)])
-SQUARE_NEIGHBOURS = np.array([(1, 0), (0, 1), (-1, 0), (0, -1)])
 
 # Corners about the centre, anticlockwise, in half widths (x) and half sides (y) of a pointy-top
 # hexagon. On that lattice every corner and centre is a pair of integers, so that neighbouring

@@ -38,16 +38,3 @@ def rank_correlation(first, second):
     first, second = first - first.mean(), second - second.mean()
     scale = np.sqrt((first**2).sum() * (second**2).sum())
     return float((first * second).sum() / scale) if scale > 0 else float("nan")
-
-
-def spread_evenly(totals, zones):
-    """Each zone's total, shared evenly among its cells.
-
-    Parameters
-    ----------
-    totals : (cells,) float array
-    zones : (cells,) int array
-        Zone of each cell, from 0.
-    """
-    size = np.bincount(zones)
-    return (np.bincount(zones, totals) / np.maximum(size, 1))[zones]

@@ -62,8 +62,8 @@ def shift_test(first, second, first_known=None, second_known=None):
     Returns
     -------
     ShiftTest
-        Grids of more than a million pixels are thinned to every so-manieth row and column for
-        the shifts; ``shared`` is always of all pixels and the rest is given in the same scale.
+        Grids of more than a million pixels are thinned to rows and columns at equal steps for the
+        shifts; ``shared`` is always of all pixels and the rest is given in the same scale.
 
     Raises
     ------

@@ -139,21 +139,6 @@ class Simulation:
         units = self.problem.graph.units
         return np.clip(self.rank_bins.quantile(share) * units + 0.5, 1, units)
 
-    def summary(self):
-        """Rows (zone count, statistic, least, q05, q50, q95, greatest), a scale and statistic each.
-
-        Zonings for which a statistic is undefined drop out.
-        """
-        rows = []
-        for scale in self.scales:
-            for column, name in enumerate(self.problem.statistic_names()):
-                values = scale.statistics[:, column]
-                values = values[~np.isnan(values)]
-                levels = (0, 0.05, 0.5, 0.95, 1)
-                found = np.quantile(values, levels) if len(values) else np.full(5, np.nan)
-                rows.append((scale.recipe.zone_count, name, *map(float, found)))
-        return rows
-
 
 def place_official(problem, labels, scales):
     """Where the statistics of an official zoning fall among simulated ones as numerous.

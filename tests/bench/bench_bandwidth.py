@@ -18,7 +18,7 @@ sys.path.insert(0, str(Path(__file__).resolve().parent.parent))
 
 import conftest  # noqa: F401
 from steadfield.algorithms.numeric import advice, bandwidth, crossvalidation, pairsums
-from steadfield.algorithms.numeric.adaptation import adaptive_bandwidths
+from steadfield.algorithms.numeric.adaptation import adapt_bandwidths
 from steadfield.algorithms.numeric.grid import covering
 from steadfield.algorithms.numeric.surface import adaptive_surface
 
@@ -113,7 +113,7 @@ def _errors(places, shares, centres, widths):
     def error(overall):
         if not np.isfinite(overall):
             return np.nan
-        own = adaptive_bandwidths(x, y, 1.0, overall)
+        own = adapt_bandwidths(x, y, 1.0, overall).bandwidths
         return ((adaptive_surface(x, y, 1 / x.size, own, grid) - truth) ** 2).sum()
 
     best = min(map(error, np.geomspace(found.bandwidths[0], found.bandwidths[-1], 14)))

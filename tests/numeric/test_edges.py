@@ -6,7 +6,7 @@ import shapely
 from scipy.integrate import quad
 from scipy.stats import norm
 from steadfield.algorithms.numeric import edges, surface
-from steadfield.algorithms.numeric.adaptation import adaptive_bandwidths
+from steadfield.algorithms.numeric.adaptation import adapt_bandwidths
 from steadfield.algorithms.numeric.errors import InputError
 from steadfield.algorithms.numeric.grid import Grid, covering
 from steadfield.algorithms.numeric.kernels import KERNELS
@@ -163,8 +163,8 @@ def test_adaptive_bandwidths_do_not_widen_at_the_border_of_a_uniform_pattern():
     grid = covering(polygon.bounds, 10.0)
     mask = edges.boundary_mask(polygon, grid)
     depth = shapely.distance(polygon.boundary, shapely.points(x, y))
-    corrected = adaptive_bandwidths(x, y, 1.0, 40.0, 0.5, mask=mask, grid=grid)
-    plain = adaptive_bandwidths(x, y, 1.0, 40.0, 0.5)
+    corrected = adapt_bandwidths(x, y, 1.0, 40.0, 0.5, mask=mask, grid=grid).bandwidths
+    plain = adapt_bandwidths(x, y, 1.0, 40.0, 0.5).bandwidths
     rim, core = depth < 15, depth > 90
     assert corrected[rim].mean() == pytest.approx(corrected[core].mean(), rel=0.02)
     assert plain[rim].mean() > 1.1 * plain[core].mean()

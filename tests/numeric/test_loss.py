@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 from scipy.stats import spearmanr
-from steadfield.algorithms.numeric.loss import hellinger_distance, rank_correlation, spread_evenly
+from steadfield.algorithms.numeric.loss import hellinger_distance, rank_correlation
 
 
 def test_hellinger_distance_has_its_known_ends_and_value():
@@ -20,8 +20,3 @@ def test_rank_correlation_agrees_with_scipy_with_ties():
     second = first + rng.integers(0, 6, 200)
     assert rank_correlation(first, second) == pytest.approx(spearmanr(first, second)[0])
     assert np.isnan(rank_correlation([1, 1], [1, 2]))
-
-
-def test_even_spread_keeps_zone_totals():
-    totals, zones = np.array([1.0, 5, 6, 8]), np.array([0, 0, 1, 1])
-    assert spread_evenly(totals, zones).tolist() == [3, 3, 7, 7]
