@@ -3,6 +3,7 @@
 Lengths are in millimetres of print, so that the file drops into a page layout at its true size.
 """
 
+import re
 from itertools import combinations
 from textwrap import wrap
 from xml.sax.saxutils import escape
@@ -26,6 +27,15 @@ FONT = "Source Sans 3, Noto Sans, DejaVu Sans, Helvetica, Arial, sans-serif"
 LETTER, BOLD_LETTER = 0.58, 0.66
 
 
+# characters that the format forbids, escaped or not (XML 1.0, section 2.2)
+FORBIDDEN = re.compile("[^\\t\\n\\r\\u0020-\\ud7ff\\ue000-\\ufffd\\U00010000-\\U0010ffff]")
+
+
+def _safe(text):
+    """A text as it may stand in the document."""
+    return escape(FORBIDDEN.sub("\ufffd", text))
+
+
 class _Drawing:
     """Shapes and words of one picture, from the top downwards."""
 
@@ -41,7 +51,7 @@ class _Drawing:
     def words(self, left, baseline, text, size=3.2, colour=INK_COLOUR, anchor="start", weight=400):
         self.parts.append(
             f'<text x="{left:.3f}" y="{baseline:.3f}" font-size="{size}" fill="{colour}" '
-            f'text-anchor="{anchor}" font-weight="{weight}">{escape(text)}</text>'
+            f'text-anchor="{anchor}" font-weight="{weight}">{_safe(text)}</text>'
         )
 
     def document(self, title, height):
@@ -50,7 +60,7 @@ class _Drawing:
             '<?xml version="1.0" encoding="UTF-8"?>\n'
             f'<svg xmlns="http://www.w3.org/2000/svg" width="{WIDTH:g}mm" height="{height:.3f}mm" '
             f'viewBox="0 0 {WIDTH:g} {height:.3f}" font-family="{FONT}">\n'
-            f"<title>{escape(title)}</title>\n"
+            f"<title>{_safe(title)}</title>\n"
             f'<rect width="{WIDTH:g}" height="{height:.3f}" fill="#ffffff"/>\n{body}\n</svg>\n'
         )
 

@@ -4,6 +4,7 @@ import numpy as np
 from scipy import sparse
 from scipy.optimize import linprog
 
+from .errors import InputError
 from .outsider import TOLERANCE
 from .progress import silent
 
@@ -43,6 +44,11 @@ def totals_that_tell(members, lower, upper, targets, ranges, totals, progress=si
     -------
     (sums,) bool array
         Totals that are left out.
+
+    Raises
+    ------
+    InputError
+        A linear programme cannot be solved.
     """
     left_out = np.zeros(len(lower), bool)
     for side in (0, 1):
@@ -85,5 +91,9 @@ def _extreme(members, lower, upper, targets, ranges, side):
         method="highs",
     )
     if solution.status != 0:
-        raise RuntimeError(solution.message)
+        raise InputError(
+            "The linear programme over the rounded sums could not be solved ({}); choose larger "
+            "cells or publish no totals.",
+            solution.message.strip(),
+        )
     return targets @ solution.x[:atoms]

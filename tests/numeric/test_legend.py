@@ -105,6 +105,12 @@ def test_no_line_runs_off_the_page_in_the_widest_font(name):
             assert float(line.get("x")) + taken <= width, line.text
 
 
+def test_a_name_with_characters_that_the_format_forbids_leaves_it_well_formed():
+    told = "".join(drawn(2, ["bell\x07</text><script>", "end\uffff"]).itertext())
+    assert "bell\ufffd</text><script>" in told
+    assert "end\ufffd" in told
+
+
 def test_ramp_darkens_from_faint_to_full():
     ramp = fills(drawn(2))[1 : 1 + legend.STEPS]
     lightness = [colour.srgb_to_oklab(colour.from_hex(fill))[0] for fill in ramp]
