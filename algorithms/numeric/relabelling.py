@@ -11,12 +11,11 @@ import numpy as np
 from scipy import fft
 
 from .errors import InputError
-from .kernels import GAUSSIAN
 from .ladder import bands
-from .spreading import WIDTH, spread, window_spectrum
+from .spectrum import band_lattice, band_places, band_transfers, common_period
+from .spreading import spread
 
 NARROWEST_PIXELS = 1.5
-NODES_PER_BANDWIDTH = 1.5
 # Values that all planes of one batch may hold together
 BATCH_VALUES = 6_000_000
 # values of records, over all planes, that are spread at once
@@ -68,10 +67,7 @@ class KernelSums:
         row = (grid.top - np.asarray(y, float)) / grid.cell - 0.5
         column = (np.asarray(x, float) - grid.left) / grid.cell - 0.5
         self.grid = grid
-        self.period = tuple(
-            _period(place, GAUSSIAN.reach * widths, pixels, real)
-            for place, pixels, real in zip((row, column), grid.shape, (False, True))
-        )
+        self.period = common_period(row, column, widths, grid.shape)
         self.bands = [self._prepared(band, row, column, widths) for band in bands(widths)]
 
     @property
@@ -120,36 +116,12 @@ class KernelSums:
             common[:, -half:, :width] += summed[:, -half:]
 
     def _prepared(self, band, row, column, widths):
-        lattice = tuple(
-            min(
-                fft.next_fast_len(
-                    max(WIDTH, math.ceil(NODES_PER_BANDWIDTH * length / band.rungs[0])), real
-                ),
-                length,
-            )
-            for length, real in zip(self.period, (False, True))
-        )
-        places = []
-        for place, nodes, length in zip((row, column), lattice, self.period):
-            place = np.mod(place[band.records] * (nodes / length), nodes)
-            # A rounding error below 0 comes out of the modulus as the length itself
-            places.append(np.where(place >= nodes, 0.0, place))
-        transfers = []
-        for cycles, nodes, length in zip(
-            (np.fft.fftfreq(lattice[0]), np.fft.rfftfreq(lattice[1])), lattice, self.period
-        ):
-            radians = 2 * np.pi * cycles
-            fade = np.exp(-0.5 * (radians[:, None] * band.rungs * (nodes / length)) ** 2)
-            transfers.append(fade / window_spectrum(radians)[:, None])
+        lattice = band_lattice(band, self.period)
+        places = band_places(row, column, band, lattice, self.period)
+        transfers = band_transfers(band, lattice, self.period)
         return _BandSums(
             band.records, *places, band.shares(widths[band.records]), lattice, *transfers
         )
-
-
-def _period(place, reach, pixels, real):
-    """Pixels after which the lattice may repeat without a kernel meeting its own copy."""
-    after, before = float((place + reach).max()), float((place - reach).min())
-    return fft.next_fast_len(math.ceil(max(after + 1, pixels - before, pixels, WIDTH)), real)
 
 
 def relabelled_counts(counts, cases, generator):

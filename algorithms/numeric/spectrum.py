@@ -50,8 +50,19 @@ class Route:
     period: tuple
 
 
-def _lattice(band, period):
-    """Nodes along both axes that the narrowest rung of a band needs over a period in pixels."""
+def band_lattice(band, period):
+    """Nodes along both axes that the narrowest rung of a band needs over a period.
+
+    Parameters
+    ----------
+    band : ladder.Band
+    period : (int, int)
+        Rows and columns in pixels, from `common_period`.
+
+    Returns
+    -------
+    (int, int)
+    """
     nodes = []
     for length, real in zip(period, (False, True)):
         wanted = max(WIDTH, math.ceil(NODES_PER_BANDWIDTH * length / band.rungs[0]))
@@ -66,12 +77,24 @@ def _window_cost(band):
 
 
 def _spectrum_cost(band, period):
-    nodes = math.prod(_lattice(band, period))
+    nodes = math.prod(band_lattice(band, period))
     return len(band.rungs) * (30 * nodes + 60 * len(band.records)) + 350 * len(band.records) + 1e6
 
 
-def _period(row, column, bandwidths, shape):
-    """Lengths in pixels at which the lattice may repeat without a kernel meeting its own copy."""
+def common_period(row, column, bandwidths, shape):
+    """Lengths at which the lattice may repeat without a kernel meeting its own copy.
+
+    Parameters
+    ----------
+    row, column, bandwidths : (n,) arrays
+        In pixels.
+    shape : (int, int)
+
+    Returns
+    -------
+    (int, int)
+        Rows and columns in pixels, of sizes that transform fast.
+    """
     reach = GAUSSIAN.reach * bandwidths
     lengths = []
     for place, pixels, real in ((row, shape[0], False), (column, shape[1], True)):
@@ -114,7 +137,7 @@ def plan(row, column, bandwidths, shape):
     period = shape
     if able:
         records = np.concatenate([band.records for band in able])
-        period = _period(row[records], column[records], bandwidths[records], shape)
+        period = common_period(row[records], column[records], bandwidths[records], shape)
     chosen = [band for band in able if _spectrum_cost(band, period) < _window_cost(band)]
     saved = sum(_window_cost(band) - _spectrum_cost(band, period) for band in chosen)
     if saved < 30 * math.prod(period):
@@ -133,8 +156,19 @@ def _low_block(lattice, period):
     return rows, (lattice[1] - 1) // 2 + 1
 
 
-def _transfers(band, lattice, period):
-    """Gaussian over spreading window along rows and columns, two (frequencies, m) arrays."""
+def band_transfers(band, lattice, period):
+    """What the rungs of a band let pass: Gaussian over spreading window, along each axis.
+
+    Parameters
+    ----------
+    band : ladder.Band
+    lattice, period : (int, int)
+        From `band_lattice` and `common_period`.
+
+    Returns
+    -------
+    along_rows, along_columns : (frequencies, m) arrays
+    """
     axes = []
     for nodes, length, frequency in (
         (lattice[0], period[0], np.fft.fftfreq(lattice[0])),
@@ -148,8 +182,22 @@ def _transfers(band, lattice, period):
     return axes
 
 
-def _places(row, column, band, lattice, period):
-    """Records' places in nodes of a band's lattice, within one period."""
+def band_places(row, column, band, lattice, period):
+    """Places of a band's records in nodes of its lattice, within one period.
+
+    Parameters
+    ----------
+    row, column : (n,) arrays
+        Of all records, in pixels.
+    band : ladder.Band
+    lattice, period : (int, int)
+        From `band_lattice` and `common_period`.
+
+    Returns
+    -------
+    row, column : (records of the band,) arrays
+        0 to below the number of nodes.
+    """
     places = []
     for place, nodes, length in ((row, lattice[0], period[0]), (column, lattice[1], period[1])):
         place = np.mod(place[band.records] * (nodes / length), nodes)
@@ -228,9 +276,9 @@ def _by_spectrum(row, column, weights, bandwidths, shape, route, work):
     common = np.zeros((period[0], period[1] // 2 + 1), complex)
     for band in route.spectrum:
         progress = next(work)
-        lattice = _lattice(band, period)
+        lattice = band_lattice(band, period)
         shares = band.shares(bandwidths[band.records]) * weights[band.records][:, None]
-        planes = spread(*_places(row, column, band, lattice, period), shares, lattice, progress)
+        planes = spread(*band_places(row, column, band, lattice, period), shares, lattice, progress)
         _add_rungs(common, planes, band, period, progress)
     surface = irfft2(common, s=period, workers=_WORKERS, overwrite_x=True)
     return surface[: shape[0], : shape[1]]
@@ -239,7 +287,7 @@ def _by_spectrum(row, column, weights, bandwidths, shape, route, work):
 def _add_rungs(common, planes, band, period, progress):
     """Add the smoothed spectra of a band's planes into the low block of the common spectrum."""
     lattice = planes.shape[:2]
-    along_rows, along_columns = _transfers(band, lattice, period)
+    along_rows, along_columns = band_transfers(band, lattice, period)
     blocks, width = _low_block(lattice, period)
     for rung in range(planes.shape[2]):
         progress(1.0)
@@ -298,8 +346,8 @@ def gaussian_mass(row, column, bandwidths, raster, progress=silent):
 
 
 def _mass_of_band(row, column, bandwidths, band, common, period, progress):
-    lattice = _lattice(band, period)
-    along_rows, along_columns = _transfers(band, lattice, period)
+    lattice = band_lattice(band, period)
+    along_rows, along_columns = band_transfers(band, lattice, period)
     blocks, width = _low_block(lattice, period)
     planes = np.empty((*lattice, len(band.rungs)))
     scale = math.prod(lattice) / math.prod(period)
@@ -311,5 +359,5 @@ def _mass_of_band(row, column, bandwidths, band, common, period, progress):
         low[:, :width] *= along_columns[:width, rung]
         low *= along_rows[:, rung][:, None] * scale
         planes[:, :, rung] = irfft2(low, s=lattice, workers=_WORKERS)
-    places = _places(row, column, band, lattice, period)
+    places = band_places(row, column, band, lattice, period)
     return gather(*places, band.shares(bandwidths[band.records]), planes, progress)
