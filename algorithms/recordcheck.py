@@ -10,7 +10,7 @@ from ..plugin.looks import categories
 from ..plugin.outputs import Column
 from ..plugin.text import said, tr
 from .base import SteadfieldAlgorithm
-from .numeric import field_faults, record_faults
+from .numeric import field_faults, record_faults, record_stacks
 from .numeric.errors import InputError
 from .numeric.progress import part
 from .numeric.record_faults import FAULT, FINE, RawRecords
@@ -128,7 +128,7 @@ class RecordCheck(SteadfieldAlgorithm):
         if job.field("KEY"):
             checks.append(field_faults.check_keys(values[job.field("KEY")]))
         job.progress(0.3)
-        stacked, sizes = record_faults.check_stacks(records, job.whole("LARGEST_STACK"))
+        stacked, sizes = record_stacks.check_stacks(records, job.whole("LARGEST_STACK"))
         checks.append(stacked)
         rounded, step = record_faults.check_rounding(
             records, job.real("LEAST_ROUNDING"), part(job.progress, 0.3, 0.6)

@@ -9,7 +9,8 @@ from .numeric.errors import InputError
 from .numeric.loss import hellinger_distance, rank_correlation
 from .numeric.merging import zone_polygons
 from .numeric.progress import part
-from .numeric.release import NOISE, ROUND, WITHHOLD, release
+from .numeric.release import release
+from .numeric.release_plan import NOISE, ROUND, WITHHOLD
 from .safehexagons_layers import write_custodian, write_release, write_totals
 from .safehexagons_page import write_page
 from .safehexagons_study import METHODS, ORIENTATIONS, TOTALS, prepare

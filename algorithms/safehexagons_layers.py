@@ -7,7 +7,7 @@ from ..plugin import looks
 from ..plugin.outputs import Column
 from ..plugin.text import tr
 from .numeric.errors import InputError
-from .numeric.release import MERGE, NOISE
+from .numeric.release_plan import MERGE, NOISE
 
 # why a hexagon carries a figure or not, in the custodian's layer, and its colour
 UNSAFE, COMPLEMENTARY = tr("unsafe by the rules"), tr("withheld to protect others")

@@ -6,7 +6,7 @@ import shapely
 from ..plugin.looks import MISSING, SEQUENCE
 from ..plugin.report import Report
 from ..plugin.text import number, percent, tr
-from .numeric.release import CONTROLLED, MERGE, NOISE, ROUND, WITHHOLD
+from .numeric.release_plan import CONTROLLED, MERGE, NOISE, ROUND, WITHHOLD
 
 
 def write_page(algorithm, job, study, made, shown, shapes, loss):
@@ -17,7 +17,7 @@ def write_page(algorithm, job, study, made, shown, shapes, loss):
     algorithm : SteadfieldAlgorithm
     job : Job
     study : safehexagons_study.Study
-    made : numeric.release.Release
+    made : numeric.release_plan.Release
     shown : (k,) int array
         Zones in the release.
     shapes : (zones,) array of shapely polygons

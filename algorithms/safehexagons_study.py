@@ -10,7 +10,7 @@ from ..plugin.text import number, tr
 from .numeric import hexagons
 from .numeric.disclosure import Rules, contributor_codes
 from .numeric.errors import InputError
-from .numeric.release import CONTROLLED, MERGE, NOISE, ROUND, WITHHOLD, Plan, Records
+from .numeric.release_plan import CONTROLLED, MERGE, NOISE, ROUND, WITHHOLD, Plan, Records
 
 METHODS = {
     WITHHOLD: tr("Withhold unsafe hexagons"),
@@ -41,8 +41,8 @@ class Study:
 
     Attributes
     ----------
-    records : numeric.release.Records
-    plan : numeric.release.Plan
+    records : numeric.release_plan.Records
+    plan : numeric.release_plan.Plan
     size : float
     orientation : str
     q, r : (cells,) int arrays

@@ -21,7 +21,8 @@ from steadfield.algorithms.numeric.disclosure import (  # noqa: E402
     unsafe_totals,
 )
 from steadfield.algorithms.numeric.hexagons import hexagon_cells  # noqa: E402
-from steadfield.algorithms.numeric.release import Plan, Records, release  # noqa: E402
+from steadfield.algorithms.numeric.release import release  # noqa: E402
+from steadfield.algorithms.numeric.release_plan import Plan, Records  # noqa: E402
 
 COUNT, SIDE, SIZE = 1_000_000, 60_000.0, 500.0
 

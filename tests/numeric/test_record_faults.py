@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 import shapely
-from steadfield.algorithms.numeric import field_faults, record_faults
+from steadfield.algorithms.numeric import field_faults, record_faults, record_stacks
 from steadfield.algorithms.numeric.practice import make_district
 from steadfield.algorithms.numeric.record_faults import FAULT, FINE, LOOK, RawRecords
 
@@ -36,7 +36,7 @@ def test_clean_practice_data_raise_no_alarm(district, layer):
     checks = [
         *record_faults.check_geometry(records),
         record_faults.check_number(records),
-        record_faults.check_stacks(records)[0],
+        record_stacks.check_stacks(records)[0],
         record_faults.check_rounding(records)[0],
         record_faults.check_boundary(records, district.boundary),
         record_faults.check_far(records),
@@ -71,7 +71,7 @@ def test_few_records_are_worth_a_look():
 
 def test_a_default_place_of_unknown_addresses_is_found_among_homes(falls):
     falls.x[::40], falls.y[::40] = falls.x[0], falls.y[0]
-    check, sizes = record_faults.check_stacks(falls)
+    check, sizes = record_stacks.check_stacks(falls)
     assert check.severity == FAULT
     piled = len(falls.x[::40])
     assert set(range(0, len(falls.x), 40)) <= set(rows_of(check))
@@ -81,10 +81,10 @@ def test_a_default_place_of_unknown_addresses_is_found_among_homes(falls):
 
 def test_flats_are_no_fault_until_the_user_says_how_many_may_live_at_one_door(district):
     residents = raw(district.residents.x, district.residents.y)
-    check, sizes = record_faults.check_stacks(residents)
+    check, sizes = record_stacks.check_stacks(residents)
     assert check.severity == FINE
     assert sizes.max() > 12
-    strict, _ = record_faults.check_stacks(residents, largest=20)
+    strict, _ = record_stacks.check_stacks(residents, largest=20)
     assert strict.severity == FAULT
     assert strict.found.tolist() == (sizes > 20).tolist()
 
@@ -92,14 +92,14 @@ def test_flats_are_no_fault_until_the_user_says_how_many_may_live_at_one_door(di
 def test_middle_points_of_areas_are_recognised(district):
     # Every fall moved to the middle of its base unit: 90 spots for about 600 records.
     middle = shapely.centroid(district.units.polygons[district.fall_unit])
-    check, _ = record_faults.check_stacks(raw(shapely.get_x(middle), shapely.get_y(middle)))
+    check, _ = record_stacks.check_stacks(raw(shapely.get_x(middle), shapely.get_y(middle)))
     assert check.severity == FAULT
     assert "areas" in check.advice
 
 
 def test_stack_sizes_count_the_records_on_each_spot():
     x = np.array([1.0, 2.0, 1.0, np.nan, 1.0, 2.0, 7.0])
-    sizes = record_faults.stack_sizes(raw(x, x))
+    sizes = record_stacks.stack_sizes(raw(x, x))
     assert sizes.tolist() == [3, 2, 3, 0, 3, 2, 1]
 
 
@@ -194,7 +194,7 @@ def test_faults_of_a_record_are_joined_and_fine_ones_left_out():
 
 def test_no_records_at_all_raise_no_error():
     records = raw(np.empty(0), np.empty(0))
-    assert record_faults.check_stacks(records)[0].severity == FINE
+    assert record_stacks.check_stacks(records)[0].severity == FINE
     assert record_faults.check_rounding(records)[0].severity == FINE
     assert record_faults.check_far(records).severity == FINE
     assert record_faults.check_number(records).severity == LOOK

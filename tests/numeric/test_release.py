@@ -8,7 +8,8 @@ import numpy as np
 import pytest
 from steadfield.algorithms.numeric.disclosure import Rules
 from steadfield.algorithms.numeric.errors import InputError
-from steadfield.algorithms.numeric.release import METHODS, Plan, Records, release
+from steadfield.algorithms.numeric.release import release
+from steadfield.algorithms.numeric.release_plan import METHODS, Plan, Records
 
 sys.path.insert(0, str(Path(__file__).parent.parent))
 import attacker
