@@ -18,11 +18,21 @@ class Job(Inputs):
     """One run; what it wrote is taken back when the run fails or is cancelled."""
 
     def discard(self):
-        """Take back what was written."""
+        """Take back what was written; name what cannot be removed, for it may be confidential."""
         for target in self._written:
             for left_over in (target, os.path.splitext(target)[0] + ".qml"):
-                if os.path.isfile(left_over):
+                if not os.path.isfile(left_over):
+                    continue
+                try:
                     os.remove(left_over)
+                except OSError:
+                    # such as a file that another program holds open; the reason of the failure
+                    # itself must still reach the user
+                    self.warn(
+                        tr("{} could not be removed after the failure; delete it by hand.").format(
+                            os.path.basename(left_over)
+                        )
+                    )
             self.context.temporaryLayerStore().removeMapLayer(target)
         self._written = []
         self.results = {}
@@ -143,10 +153,14 @@ class Job(Inputs):
     def write_file(self, name, text):
         """Write a text output that appears only when it is whole."""
         path = self.algorithm.parameterAsFileOutput(self.parameters, name, self.context)
+        self._write_whole(name, path, text.encode("utf-8"))
+        self.results[name] = path
+
+    def _write_whole(self, name, path, content):
         waiting = partial_path(path)
         try:
-            with open(waiting, "w", encoding="utf-8") as file:
-                file.write(text)
+            with open(waiting, "wb") as file:
+                file.write(content)
             put_in_place(waiting, path)
         except OSError as error:
             raise InputError(
@@ -156,7 +170,6 @@ class Job(Inputs):
             if os.path.exists(waiting):
                 os.remove(waiting)
         self._written.append(path)
-        self.results[name] = path
 
     def write_drawing(self, name, svg):
         """Write a drawing and, beside it under the same name, its rendering as PNG."""
@@ -173,10 +186,7 @@ class Job(Inputs):
         except ImportError:
             self.warn(tr("The PNG of the legend is left out: this host cannot render drawings."))
             return
-        beside = os.path.splitext(path)[0] + ".png"
-        self._written.append(beside)
-        with open(beside, "wb") as file:
-            file.write(png)
+        self._write_whole(name, os.path.splitext(path)[0] + ".png", png)
 
     def give(self, name, value):
         """Return a number output."""

@@ -21,7 +21,6 @@ if Qgis.QGIS_VERSION_INT >= 33600:
     LINES = Qgis.ProcessingSourceType.VectorLine
     POLYGONS = Qgis.ProcessingSourceType.VectorPolygon
     RASTERS = Qgis.ProcessingSourceType.Raster
-    MAP_LAYERS = Qgis.ProcessingSourceType.MapLayer
     SKIP_VALIDITY_CHECKS = Qgis.ProcessingFeatureSourceFlag.SkipGeometryValidityChecks
 else:
     ANY_VECTOR = QgsProcessing.SourceType.TypeVectorAnyGeometry
@@ -29,7 +28,6 @@ else:
     LINES = QgsProcessing.SourceType.TypeVectorLine
     POLYGONS = QgsProcessing.SourceType.TypeVectorPolygon
     RASTERS = QgsProcessing.SourceType.TypeRaster
-    MAP_LAYERS = QgsProcessing.SourceType.TypeMapLayer
     SKIP_VALIDITY_CHECKS = QgsProcessingFeatureSource.Flag.FlagSkipGeometryValidityChecks
 
 

@@ -1,6 +1,7 @@
 """Arrays to rasters and back; warping, tiling and formats are the raster library's."""
 
 import os
+import traceback
 from dataclasses import dataclass
 
 import numpy as np
@@ -9,6 +10,7 @@ from osgeo import gdal, ogr, osr
 
 from ..algorithms.numeric.errors import InputError
 from ..algorithms.numeric.grid import Grid
+from ..algorithms.numeric.progress import part
 from .files import partial_path, put_in_place
 from .text import tr
 
@@ -35,13 +37,8 @@ class Band:
     unit: str = ""
 
 
-def _options(driver, columns, rows):
-    if driver.GetDescription() != "GTiff":
-        return []
-    options = ["COMPRESS=DEFLATE", "BIGTIFF=IF_SAFER", "NUM_THREADS=2"]
-    if rows >= 256 and columns >= 256:
-        options.append("TILED=YES")
-    return options
+# of a picture in GeoTIFF: what its bands are, and quick compression
+PICTURE_OPTIONS = ("PHOTOMETRIC=RGB", "ALPHA=YES", "PREDICTOR=2", "ZLEVEL=2")
 
 
 def write_raster(path, grid, crs, bands, progress, no_data=NO_DATA, kind=gdal.GDT_Float32):
@@ -64,21 +61,13 @@ def write_raster(path, grid, crs, bands, progress, no_data=NO_DATA, kind=gdal.GD
     InputError
         The file cannot be written.
     """
-    driver = _driver_for(path)
-    waiting = partial_path(path)
-    try:
-        _write_bands(driver, waiting, grid, crs, bands, progress, no_data, kind)
-        put_in_place(waiting, path)
-    except (RuntimeError, OSError) as error:
-        raise InputError(
-            tr("The raster {} cannot be written: {}").format(
-                os.path.basename(path), getattr(error, "strerror", None) or error
-            )
-        ) from error
-    finally:
-        for left_over in (waiting, waiting + ".aux.xml"):
-            if os.path.exists(left_over):
-                os.remove(left_over)
+
+    def fill(dataset):
+        for position, band in enumerate(bands):
+            told = part(progress, position / len(bands), (position + 1) / len(bands))
+            _fill_band(dataset.GetRasterBand(position + 1), band, no_data, told)
+
+    _write_whole(path, grid, crs, len(bands), kind, (), fill)
 
 
 def write_picture(path, grid, crs, windows, levels_of, progress):
@@ -100,20 +89,36 @@ def write_picture(path, grid, crs, windows, levels_of, progress):
     InputError
         The file cannot be written.
     """
-    driver = _driver_for(path)
-    waiting = partial_path(path)
-    dataset = None
-    try:
-        dataset = _new_picture(driver, waiting, grid, crs)
+
+    def fill(dataset):
+        _name_colours(dataset)
         for position, window in enumerate(windows):
             levels = np.ascontiguousarray(levels_of(window))
             place = (window.column, window.row, window.columns, window.rows)
             if dataset.WriteRaster(*place, levels.tobytes()) != 0:
                 raise OSError(gdal.GetLastErrorMsg())
             progress((position + 1) / len(windows))
-        if dataset.FlushCache() not in (None, 0):
-            raise OSError(gdal.GetLastErrorMsg())
-        dataset = None
+
+    _write_whole(path, grid, crs, 4, gdal.GDT_Byte, PICTURE_OPTIONS, fill)
+
+
+def _write_whole(path, grid, crs, count, kind, options, fill):
+    """Create a raster beside its place, have it filled, and put it there when it is whole."""
+    driver = _driver_for(path)
+    waiting = partial_path(path)
+    try:
+        dataset = _created(driver, waiting, grid, crs, count, kind, options)
+        try:
+            fill(dataset)
+            if dataset.FlushCache() not in (None, 0):
+                raise OSError(gdal.GetLastErrorMsg())
+        except BaseException as error:
+            # the library closes a file with its last reference, and frames of the error hold some
+            traceback.clear_frames(error.__traceback__)
+            raise
+        finally:
+            # not every system lets an open file be moved or removed
+            del dataset
         put_in_place(waiting, path)
     except (RuntimeError, OSError) as error:
         raise InputError(
@@ -122,32 +127,58 @@ def write_picture(path, grid, crs, windows, levels_of, progress):
             )
         ) from error
     finally:
-        dataset = None
         for left_over in (waiting, waiting + ".aux.xml"):
             if os.path.exists(left_over):
                 os.remove(left_over)
 
 
-def _new_picture(driver, path, grid, crs):
-    options = _options(driver, grid.columns, grid.rows)
-    if options:
-        options += ["PHOTOMETRIC=RGB", "ALPHA=YES", "PREDICTOR=2", "ZLEVEL=2"]
-    dataset = driver.Create(path, grid.columns, grid.rows, 4, gdal.GDT_Byte, options=options)
+def _created(driver, path, grid, crs, count, kind, options):
+    """A new dataset on a grid; the options are those of GeoTIFF."""
+    if driver.GetDescription() != "GTiff":
+        options = []
+    else:
+        options = ["COMPRESS=DEFLATE", "BIGTIFF=IF_SAFER", "NUM_THREADS=2", *options]
+        if grid.rows >= 256 and grid.columns >= 256:
+            options.append("TILED=YES")
+    dataset = driver.Create(path, grid.columns, grid.rows, count, kind, options=options)
     if dataset is None:
         raise OSError(gdal.GetLastErrorMsg() or tr("the format refused"))
-    dataset.SetGeoTransform((grid.left, grid.cell, 0, grid.top, 0, -grid.cell))
+    dataset.SetGeoTransform(_transform_of(grid))
     dataset.SetProjection(crs.toWkt())
+    return dataset
+
+
+def _transform_of(grid):
+    return grid.left, grid.cell, 0, grid.top, 0, -grid.cell
+
+
+def _fill_band(target, band, no_data, progress):
+    """Name a band and write its values, some rows at a time."""
+    target.SetDescription(band.name)
+    if band.unit:
+        target.SetUnitType(band.unit)
+    if no_data is not None:
+        target.SetNoDataValue(no_data)
+    for start in range(0, len(band.values), ROWS_AT_ONCE):
+        values = np.asarray(band.values[start : start + ROWS_AT_ONCE])
+        if no_data is not None and values.dtype.kind == "f":
+            values = np.where(np.isnan(values), no_data, values)
+        if target.WriteArray(values, 0, start) != 0:
+            raise OSError(gdal.GetLastErrorMsg())
+        progress((start + len(values)) / len(band.values))
+
+
+def _name_colours(dataset):
     parts = (
         (tr("red"), gdal.GCI_RedBand),
         (tr("green"), gdal.GCI_GreenBand),
         (tr("blue"), gdal.GCI_BlueBand),
         (tr("opacity"), gdal.GCI_AlphaBand),
     )
-    for position, (name, part) in enumerate(parts, start=1):
+    for position, (name, colour) in enumerate(parts, start=1):
         band = dataset.GetRasterBand(position)
         band.SetDescription(name)
-        band.SetColorInterpretation(part)
-    return dataset
+        band.SetColorInterpretation(colour)
 
 
 def label_polygons(labels, grid):
@@ -166,7 +197,7 @@ def label_polygons(labels, grid):
     """
     rows, columns = labels.shape
     raster = gdal.GetDriverByName("MEM").Create("", columns, rows, 1, gdal.GDT_Int32)
-    raster.SetGeoTransform((grid.left, grid.cell, 0, grid.top, 0, -grid.cell))
+    raster.SetGeoTransform(_transform_of(grid))
     band = raster.GetRasterBand(1)
     band.WriteArray(labels.astype(np.int32))
     source = ogr.GetDriverByName("Memory").CreateDataSource("")
@@ -197,7 +228,7 @@ def count_on_pixels(geometry, grid):
         feature counts once on a pixel.
     """
     raster = gdal.GetDriverByName("MEM").Create("", grid.columns, grid.rows, 1, gdal.GDT_Float32)
-    raster.SetGeoTransform((grid.left, grid.cell, 0, grid.top, 0, -grid.cell))
+    raster.SetGeoTransform(_transform_of(grid))
     lines = np.isin(shapely.get_type_id(geometry), (1, 2, 5))
     plane = osr.SpatialReference()
     plane.SetLocalCS("plane")
@@ -233,32 +264,6 @@ def _driver_for(path):
     )
 
 
-def _write_bands(driver, path, grid, crs, bands, progress, no_data, kind):
-    options = _options(driver, grid.columns, grid.rows)
-    dataset = driver.Create(path, grid.columns, grid.rows, len(bands), kind, options=options)
-    if dataset is None:
-        raise OSError(gdal.GetLastErrorMsg() or tr("the format refused"))
-    dataset.SetGeoTransform((grid.left, grid.cell, 0, grid.top, 0, -grid.cell))
-    dataset.SetProjection(crs.toWkt())
-    starts = range(0, grid.rows, ROWS_AT_ONCE)
-    for position, band in enumerate(bands, start=1):
-        target = dataset.GetRasterBand(position)
-        target.SetDescription(band.name)
-        if band.unit:
-            target.SetUnitType(band.unit)
-        if no_data is not None:
-            target.SetNoDataValue(no_data)
-        for start in starts:
-            values = np.asarray(band.values[start : start + ROWS_AT_ONCE])
-            if no_data is not None and values.dtype.kind == "f":
-                values = np.where(np.isnan(values), no_data, values)
-            if target.WriteArray(values, 0, start) != 0:
-                raise OSError(gdal.GetLastErrorMsg())
-            progress((position - 1 + (start + len(values)) / grid.rows) / len(bands))
-    if dataset.FlushCache() not in (None, 0):
-        raise OSError(gdal.GetLastErrorMsg())
-
-
 def read_raster(source, band=1):
     """One band of a raster as an array and its grid.
 
@@ -275,6 +280,7 @@ def read_raster(source, band=1):
         NaN for no data.
     grid : Grid
     unit : str
+        Empty where none is noted.
 
     Raises
     ------

@@ -282,6 +282,16 @@ def test_settings_that_cannot_work_are_refused_in_words(
     assert not (tmp_path / "picture.tif").exists()
 
 
+def test_a_legend_whose_picture_cannot_be_written_is_refused_and_nothing_stays(
+    blend, two_hills, tmp_path
+):
+    (tmp_path / "legend.png").mkdir()
+    before = sorted(tmp_path.iterdir())
+    with pytest.raises(QgsProcessingException, match=r"LEGEND\): the file cannot be written"):
+        blend(two_hills[1])
+    assert sorted(tmp_path.iterdir()) == before
+
+
 def test_seven_layers_are_refused(blend, two_hills):
     with pytest.raises(QgsProcessingException, match="found 7"):
         blend([two_hills[1][0]] * 7)

@@ -1,5 +1,6 @@
 """The shared run of an algorithm, on a small algorithm made for the purpose."""
 
+import os
 from pathlib import Path
 
 import numpy as np
@@ -89,8 +90,8 @@ def probe(provider):
 def count(probe, point_layer, watch, tmp_path):
     import processing
 
-    def run(cancel_at=None, **parameters):
-        watcher = watch(cancel_at)
+    def run(cancel_at=None, watcher=None, **parameters):
+        watcher = watcher or watch(cancel_at)
         if cancel_at == 0:
             watcher.cancel()
         chosen = {
@@ -149,6 +150,23 @@ def test_a_failure_takes_back_what_was_written(count, tmp_path):
     with pytest.raises(QgsProcessingException, match="REPORT"):
         count(REPORT=str(tmp_path / "no such folder" / "deeper" / "report.html"))
     assert not [file for file in tmp_path.iterdir() if file.is_file()]
+
+
+def test_a_file_that_cannot_be_taken_back_is_named_and_the_failure_still_said(
+    count, watch, tmp_path, monkeypatch
+):
+    remove = os.remove
+
+    def held_open(path):
+        if str(path).endswith("counts.tif"):
+            raise PermissionError(13, "held open", path)
+        remove(path)
+
+    monkeypatch.setattr(os, "remove", held_open)
+    watcher = watch()
+    with pytest.raises(QgsProcessingException, match="REPORT"):
+        count(watcher=watcher, REPORT=str(tmp_path / "no such folder" / "report.html"))
+    assert any("counts.tif could not be removed" in words for words in watcher.warnings)
 
 
 def test_an_earlier_result_survives_a_cancelled_run(count, tmp_path):
