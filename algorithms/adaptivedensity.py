@@ -172,7 +172,7 @@ def write_density(job, study, found, steady, per_km2, peak):
     noise = job.choice("NOISE", NOISE)
     density = np.where(found.inside, found.density * per_km2, np.nan)
     unit = tr("per km²")
-    stops = root_stops(peak)
+    stops = looks.root_stops(peak)
     bands, look = [Band("density", density, unit)], looks.ramp(1, stops, unit)
     if noise == "drop":
         bands = [Band("density", np.where(steady.inside, density, np.nan), unit)]
@@ -182,12 +182,6 @@ def write_density(job, study, found, steady, per_km2, peak):
         words = tr("standard error above {}").format(percent(job.real("MOST_ERROR"), 0))
         look = looks.ramp_with_code(2, stops, unit, MARKED, looks.NOISE, words)
     job.write_raster("DENSITY", study.grid, bands, look)
-
-
-def root_stops(peak):
-    """Colours at squares of equal steps: low densities keep their shades beside a sharp peak."""
-    steps = np.linspace(0, 1, len(looks.SEQUENCE)) ** 2
-    return [(float(step * (peak or 1.0)), colour) for step, colour in zip(steps, looks.SEQUENCE)]
 
 
 def write_companions(job, study, found):
@@ -206,5 +200,5 @@ def write_companions(job, study, found):
             "SUPPORT",
             study.grid,
             [Band("effective_records", support, tr("records"))],
-            looks.ramp(1, root_stops(float(np.nanmax(support, initial=1.0))), tr("records")),
+            looks.ramp(1, looks.root_stops(float(np.nanmax(support, initial=1.0))), tr("records")),
         )

@@ -76,15 +76,9 @@ def write_release(job, study, made, shown, shapes):
     elif study.plan.method == MERGE:
         # zones differ in size, so their counts cannot be compared by colour
         field, values, unit = "per_km2", count / kilometres, tr("per km²")
-    look = looks.groups_or_missing(field, groups_of(values[shown]), tr("withheld"), unit=unit)
+    # the classes follow from published figures only: a style is read like any other table
+    look = looks.groups_or_missing(field, looks.groups_of(values[shown]), tr("withheld"), unit=unit)
     job.write_layer("RELEASE", columns, shapes[shown], "polygon", look)
-
-
-def groups_of(values, most=6):
-    """Classes of the map from published figures only: as many distinct values in each."""
-    known = np.unique(values[np.isfinite(values)])
-    parts = np.array_split(known, min(most, len(known))) if len(known) else []
-    return [(float(some[0]), float(some[-1])) for some in parts]
 
 
 def write_totals(job, study, made):

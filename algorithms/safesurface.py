@@ -121,12 +121,7 @@ class SafeSurface(SteadfieldAlgorithm):
         )  # fmt: skip
         density = found.density * 1e6 / job.working.metres**2
         unit = tr("per km²")
-        peak = float(np.nanmax(density))
-        stops = [
-            (peak * (place / (len(looks.SEQUENCE) - 1)) ** 2, colour)
-            for place, colour in enumerate(looks.SEQUENCE)
-        ]
-        look = looks.ramp(1, stops, unit)
+        look = looks.ramp(1, looks.root_stops(float(np.nanmax(density))), unit)
         job.write_raster("DENSITY", study.grid, [Band("density", density, unit)], look)
         job.give("BANDWIDTH_USED", study.bandwidth * job.working.metres)
         job.give("CELL_SIZE_USED", study.grid.cell * job.working.metres)

@@ -6,6 +6,7 @@ A look is a callable that takes a loaded layer and sets its renderer.
 import os
 from itertools import cycle
 
+import numpy as np
 from qgis.core import (
     QgsCategorizedSymbolRenderer,
     QgsColorRampLegendNodeSettings,
@@ -62,6 +63,15 @@ def spread(colours, minimum, maximum):
     """Pairs (value, colour) at equal steps between two values."""
     step = (maximum - minimum) / (len(colours) - 1)
     return [(minimum + index * step, colour) for index, colour in enumerate(colours)]
+
+
+def root_stops(peak):
+    """Pairs (value, colour) at squares of equal steps up to a peak.
+
+    Low densities then keep shades of their own beside a sharp peak. A peak of 0 counts as 1.
+    """
+    last = len(SEQUENCE) - 1
+    return [((peak or 1.0) * (step / last) ** 2, colour) for step, colour in enumerate(SEQUENCE)]
 
 
 def ramp(band, stops, unit, clear_below=None):
@@ -235,6 +245,26 @@ def steps(field, breaks, colours=SEQUENCE, unit="", width=0.1):
         layer.setRenderer(QgsGraduatedSymbolRenderer(field, ranges))
 
     return look
+
+
+def groups_of(values, most=6):
+    """Groups of a number's values with as many distinct ones in each, for `groups_or_missing`.
+
+    Parameters
+    ----------
+    values : (n,) float array
+        NaN where there is none.
+    most : int
+        Number of groups, where there are so many distinct values.
+
+    Returns
+    -------
+    list of (float, float)
+        Lowest and highest value of each group, rising.
+    """
+    known = np.unique(values[np.isfinite(values)])
+    parts = np.array_split(known, min(most, len(known))) if len(known) else []
+    return [(float(some[0]), float(some[-1])) for some in parts]
 
 
 def groups_or_missing(field, groups, missing, colours=SEQUENCE, unit="", width=0.1):
