@@ -10,10 +10,9 @@ from .numeric.crossvalidation import least_squares_scores
 from .numeric.errors import InputError
 from .numeric.outlines import density_levels
 from .numeric.progress import part
+from .plots import colour_ramp, kilometre_extent, name_kilometres, plain_logarithmic, thinned
 
 KERNEL_WORDS = {"gaussian": tr("Gaussian"), "quartic": tr("quartic")}
-# most pixels of a picture along one side
-PICTURE = 900
 CURVE_POINTS = 40
 # more records than this make the curve of the bandwidth slow and no clearer
 CURVE_RECORDS = 200_000
@@ -142,34 +141,23 @@ def figures_table(report, job, study, found, steady, per_km2, limit):
     report.table(tr("Figures"), [tr("what"), tr("value")], rows)
 
 
-def thinned(values):
-    """Every so many rows and columns, so that a picture stays small."""
-    step = max(1, int(np.ceil(max(values.shape) / PICTURE)))
-    return values[::step, ::step]
-
-
 def draw_surfaces(figure, job, study, found, limit, per_km2):
     """Plot density and relative standard error side by side."""
-    from matplotlib.colors import LinearSegmentedColormap, PowerNorm
+    from matplotlib.colors import PowerNorm
 
-    kilometres = job.working.metres / 1000
-    extent = (
-        0.0, study.grid.columns * study.grid.cell * kilometres,
-        0.0, study.grid.rows * study.grid.cell * kilometres,
-    )  # fmt: skip
+    extent = kilometre_extent(study.grid, job.working.metres)
     left, right = figure.subplots(1, 2, sharex=True, sharey=True)
-    ramp = LinearSegmentedColormap.from_list("sequence", SEQUENCE)
     density = np.where(found.inside, found.density * per_km2, np.nan)
     top = float(np.nanmax(density)) or 1.0
     drawn = left.imshow(
-        thinned(density), extent=extent, cmap=ramp, norm=PowerNorm(0.5, 0, top),
+        thinned(density), extent=extent, cmap=colour_ramp(), norm=PowerNorm(0.5, 0, top),
         interpolation="nearest",
     )  # fmt: skip
     bar = figure.colorbar(drawn, ax=left, location="bottom", shrink=0.85, label=tr("per km²"))
     ticks = top * np.linspace(0, 1, 5) ** 2
     bar.set_ticks(ticks, labels=[number(tick, 2) for tick in ticks])
     error = np.where(found.inside, found.relative_error, np.nan)
-    ramp = LinearSegmentedColormap.from_list("error", SEQUENCE[1:5])
+    ramp = colour_ramp(SEQUENCE[1:5])
     ramp.set_over(NOISE)
     drawn = right.imshow(
         thinned(100 * error), extent=extent, cmap=ramp, vmin=0, vmax=100 * limit,
@@ -181,9 +169,8 @@ def draw_surfaces(figure, job, study, found, limit, per_km2):
     )  # fmt: skip
     for axes, title in ((left, tr("density")), (right, tr("relative standard error"))):
         axes.set_title(title, fontsize=11)
-        axes.set_xlabel(tr("km from the western edge"))
-        axes.grid(False)
-    left.set_ylabel(tr("km from the southern edge"))
+        name_kilometres(axes)
+        axes.label_outer()
 
 
 def draw_bandwidths(figure, study, metres):
@@ -196,16 +183,6 @@ def draw_bandwidths(figure, study, metres):
     plain_logarithmic(axes)
     axes.set_xlabel(tr("bandwidth (m)"))
     axes.set_ylabel(tr("records"))
-
-
-def plain_logarithmic(axes):
-    """Give an axis steps of 1, 2 and 5 times a power of ten, in plain figures."""
-    from matplotlib.ticker import LogLocator, NullLocator
-
-    axes.set_xscale("log")
-    axes.xaxis.set_major_locator(LogLocator(subs=(1.0, 2.0, 5.0)))
-    axes.xaxis.set_minor_locator(NullLocator())
-    axes.xaxis.set_major_formatter(lambda value, _: number(value, 2))
 
 
 def add_curve(report, job, study, progress):

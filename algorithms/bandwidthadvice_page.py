@@ -9,6 +9,7 @@ from ..plugin.report import Report
 from ..plugin.text import number, percent, said, tr
 from .numeric.grid import covering
 from .numeric.surface import adaptive_surface
+from .plots import colour_ramp, kilometre_extent, plain_logarithmic
 
 # pixels of a small surface along its longer side
 SMALL = 260
@@ -126,8 +127,6 @@ def diagnosis_table(report, advice):
 
 def draw_curves(figure, advice):
     """Plot both cross-validation curves over one logarithmic axis of bandwidths."""
-    from matplotlib.ticker import LogLocator, NullLocator
-
     above, below = figure.subplots(2, 1, sharex=True)
     gain = -advice.least_squares_curve * 1e6
     above.plot(advice.bandwidths, gain, color=SHADES["least_squares"], linewidth=2)
@@ -153,16 +152,13 @@ def draw_curves(figure, advice):
         if not math.isnan(best):
             height = np.interp(math.log(best), np.log(bandwidths), curve)
             axes.plot([best], [height], "o", color=SHADES[name], markersize=7)
-        axes.set_xscale("log")
-        axes.xaxis.set_major_locator(LogLocator(subs=(1.0, 2.0, 5.0)))
-        axes.xaxis.set_minor_locator(NullLocator())
-        axes.xaxis.set_major_formatter(lambda value, _: number(value, 2))
+        plain_logarithmic(axes)
     above.legend(frameon=False, ncol=3, loc="lower center", bbox_to_anchor=(0.5, 1.0))
 
 
 def draw_surfaces(figure, job, records, advice):
     """Plot small surfaces at half, once and twice the advised bandwidth."""
-    from matplotlib.colors import LinearSegmentedColormap, PowerNorm
+    from matplotlib.colors import PowerNorm
 
     metres = job.working.metres
     x, y = records.x * metres, records.y * metres
@@ -170,14 +166,12 @@ def draw_surfaces(figure, job, records, advice):
     bounds = x.min() - margin, y.min() - margin, x.max() + margin, y.max() + margin
     cell = max(bounds[2] - bounds[0], bounds[3] - bounds[1]) / SMALL
     grid = covering(bounds, cell)
-    ramp = LinearSegmentedColormap.from_list("sequence", SEQUENCE)
-    extent = (0, grid.columns * cell / 1000, 0, grid.rows * cell / 1000)
     for axes, factor in zip(figure.subplots(1, 3, sharex=True, sharey=True), (0.5, 1.0, 2.0)):
         density = 1e6 * adaptive_surface(x, y, records.weight, factor * advice.advised, grid)
         axes.imshow(
             density,
-            extent=extent,
-            cmap=ramp,
+            extent=kilometre_extent(grid, 1.0),
+            cmap=colour_ramp(),
             norm=PowerNorm(0.5, 0, float(density.max()) or 1.0),
             interpolation="nearest",
         )

@@ -5,9 +5,7 @@ import numpy as np
 from ..plugin.looks import SEQUENCE
 from ..plugin.report import Report
 from ..plugin.text import number, percent, tr
-
-# most pixels of the picture along one side
-PICTURE = 900
+from .plots import kilometre_extent, name_kilometres, thinned
 
 
 def write_page(algorithm, job, layer, grid, density, levels, regions, inside, kept):
@@ -124,8 +122,7 @@ def draw_outlines(figure, grid, density, levels, metres):
     from matplotlib.colors import ListedColormap
     from matplotlib.patches import Patch
 
-    step = max(1, int(np.ceil(max(density.shape) / PICTURE)))
-    density = density[::step, ::step]
+    density = thinned(density)
     order = sorted(levels, key=lambda level: -level.share)
     shades = SEQUENCE[1:]
     colours = [
@@ -137,19 +134,16 @@ def draw_outlines(figure, grid, density, levels, metres):
         with np.errstate(invalid="ignore"):
             classes[density >= level.threshold] = place
     classes[np.isnan(density)] = np.nan
-    kilometres = grid.cell * metres / 1000
     axes = figure.subplots()
     axes.imshow(
         classes,
-        extent=(0, grid.columns * kilometres, 0, grid.rows * kilometres),
+        extent=kilometre_extent(grid, metres),
         cmap=ListedColormap([SEQUENCE[0], *colours]),
         vmin=-0.5,
         vmax=len(order) + 0.5,
         interpolation="nearest",
     )
-    axes.grid(False)
-    axes.set_xlabel(tr("km from the western edge"))
-    axes.set_ylabel(tr("km from the southern edge"))
+    name_kilometres(axes)
     handles = [
         Patch(color=colour, label=percent(level.share, 0)) for colour, level in zip(colours, order)
     ]

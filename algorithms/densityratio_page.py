@@ -7,9 +7,8 @@ import numpy as np
 from ..plugin.looks import DIVERGING, SEQUENCE
 from ..plugin.report import Report
 from ..plugin.text import number, percent, tr
+from .plots import colour_ramp, kilometre_extent, name_kilometres, thinned, thinning
 
-# most pixels of a picture along one side
-PICTURE = 900
 ACCENT = "#8a5a1c"
 
 
@@ -201,19 +200,17 @@ def figures_table(report, job, study, found):
 
 def draw_ratio(figure, job, study, found, relabelling):
     """Plot the ratio with the areas beyond 5 %."""
-    from matplotlib.colors import LinearSegmentedColormap
-
-    step = max(1, int(np.ceil(max(study.grid.shape) / PICTURE)))
+    step = thinning(study.grid.shape)
     kilometres = study.grid.cell * job.working.metres / 1000
-    extent = (0, study.grid.columns * kilometres, 0, study.grid.rows * kilometres)
-    log_ratio = found.log_ratio[::step, ::step]
+    extent = kilometre_extent(study.grid, job.working.metres)
+    log_ratio = thinned(found.log_ratio)
     reach = max(float(np.quantile(np.abs(found.log_ratio[found.shown]), 0.995)), math.log(1.25))
     axes = figure.subplots()
     axes.set_facecolor("#d9d4c7")
     drawn = axes.imshow(
         log_ratio,
         extent=extent,
-        cmap=LinearSegmentedColormap.from_list("diverging", DIVERGING),
+        cmap=colour_ramp(DIVERGING),
         vmin=-reach,
         vmax=reach,
         interpolation="nearest",
@@ -226,13 +223,11 @@ def draw_ratio(figure, job, study, found, relabelling):
         y = extent[3] - (np.arange(log_ratio.shape[0]) * step + 0.5) * kilometres
         for suffix, colour, width in (("", "#5b6068", 0.8), ("_anywhere", "black", 2.0)):
             for name in ("p_raised", "p_lowered"):
-                p_values = getattr(relabelling, name + suffix)[::step, ::step]
+                p_values = thinned(getattr(relabelling, name + suffix))
                 beyond = np.nan_to_num(p_values, nan=1.0) <= 0.05
                 if beyond.any() and min(beyond.shape) > 1:
                     axes.contour(x, y, beyond, levels=[0.5], colors=[colour], linewidths=width)
-    axes.grid(False)
-    axes.set_xlabel(tr("km from the western edge"))
-    axes.set_ylabel(tr("km from the southern edge"))
+    name_kilometres(axes)
 
 
 def draw_extremes(figure, relabelling):

@@ -2,9 +2,10 @@
 
 import numpy as np
 
-from ..plugin.looks import SEQUENCE, VERDICTS
+from ..plugin.looks import VERDICTS
 from ..plugin.report import Report
 from ..plugin.text import number, percent, tr
+from .plots import colour_ramp, kilometre_extent
 from .zoning_pages import (
     allocation_words,
     draw_allocation,
@@ -170,19 +171,14 @@ def movement_words(study, outcome):
 
 def draw_maps(figure, study, outcome, metres):
     """Plot the mean and the verdict side by side."""
-    from matplotlib.colors import LinearSegmentedColormap, ListedColormap
+    from matplotlib.colors import ListedColormap
 
-    kilometres = metres / 1000
-    extent = (
-        0.0, study.grid.columns * study.grid.cell * kilometres,
-        0.0, study.grid.rows * study.grid.cell * kilometres,
-    )  # fmt: skip
+    extent = kilometre_extent(study.grid, metres)
     left, right = figure.subplots(1, 2, sharex=True, sharey=True)
-    ramp = LinearSegmentedColormap.from_list("sequence", SEQUENCE)
     known = outcome.mean[~np.isnan(outcome.mean)]
     top = float(np.quantile(known, 0.995))
     drawn = left.imshow(
-        _image(study, outcome.mean), extent=extent, cmap=ramp, vmin=0, vmax=top or 1.0,
+        _image(study, outcome.mean), extent=extent, cmap=colour_ramp(), vmin=0, vmax=top or 1.0,
         interpolation="nearest",
     )  # fmt: skip
     figure.colorbar(drawn, ax=left, location="bottom", shrink=0.8, label=study.unit, extend="max")
@@ -202,7 +198,7 @@ def draw_maps(figure, study, outcome, metres):
         axes.grid(visible=False)
         axes.set_xlabel("km")
         if study.boundary is not None:
-            _outline(axes, study, kilometres)
+            _outline(axes, study, metres / 1000)
 
 
 def _outline(axes, study, kilometres):

@@ -3,10 +3,11 @@
 import numpy as np
 import shapely
 
-from ..plugin.looks import MISSING, SEQUENCE
+from ..plugin.looks import MISSING
 from ..plugin.report import Report
 from ..plugin.text import number, percent, tr
 from .numeric.release_plan import CONTROLLED, MERGE, NOISE, ROUND, WITHHOLD
+from .plots import colour_ramp
 
 
 def write_page(algorithm, job, study, made, shown, shapes, loss):
@@ -288,7 +289,6 @@ def caution_words(study):
 def draw_release(figure, job, study, made, shown, shapes):
     """Map of published figures with a legend bar."""
     from matplotlib.collections import PolyCollection
-    from matplotlib.colors import LinearSegmentedColormap
 
     share = made.share()
     values, label = made.count()[shown], tr("count")
@@ -299,8 +299,7 @@ def draw_release(figure, job, study, made, shown, shapes):
         values, label = values / areas, tr("count per km²")
     axes = figure.add_subplot()
     rings = [shapely.get_coordinates(shape.exterior) for shape in shapes[shown]]
-    colours = LinearSegmentedColormap.from_list("sequence", SEQUENCE)
-    colours.set_bad(MISSING)
+    colours = colour_ramp(missing=MISSING)
     drawn = PolyCollection(rings, array=np.ma.masked_invalid(values), cmap=colours)
     drawn.set(edgecolor="#a8a497", linewidth=0.3)
     axes.add_collection(drawn)

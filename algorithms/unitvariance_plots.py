@@ -5,8 +5,9 @@ from textwrap import fill
 import numpy as np
 import shapely
 
-from ..plugin.looks import SEQUENCE, VERDICTS, verdict_words
+from ..plugin.looks import VERDICTS, verdict_words
 from ..plugin.text import number, tr
+from .plots import colour_ramp
 from .zoning_pages import BAND, LINE, MARK, VALUES, statistic_words, summaries
 
 FANNED = ("largest", "smallest", "variation", "morans_i", "dissimilarity", "share_above")
@@ -70,10 +71,9 @@ def draw_source_maps(figure, study, metres):
 def _fill(axes, outlines, values, low, high):
     """Units in the colours of a ramp; returns what a colour bar needs."""
     from matplotlib.cm import ScalarMappable
-    from matplotlib.colors import LinearSegmentedColormap, Normalize
+    from matplotlib.colors import Normalize
 
-    ramp = LinearSegmentedColormap.from_list("sequence", SEQUENCE)
-    scale = ScalarMappable(Normalize(low, high if high > low else low + 1), ramp)
+    scale = ScalarMappable(Normalize(low, high if high > low else low + 1), colour_ramp())
     colours = scale.to_rgba(np.nan_to_num(values))
     colours[np.isnan(values)] = 1.0
     _paint(axes, outlines, colours)
