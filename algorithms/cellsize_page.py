@@ -34,8 +34,7 @@ def write_page(algorithm, job, found, advice, records):
         lambda figure: draw_criteria(figure, found, advice, metres),
         tr(
             "Both criteria against the cell size, each from its best (0) to its worst (1) value. "
-            "Low is "
-            "good: small cells follow noise, large cells blur."
+            "Low is good: small cells follow noise, large cells blur."
         ),
     )
     report.plot(
@@ -216,7 +215,6 @@ def caution_words():
         ),
         tr(
             "A size that suits counting is not thereby safe to publish: the group Safe release "
-            "looks at "
-            "least counts cell by cell."
+            "looks at least counts cell by cell."
         ),
     ]

@@ -161,8 +161,7 @@ class GridVariance(SteadfieldAlgorithm):
             tr("Budget (share of the total)"),
             tr(
                 "Share of the background that a service can cover, 0 to 1. The report then says "
-                "how many "
-                "events are reached, or missed, because of where lines run."
+                "how many events are reached, or missed, because of where lines run."
             ),
             least=0.0,
             most=1.0,

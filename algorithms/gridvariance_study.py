@@ -242,8 +242,7 @@ def settle_sizes(job, records, area):
         raise InputError(
             tr(
                 "{}: all the data lie on one spot or line, so no size can be chosen; enter sizes, "
-                "and a "
-                "boundary."
+                "and a boundary."
             ).format(job.label("CELL_SIZES"))
         )
     return cell_size.sizes_for_zonings(

@@ -40,8 +40,8 @@ class SafeHexagons(SteadfieldAlgorithm):
         "protects from being singled out; dominance and p % from estimates of a large "
         "contribution; the share rules from learning what everybody in a hexagon has in common. "
         "None protects from what somebody knows already, or from several releases compared: check "
-        "those with Release audit. "
-        "Thresholds are set by the data's owner and by law, not by this tool."
+        "those with Release audit. Thresholds are set by the data's owner and by law, not by this "
+        "tool."
     )
 
     def define(self):
