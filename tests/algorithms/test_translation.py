@@ -28,7 +28,7 @@ WORD = re.compile(r"[^\W\d_]{2,}")
 NAMES = re.compile(
     r"""\b[A-Z][A-Z0-9_]+\b | \b\w+-(good|none|w-neg)\b | \#[0-9a-f]{6}
     | \b(weight|part|household|month|kind|total|cases|others|ward|north|south|background)\b
-    | \b(km|ha)\b | \bper\ km² | \bunknown\b | \bostermoor\.gpkg\b
+    | \bEPSG:\d+\ -\ [^⟦⟧]+ | \b(km|ha)\b | \bper\ km² | \bunknown\b | \bostermoor\.gpkg\b
     | \b(Steadfield|Python|numpy|scipy|shapely|CIEDE2000)\b""",
     re.VERBOSE,
 )
