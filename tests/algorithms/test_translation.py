@@ -26,9 +26,9 @@ WORD = re.compile(r"[^\W\d_]{2,}")
 # what stands in no language: keys of parameters, outputs and files, names of data (of fields, of
 # layers and of their groups), units, CRS and software
 NAMES = re.compile(
-    r"""\b[A-Z][A-Z0-9_]+\b | \b\w+-(good|none|w-neg)\b | \#[0-9a-f]{6}
+    r"""\bEPSG:\d+\ -\ [^⟦⟧]+ | \b[A-Z][A-Z0-9_]+\b | \b\w+-(good|none|w-neg)\b | \#[0-9a-f]{6}
     | \b(weight|part|household|month|kind|total|cases|others|ward|north|south|background)\b
-    | \bEPSG:\d+\ -\ [^⟦⟧]+ | \b(km|ha)\b | \bper\ km² | \bunknown\b | \bostermoor\.gpkg\b
+    | \b(km|ha)\b | \bper\ km² | \bunknown\b | \bostermoor\.gpkg\b
     | \b(Steadfield|Python|numpy|scipy|shapely|CIEDE2000)\b""",
     re.VERBOSE,
 )
