@@ -36,7 +36,7 @@ class Group:
     standard_distance : float
     deviation : numeric.centres.Ellipse
     confidence : numeric.centres.Ellipse or None
-    covariance : (2, 2) array
+    sampled : numeric.centre_confidence.SampledCentre
     """
 
     name: str
@@ -47,7 +47,7 @@ class Group:
     standard_distance: float
     deviation: centres.Ellipse
     confidence: object
-    covariance: np.ndarray
+    sampled: centre_confidence.SampledCentre
 
 
 @dataclass(frozen=True)
@@ -113,7 +113,7 @@ class CentreSpread(SteadfieldAlgorithm):
             "RECORDS",
             tr(
                 "Whose record it is, such as the household. Records of one contributor are not "
-                "independent; the confidence takes that into account."
+                "independent; the confidence and the chance of a step take that into account."
             ),
             numeric=False,
             advanced=True,
@@ -255,6 +255,7 @@ def _members(job, records, group, order):
 
 def _measure(job, records, members, contributors):
     seed = np.random.SeedSequence(job.seed())
+    labels = None if contributors is None else _labels(contributors)
     deviations, level = job.real("DEVIATIONS"), job.real("LEVEL") / 100.0
     done, total = 0, sum(len(rows) for _, rows in members)
     groups, unsure = [], []
@@ -264,7 +265,7 @@ def _measure(job, records, members, contributors):
         )
         told(0.0)
         x, y, weight = records.x[rows], records.y[rows], records.weight[rows]
-        whose = None if contributors is None else _labels(contributors[rows])
+        whose = None if labels is None else labels[rows]
         confidence = centre_confidence.confidence_ellipse(
             x, y, weight, whose, level, job.whole("DRAWS"), np.random.default_rng(own_seed), told
         )
@@ -280,7 +281,7 @@ def _measure(job, records, members, contributors):
                 standard_distance=centres.standard_distance(x, y, weight),
                 deviation=centres.deviation_ellipse(x, y, weight, deviations),
                 confidence=confidence,
-                covariance=centre_confidence.centre_covariance(x, y, weight, whose),
+                sampled=centre_confidence.sampled_centre(x, y, weight, whose),
             )
         )
         done += len(rows)
@@ -309,9 +310,7 @@ def _steps(groups):
             stop,
             float(np.hypot(stop.mean[0] - start.mean[0], stop.mean[1] - start.mean[1])),
             float(centres.bearing(*start.mean, *stop.mean)),
-            centre_confidence.chance_of_distance(
-                start.mean, start.covariance, stop.mean, stop.covariance
-            ),
+            centre_confidence.chance_of_distance(start.sampled, stop.sampled),
         )
         for start, stop in zip(groups, groups[1:])
     ]

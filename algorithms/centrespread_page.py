@@ -149,7 +149,8 @@ def _tables(report, groups, steps, fields, metres, level):
             ],
             note=tr(
                 "Chance: how often two groups of these sizes and spreads would have centres so far "
-                "apart if their true centre were the same."
+                "apart if their true centre were the same. None with fewer than three contributors "
+                "(records without that field) in a group."
             ),
         )
 
@@ -207,9 +208,11 @@ def _method(job):
             "studentised distances of the drawn centres (Hall 1987; Efron & Tibshirani 1993)."
         ),
         tr(
-            "Chance of a step: squared difference of the centres over the sum of their "
-            "covariances, taken as chi-square with two degrees of freedom (Mardia, Kent & Bibby "
-            "1979)."
+            "Chance of a step: squared difference of the centres over its covariance, to which a "
+            "contributor of both groups adds once with the difference of what it does to each; "
+            "taken as Hotelling's T² (Mardia, Kent & Bibby 1979) with the degrees of freedom of "
+            "Krishnamoorthy & Yu (2004, Stat. Probab. Lett. 66:161), so that few contributors make "
+            "it no smaller than it is."
         ),
     ]
 
@@ -225,9 +228,13 @@ def _cautions(groups, steps):
             "before calling it a shift in risk. A centre may lie where nobody is."
         ),
     ]
-    if min(group.records for group in groups) < SMALL:
+    if min(len(group.sampled.shares) for group in groups) < SMALL:
         cautions.append(
-            tr("Groups of fewer than {} records have rough confidence ellipses.").format(SMALL)
+            tr(
+                "Groups of fewer than {} contributors (records without that field) have rough "
+                "confidence ellipses, rather too wide than too narrow. Between a tiny group and a "
+                "large one whose records lie lopsided, the chance of a step comes out too small."
+            ).format(SMALL)
         )
     if len(steps) > 1:
         cautions.append(

@@ -5,6 +5,7 @@ keeps its coverage for skewed and weighted records of some tens upwards.
 """
 
 import math
+from dataclasses import dataclass
 
 import numpy as np
 
@@ -13,6 +14,33 @@ from .errors import InputError
 from .progress import silent
 
 RESAMPLED_AT_ONCE = 2_000_000
+LEAST_CONTRIBUTORS = 3
+
+
+@dataclass(frozen=True)
+class SampledCentre:
+    """A weighted mean centre and what each contributor does to it.
+
+    Attributes
+    ----------
+    place : (x, y)
+    contributors : (c,) array or None
+        Their labels; None where every record has its own and shares it with no other group.
+    shares : (c,) array
+        Share of the total weight, above 0.
+    pulls : (c, 2) array
+        Linearised effect on the centre, r_c / sum w with r_c = sum_{i in c} w_i (x_i - m).
+    """
+
+    place: tuple
+    contributors: object
+    shares: np.ndarray
+    pulls: np.ndarray
+
+    @property
+    def size(self):
+        """Number of equal contributors that would vary as much: 1 / sum of squared shares."""
+        return 1.0 / float(np.square(self.shares).sum())
 
 
 def confidence_ellipse(
@@ -56,7 +84,7 @@ def confidence_ellipse(
     centre = np.array(mean_centre(x, y, weights))
     sums = _contributor_sums(x - centre[0], y - centre[1], weights, contributors)
     covariance = centre_covariance(x, y, weights, contributors)
-    if len(sums) < 3 or not _well_conditioned(covariance):
+    if len(sums) < LEAST_CONTRIBUTORS or not _well_conditioned(covariance):
         return None
     distances = _studentised_draws(sums, draws, rng, progress)
     limit = np.partition(distances, _rank(level, draws))[_rank(level, draws)]
@@ -87,32 +115,102 @@ def centre_covariance(x, y, weights=None, contributors=None):
     return _mean_covariance(_second_moments(sums).sum(axis=0)[None], np.zeros((1, 2)))[0]
 
 
-def chance_of_distance(first, first_covariance, second, second_covariance):
-    """Chance that two centres come to lie so far apart when their true places are the same.
-
-    T^2 = d' (V_1 + V_2)^-1 d, d the difference of the centres, is taken as chi-square with two
-    degrees of freedom, so the chance is exp(-T^2 / 2). For two independent groups of many records.
+def sampled_centre(x, y, weights=None, contributors=None):
+    """The mean centre of a group with the pull of each of its contributors.
 
     Parameters
     ----------
-    first, second : (x, y)
-    first_covariance, second_covariance : (2, 2) arrays
-        From `centre_covariance`.
+    x, y, weights, contributors : see `confidence_ellipse`
+
+    Returns
+    -------
+    SampledCentre
+        Contributors without weight are left out.
+    """
+    x, y, weights = checked_records(x, y, weights)
+    place = mean_centre(x, y, weights)
+    sums = _contributor_sums(x - place[0], y - place[1], weights, contributors)
+    labels = None if contributors is None else np.unique(contributors)
+    carrying = sums[:, 0] > 0
+    sums, total = sums[carrying], sums[:, 0].sum()
+    labels = labels if labels is None else labels[carrying]
+    return SampledCentre(place, labels, sums[:, 0] / total, sums[:, 1:] / total)
+
+
+def chance_of_distance(first, second):
+    """Chance that two centres come to lie so far apart when their true places are the same.
+
+    T^2 = d' V^-1 d, d the difference of the centres and V = sum_c d_c d_c' its covariance, d_c the
+    difference of the pulls of contributor c in the two groups: one who has records in both moves
+    both centres. Pulls carry sqrt(n / (n - 1)), n the effective number of contributors of the
+    group. V is only as good as the contributors are many: T^2 is taken as Hotelling's with v
+    degrees of freedom, T^2 (v - 1) / (2 v) as F with 2 and v - 1, for which the chance is
+    (1 + T^2 / v)^(-(v - 1) / 2). v = 6 / sum_k (tr (V_k V^-1)^2 + (tr V_k V^-1)^2) / f_k over the
+    contributors of the first group only, of the second only, and of both.
+
+    Parameters
+    ----------
+    first, second : SampledCentre
 
     Returns
     -------
     float
-        NaN where a covariance is singular.
+        NaN with fewer than three contributors in either group, or where V is singular.
 
     References
     ----------
-    Mardia, Kent & Bibby (1979), Multivariate Analysis, ch. 3 and 5.
+    Mardia, Kent & Bibby (1979), Multivariate Analysis, ch. 3 and 5; Krishnamoorthy & Yu (2004),
+    Statistics & Probability Letters 66:161, for the degrees of freedom.
     """
-    covariance = np.asarray(first_covariance) + second_covariance
+    if min(len(first.shares), len(second.shares)) < LEAST_CONTRIBUTORS:
+        return math.nan
+    parts = [part for part in _difference_parts(first, second) if len(part[0])]
+    covariances = [pulls.T @ pulls for pulls, _ in parts]
+    covariance = np.sum(covariances, axis=0)
     if not _well_conditioned(covariance):
         return math.nan
-    apart = np.subtract(first, second)
-    return math.exp(-0.5 * float(apart @ np.linalg.solve(covariance, apart)))
+    inverse = np.linalg.inv(covariance)
+    lost = 0.0
+    for own, (_, freedom) in zip(covariances, parts):
+        relative = own @ inverse
+        lost += (np.trace(relative @ relative) + np.trace(relative) ** 2) / freedom
+    freedom = 6.0 / lost
+    if freedom <= 1.0:
+        return math.nan
+    apart = np.subtract(first.place, second.place)
+    return float((1.0 + apart @ inverse @ apart / freedom) ** (-0.5 * (freedom - 1.0)))
+
+
+def _difference_parts(first, second):
+    """Pulls on the difference of two centres, and degrees of freedom, by where contributors are.
+
+    Three pairs ((c, 2) array, float): contributors of the first group only, of the second only, of
+    both. The degrees of freedom of a sum of squares with unequal weights are those of as many equal
+    ones, less what the means took.
+    """
+    sizes = first.size, second.size
+    pulls = [
+        group.pulls * math.sqrt(size / max(size - 1.0, 1e-9))
+        for group, size in zip((first, second), sizes)
+    ]
+    shared = np.zeros((2, 0), int)
+    if first.contributors is not None and second.contributors is not None:
+        shared = np.array(np.intersect1d(first.contributors, second.contributors, True, True)[1:])
+    alone = [np.setdiff1d(np.arange(len(own)), both) for own, both in zip(pulls, shared)]
+    parts = [
+        (own[rows], _freedom(group.shares[rows], size))
+        for own, rows, group, size in zip(pulls, alone, (first, second), sizes)
+    ]
+    together = first.shares[shared[0]] + second.shares[shared[1]]
+    difference = pulls[0][shared[0]] - pulls[1][shared[1]]
+    return [*parts, (difference, _freedom(together, min(sizes)))]
+
+
+def _freedom(shares, size):
+    squares = np.square(shares)
+    if not len(squares):
+        return 0.0
+    return float(squares.sum() ** 2 / np.square(squares).sum() * (1.0 - 1.0 / size))
 
 
 def _contributor_sums(x, y, weights, contributors):

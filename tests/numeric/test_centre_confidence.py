@@ -4,12 +4,14 @@ import math
 
 import numpy as np
 import pytest
+from scipy import stats
 from steadfield.algorithms.numeric.centre_confidence import (
     centre_covariance,
     chance_of_distance,
     confidence_ellipse,
+    sampled_centre,
 )
-from steadfield.algorithms.numeric.centres import deviation_ellipse, mean_centre
+from steadfield.algorithms.numeric.centres import deviation_ellipse
 from steadfield.algorithms.numeric.errors import CancelledError
 
 
@@ -68,23 +70,76 @@ def test_centre_covariance_of_equal_weights_is_the_covariance_over_n():
     assert centre_covariance(x, y) == pytest.approx(np.cov(x, y, bias=True) / 50)
 
 
-def test_chance_of_a_distance_is_uniform_when_nothing_moved():
-    # 2,000 pairs: a share of 5 % is known to 0.5 %.
-    rng = np.random.default_rng(12)
-    chances = []
-    for _ in range(2000):
-        groups = rng.normal(size=(2, 2, 80)) * np.array([[400.0], [150.0]])
-        first, second = ((mean_centre(*g), centre_covariance(*g)) for g in groups)
-        chances.append(chance_of_distance(*first, *second))
-    for level in (0.05, 0.5):
-        assert np.mean(np.array(chances) < level) == pytest.approx(level, abs=0.02 + 0.02 * level)
+def levels_reached(draw, runs, seed):
+    """Shares of chances below 5 % and 50 % when the true centres are the same."""
+    rng = np.random.default_rng(seed)
+    chances = np.array([chance_of_distance(*draw(rng)) for _ in range(runs)])
+    return [float(np.mean(chances < level)) for level in (0.05, 0.5)]
 
 
-def test_chance_of_a_distance_by_hand_and_of_one_place():
-    # V_1 + V_2 = diag(2, 8): T^2 = 4 / 2 + 16 / 8 = 4.
-    chance = chance_of_distance((0, 0), np.diag([1.0, 4.0]), (2, 4), np.diag([1.0, 4.0]))
-    assert chance == pytest.approx(math.exp(-2.0))
-    assert math.isnan(chance_of_distance((0, 0), np.zeros((2, 2)), (2, 4), np.zeros((2, 2))))
+@pytest.mark.parametrize("sizes", [(80, 80), (8, 8), (10, 50), (5, 100)])
+def test_chance_of_a_distance_is_uniform_when_nothing_moved(sizes):
+    # 1,500 pairs: a share of 5 % is known to 0.6 %, one of 50 % to 1.3 %. With chi-square in place
+    # of F the small groups reach 5 % in 11 to 27 % of the pairs.
+    def draw(rng):
+        scale = np.array([[400.0], [150.0]])
+        return [sampled_centre(*(rng.normal(size=(2, size)) * scale)) for size in sizes]
+
+    assert levels_reached(draw, 1500, 12) == pytest.approx([0.05, 0.5], abs=0.03)
+
+
+def test_chance_of_a_distance_allows_for_weights():
+    def draw(rng):
+        return [
+            sampled_centre(*rng.normal(size=(2, size)), rng.integers(1, 6, size))
+            for size in (12, 30)
+        ]
+
+    assert levels_reached(draw, 1500, 13) == pytest.approx([0.05, 0.5], abs=0.03)
+
+
+@pytest.mark.parametrize("moved", [30, 15, 0])
+def test_chance_of_a_distance_counts_who_has_records_in_both_groups(moved):
+    # the same households fall in spring and in summer: both centres share their luck. Taken as
+    # independent, groups of the same households would hardly ever come below 5 %.
+    def draw(rng):
+        groups = []
+        homes = rng.normal(0, 300.0, size=(60, 2))
+        for start in (0, moved):
+            label = np.repeat(np.arange(start, start + 30), rng.integers(1, 4, 30))
+            x, y = (homes[label] + rng.normal(0, 60.0, size=(len(label), 2))).T
+            groups.append(sampled_centre(x, y, None, label))
+        return groups
+
+    reached = levels_reached(draw, 1500, 14)
+    assert reached == pytest.approx([0.05, 0.5], abs=0.035)
+    assert reached[0] > 0.02
+
+
+def test_chance_of_a_distance_of_whole_pairs_is_hotellings_one_sample_test():
+    # Everyone has one record in each group: the differences are one sample, and T^2 (n - 2) /
+    # (2 (n - 1)) is F with 2 and n - 2 (Mardia, Kent & Bibby 1979, section 5.2; scipy's F).
+    rng = np.random.default_rng(15)
+    first, moves = rng.normal(size=(2, 2, 12))
+    label = np.arange(12)
+    groups = [sampled_centre(*places, None, label) for places in (first, first + moves + 0.4)]
+    mean = (moves + 0.4).mean(axis=1)
+    squared = 12 * mean @ np.linalg.solve(np.cov(moves), mean)
+    assert chance_of_distance(*groups) == pytest.approx(stats.f.sf(squared * 10 / 22, 2, 10))
+
+
+def test_chance_of_a_distance_of_many_records_by_hand_and_of_too_few():
+    # Two squares of 10,000 records at each corner, (±1, ±2) times sqrt(20,000): V = 2 diag(20,000,
+    # 80,000) / 40,000 = diag(1, 4) and T^2 = 2^2 / 1 + 4^2 / 4 = 8. F with many degrees of freedom
+    # tends to chi-square(2): exp(-4).
+    corners = np.array([[-1, 1, -1, 1], [-2, -2, 2, 2]]) * math.sqrt(20_000)
+    x, y = np.repeat(corners, 10_000, axis=1)
+    far = sampled_centre(x + 2, y + 4)
+    assert chance_of_distance(sampled_centre(x, y), far) == pytest.approx(math.exp(-4.0), rel=1e-3)
+    for few in ([[0.0], [0.0]], [[0.0, 1.0], [0.0, 3.0]], np.zeros((2, 9))):
+        assert math.isnan(chance_of_distance(sampled_centre(*few), sampled_centre(*few)))
+    # one record pulls its centre nowhere: its certainty must not be taken for granted
+    assert math.isnan(chance_of_distance(sampled_centre([0.0], [0.0]), far))
 
 
 def test_the_same_generator_gives_the_same_ellipse():
