@@ -10,7 +10,6 @@ hide the base map: their darkest channel is near 0, so they would have to be opa
     python tools/choose_inks.py
 """
 
-import importlib.util
 import sys
 from pathlib import Path
 
@@ -23,19 +22,9 @@ STARTS = 150
 NEARLY_BEST = 0.92
 NORMAL_WEIGHT = 2.0
 
+sys.path.insert(0, str(ROOT / "tests"))
 
-def import_checkout():
-    """Load the checkout as the package ``steadfield``."""
-    specification = importlib.util.spec_from_file_location(
-        "steadfield", ROOT / "__init__.py", submodule_search_locations=[str(ROOT)]
-    )
-    package = importlib.util.module_from_spec(specification)
-    sys.modules["steadfield"] = package
-    specification.loader.exec_module(package)
-
-
-import_checkout()
-
+import conftest  # noqa: E402, F401 (loads the checkout as the package ``steadfield``)
 from steadfield.algorithms.numeric import colour, ink  # noqa: E402
 
 

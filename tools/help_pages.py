@@ -3,7 +3,8 @@
 A page is made from an algorithm's own names, help and parameters, from its text in
 tools/help_texts, and from the bands and fields that its example has written (help_examples.py).
 Beside them stand an index that helps to choose, the worked case and the command line.
-Pictures of the practice district come from plugin/help/pictures.
+Pictures of the practice district come from plugin/help/pictures, the looks of all pages from
+plugin/help/style.css, which is written by hand.
 """
 
 import html
@@ -12,7 +13,6 @@ from pathlib import Path
 
 from help_parts import (
     CAUTION,
-    STYLE,
     code,
     linked,
     output_table,
@@ -174,8 +174,7 @@ def pages(algorithms, questions):
     made["index.html"] = _framed(title, [text]).replace(BACK + "\n", "")
     made["commands.html"] = commands_page()
     made["workedcase.html"] = _framed("From question to publication", [filled("workedcase.html")])
-    made = {name: linked(text, by_name) for name, text in made.items()}
-    return {**made, "style.css": STYLE + "\n"}
+    return {name: linked(text, by_name) for name, text in made.items()}
 
 
 def readme():

@@ -7,23 +7,6 @@ from pathlib import Path
 
 TEXTS = Path(__file__).resolve().parent / "help_texts"
 
-STYLE = """body { font: 16px/1.5 "Source Sans 3", "Noto Sans", Helvetica, Arial, sans-serif;
-  color: #23262b; background: #fcfbf8; margin: 0 auto; max-width: 56rem; padding: 1rem 2rem 3rem; }
-h1 { font-size: 1.6rem; line-height: 1.25; margin-bottom: 0.2rem; }
-h2 { font-size: 1.15rem; margin-top: 2rem; } h3 { font-size: 1rem; margin: 1.4rem 0 0.3rem; }
-p, li { max-width: 46rem; } li { margin: 0.25rem 0; }
-img, svg { max-width: 100%; height: auto; } img, .drawing { border: 1px solid #d9d4c7; }
-figure { margin: 1rem 0; } figcaption, .question, .note { color: #5b6068; }
-figcaption { max-width: 46rem; font-size: 0.92rem; }
-table { border-collapse: collapse; font-size: 0.94rem; } td, th { text-align: left;
-  vertical-align: top; padding: 0.3rem 1rem 0.3rem 0; border-bottom: 1px solid #e6e1d5; }
-code { color: #1d4763; } td:first-child code { white-space: nowrap; } .value { color: #5b6068;
-  display: inline-block; min-width: 13rem; }
-pre { background: #f1eee5; padding: 0.7rem 1rem; overflow-x: auto; font-size: 0.88rem;
-  line-height: 1.4; } pre code { color: inherit; }
-td.figure { text-align: right; } .say { border-left: 5px solid #8a5a1c; padding-left: 1rem; }
-.caution { background: #f4eede; padding: 0.5rem 1rem; }"""
-
 CAUTION = (
     "Thresholds, and whether anything may be published, are for the data's owner, local rules and "
     "law to decide, and a map is no substitute for licensed practice. The tool shows what its "

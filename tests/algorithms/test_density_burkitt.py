@@ -51,7 +51,7 @@ def read(path):
 def test_advice_counts_cases_and_places_and_keeps_the_published_constants(
     run, layer, folder, cases, tmp_path
 ):
-    said = re.search(r"burkitt\.shp.*n=(\d+)", (folder / "README.md").read_text())
+    said = re.search(r"burkitt\.shp.*n=(\d+)", (folder / "README.md").read_text(encoding="utf-8"))
     assert len(cases) == int(said[1]) == 188
     results, watcher = run(
         "bandwidthadvice", {"RECORDS": layer, "REPORT": str(tmp_path / "advice.html")}

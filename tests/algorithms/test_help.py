@@ -54,7 +54,7 @@ def test_the_shipped_help_pages_say_what_algorithms_texts_and_demo_say(pages, to
     for name, text in pages.items():
         shipped = (HELP / name).read_text(encoding="utf-8")
         assert shipped == text, f"run tools/help_pages.py: {name} is out of date"
-    shipped = {path.name for path in HELP.iterdir() if path.is_file()}
+    shipped = {path.name for path in HELP.glob("*.html")}
     assert shipped == set(pages)
     readme = (ROOT / "README.md").read_text(encoding="utf-8")
     assert readme == tools[0].readme(), "run tools/help_pages.py: README.md is out of date"

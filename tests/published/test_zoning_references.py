@@ -78,7 +78,7 @@ def counties():
     names = ("FIPSNO", "BIR74", "SID74", "BIR79", "SID79")
     columns = {name: np.array([f[name] for f in features]) for name in names}
     neighbours = set()
-    lines = (folder / "sids2.gal").read_text().splitlines()[1:]
+    lines = (folder / "sids2.gal").read_text(encoding="utf-8").splitlines()[1:]
     for head, listed in zip(lines[::2], lines[1::2]):
         neighbours |= {tuple(sorted((int(head.split()[0]), int(n)))) for n in listed.split()}
     return np.array(shapes, object), columns, neighbours

@@ -1,4 +1,4 @@
-"""Helpers for scripts that run inside the window: one step after the other, then leave."""
+"""Steps for scripts that run inside the window: one step after the other, then leave."""
 
 import json
 import os
