@@ -257,7 +257,10 @@ def method_words(job, study):
             "(multivariate hypergeometric)."
         )
         if study.pooled.counted
-        else tr("Weights move with their records, scaled to add up to the effective number.")
+        else tr(
+            "Weights move with their records, scaled to add up to the effective number; kernels "
+            "and noise take every point alike, since they must not know where the weights lie."
+        )
     )
     words = [
         tr(
@@ -270,7 +273,9 @@ def method_words(job, study):
         tr(
             "What kernels lose beyond the boundary they lose in both densities alike, so the ratio "
             "needs no correction. Ratios beyond 100 either way are shown as 100. No value is given "
-            "below {} effective background points, (sum K)² / sum K² (Kish 1965)."
+            "below {} effective background points, (sum K)² / sum K² (Kish 1965), as they are or "
+            "as the pooled points lead to expect: by what lies there alone, places near the floor "
+            "would be chosen for having much background, and look lowered."
         ).format(number(job.real("LEAST_BACKGROUND"))),
     ]
     if job.whole("RELABELLINGS"):

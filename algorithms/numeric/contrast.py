@@ -51,6 +51,15 @@ class Pooled:
         return float(self.weights[: self.records].sum()), float(self.weights[self.records :].sum())
 
     @property
+    def spread_weights(self):
+        """Weights that tell nothing of the labels, (n,) array.
+
+        Weights that are values change places with the labels, so what must hold for every
+        labelling alike - kernels, noise, where to test - takes each place once.
+        """
+        return self.weights if self.counted else np.ones(self.x.size)
+
+    @property
     def split(self):
         """Weights of records and of background over all n places, two (n,) arrays."""
         records, background = self.weights.copy(), self.weights.copy()
@@ -72,7 +81,9 @@ class Contrast:
     support : (rows, columns) array
         Effective number of background records behind a pixel, 1 where only tails of kernels meet.
     shown : (rows, columns) bool array
-        Inside the boundary and with enough background.
+        Tested, and with enough background as it is.
+    tested : (rows, columns) bool array
+        Inside the boundary and with enough background to be expected under random labels.
     bandwidths : (n,) array
         Of records and background in turn, units of the working CRS.
     raised : int
@@ -85,6 +96,7 @@ class Contrast:
     noise: np.ndarray
     support: np.ndarray
     shown: np.ndarray
+    tested: np.ndarray
     bandwidths: np.ndarray
     raised: int
     pooled: Pooled
@@ -106,7 +118,8 @@ class Relabelling:
         Share of labellings whose log ratio over its noise is somewhere at least as high (low) as it
         is at this pixel: p-values that hold over the whole map.
     highest, lowest : (count + 1,) arrays
-        Largest and smallest log ratio of each labelling, the observed one first.
+        Largest and smallest log ratio of each labelling, the observed one first: the observed one
+        over the pixels shown, the others over all that are tested.
     highest_scaled, lowest_scaled : (count + 1,) arrays
         The same of the log ratio over its noise.
     """
@@ -220,6 +233,13 @@ def density_contrast(
     -------
     Contrast
 
+    Notes
+    -----
+    A floor on the background alone would choose pixels by their labels: near it, places of chance
+    have much background and so a low ratio, and lowered areas would be found too often. So a pixel
+    must pass the floor also with the background that the pooled pattern leads to expect, and
+    labellings are compared over all pixels that do.
+
     Raises
     ------
     InputError
@@ -230,10 +250,11 @@ def density_contrast(
     Kelsall & Diggle (1995), Statistics in Medicine 14:2335-2342; Davies, Jones & Hazelton (2016),
     Computational Statistics & Data Analysis 101:12-28 (symmetric bandwidths).
     """
+    spread_weights = pooled.spread_weights
     adapted = adapt_bandwidths(
         pooled.x,
         pooled.y,
-        pooled.weights,
+        spread_weights,
         bandwidth,
         adapt,
         trim,
@@ -245,10 +266,11 @@ def density_contrast(
     )
     kernels = adapted.bandwidths
     sums = KernelSums(pooled.x, pooled.y, kernels, grid)
-    records, background = sums.sums(np.column_stack(pooled.split))
-    progress(0.6)
     # the transforms leave rounding errors below 0 where nothing reaches
-    records, background = np.maximum(records, 0.0), np.maximum(background, 0.0)
+    records, background, together = np.maximum(
+        sums.sums(np.column_stack([*pooled.split, spread_weights])), 0.0
+    )
+    progress(0.6)
     own = slice(pooled.records, None)
     squares = sampling_variance(
         pooled.x[own],
@@ -260,20 +282,23 @@ def density_contrast(
         progress=part(progress, 0.6, 0.8),
     )
     support = effective_records(background, squares)
-    shown = support >= least_support
+    noise, expected = _under_random_labels(
+        pooled, kernels, grid, together, part(progress, 0.8, 1.0)
+    )
+    tested = expected >= least_support
     if mask is not None:
-        shown &= mask >= 0.5
+        tested &= mask >= 0.5
+    shown = tested & (support >= least_support)
     if not shown.any():
         raise InputError(
             "No pixel has {:g} effective background records behind it (the most is "
             "{:.3g}); lower LEAST_BACKGROUND or widen BANDWIDTH.",
             least_support,
-            support.max(),
+            np.minimum(support, expected).max(),
         )
     log_ratio = np.full(grid.shape, np.nan)
     log_ratio[shown] = _log_ratio(records[shown], background[shown], pooled.totals)
-    noise = _noise(pooled, kernels, grid, records + background, part(progress, 0.8, 1.0))
-    return Contrast(log_ratio, noise, support, shown, kernels, adapted.raised, pooled, sums)
+    return Contrast(log_ratio, noise, support, shown, tested, kernels, adapted.raised, pooled, sums)
 
 
 def _log_ratio(records, background, totals):
@@ -286,22 +311,30 @@ def _log_ratio(records, background, totals):
     return np.log(np.clip(ratio, 1.0 / LARGEST_RATIO, LARGEST_RATIO))
 
 
-def _noise(pooled, bandwidths, grid, total, progress):
-    """Standard deviation of the log ratio under random labels, to first order.
+def _under_random_labels(pooled, bandwidths, grid, total, progress):
+    """Standard deviation of the log ratio, and effective background, when labels are random.
 
-    With a share c of the weight labelled as records, sqrt(sum w K^2 / (c (1 - c))) / sum w K for
-    units and with w^2 for values: sampling without replacement, and d log r = df/f - dg/g.
+    To first order d log r = df/f - dg/g. Sampling without replacement: for units, a share c of
+    them records, the variance is sum w K^2 / (c (1 - c)) / (sum w K)^2. For values it is
+    n (1/n1 + 1/n2) sum K^2 / (sum K)^2 over the n places, n1 and n2 the effective sizes. The
+    effective background is its share of the effective pooled pattern.
     """
-    weights = np.sqrt(pooled.weights) if pooled.counted else pooled.weights
+    weights = pooled.spread_weights
+    places = pooled.x, pooled.y
     squares = sampling_variance(
-        pooled.x, pooled.y, weights, bandwidths, total, grid, progress=progress
+        *places, np.sqrt(weights), bandwidths, total, grid, progress=part(progress, 0.0, 0.5)
     )
-    effective = effective_records(total, squares)
-    share = pooled.totals[0] / sum(pooled.totals)
+    units = effective_records(total, squares)
+    first, second = pooled.totals
+    whole = first + second if pooled.counted else float(pooled.x.size)
     noise = np.full(grid.shape, np.inf)
-    reached = effective > 0
-    noise[reached] = 1.0 / np.sqrt(share * (1.0 - share) * effective[reached])
-    return noise
+    reached = units > 0
+    noise[reached] = np.sqrt(whole * (1 / first + 1 / second) / units[reached])
+    if pooled.counted:
+        squares = sampling_variance(
+            *places, weights, bandwidths, total, grid, progress=part(progress, 0.5, 1.0)
+        )
+    return noise, effective_records(total, squares) * second / whole
 
 
 def relabel(contrast, count, generator, progress=silent):
@@ -329,23 +362,24 @@ def relabel(contrast, count, generator, progress=silent):
     """
     if count < 1:
         raise InputError("RELABELLINGS must be 1 or more; found {}.", count)
-    shown = contrast.shown
-    observed, noise = contrast.log_ratio[shown], contrast.noise[shown]
+    tested, shown = contrast.tested, contrast.shown
+    among = shown[tested]
+    observed, noise = contrast.log_ratio[shown], contrast.noise[tested]
     # Equal labellings must count as equal whatever the rounding of the transforms
     slack = 1e-9
     raised, lowered = np.ones(observed.size, np.int64), np.ones(observed.size, np.int64)
-    extremes = [_extremes(observed, noise)]
+    extremes = [_extremes(observed, noise[among])]
     done = 0
     while done < count:
         batch = min(contrast.sums.batch, count - done)
         for ratio in _relabelled_ratios(contrast, batch, generator):
-            raised += ratio >= observed - slack
-            lowered += ratio <= observed + slack
+            raised += ratio[among] >= observed - slack
+            lowered += ratio[among] <= observed + slack
             extremes.append(_extremes(ratio, noise))
         done += batch
         progress(done / count)
     highest, lowest, highest_scaled, lowest_scaled = np.array(extremes).T
-    scaled = observed / noise
+    scaled = observed / noise[among]
     everywhere = count + 1.0
     return Relabelling(
         count,
@@ -366,8 +400,8 @@ def _extremes(ratio, noise):
 
 
 def _relabelled_ratios(contrast, batch, generator):
-    """Yield the log ratios of one batch of relabellings at the pixels that are shown."""
-    pooled, shown = contrast.pooled, contrast.shown
+    """Yield the log ratios of one batch of relabellings at the pixels that are tested."""
+    pooled, tested = contrast.pooled, contrast.tested
     split = pooled.records
     if pooled.counted:
         counts = pooled.weights.astype(np.int64)
@@ -377,9 +411,9 @@ def _relabelled_ratios(contrast, batch, generator):
             planes[:, one] = relabelled_counts(counts, cases, generator)
         planes[:, batch] = pooled.weights
         surfaces = contrast.sums.sums(planes)
-        total = surfaces[-1][shown]
+        total = surfaces[-1][tested]
         for surface in surfaces[:-1]:
-            records = surface[shown]
+            records = surface[tested]
             yield _log_ratio(records, total - records, pooled.totals)
         return
     planes = []
@@ -387,7 +421,7 @@ def _relabelled_ratios(contrast, batch, generator):
         planes += relabelled_values(pooled.weights[:split], pooled.weights[split:], generator)
     surfaces = contrast.sums.sums(np.column_stack(planes))
     for records, background in zip(surfaces[0::2], surfaces[1::2]):
-        yield _log_ratio(records[shown], background[shown], pooled.totals)
+        yield _log_ratio(records[tested], background[tested], pooled.totals)
 
 
 def _share_at_least(maxima, values):

@@ -177,9 +177,29 @@ def test_noise_is_the_spread_over_random_labels(weights_mean):
     while len(ratios) < 300:
         ratios.extend(contrast._relabelled_ratios(found, 20, generator))
     spread = np.std(ratios, axis=0)
-    relative = spread / found.noise[found.shown]
+    relative = spread / found.noise[found.tested]
     assert abs(np.median(relative) - 1) < 0.1
     assert np.all(np.abs(relative - 1) < 0.35)
+
+
+@pytest.mark.parametrize("weights_mean", ["counts", "values"])
+def test_where_to_test_kernels_and_noise_know_nothing_of_the_labels(weights_mean):
+    # what the observed labels have a say in is not exchangeable with the labels drawn: with a floor
+    # on the observed background alone, twice as many chance maps as stated were called lowered
+    generator = np.random.default_rng(31)
+    places = generator.normal(0, 700, (2, 200))
+    weights = np.ones(200) if weights_mean == "counts" else generator.lognormal(0, 1.2, 200)
+    found = []
+    for _ in range(2):
+        mixed = places[:, generator.permutation(200)]
+        groups = [(*mixed[:, part], weights[part]) for part in (slice(80), slice(80, None))]
+        pooled = contrast.pool(*groups, weights_mean)
+        found.append(contrast.density_contrast(pooled, GRID, 350.0, least_support=5.0))
+    assert found[0].tested.sum() > 100 and np.any(found[0].shown != found[1].shown)
+    np.testing.assert_array_equal(found[0].tested, found[1].tested)
+    np.testing.assert_allclose(found[0].noise[found[0].tested], found[1].noise[found[0].tested])
+    for one in found:
+        assert not np.any(one.shown & ~one.tested)
 
 
 def test_p_values_over_the_map_are_shares_of_labellings():
