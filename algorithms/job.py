@@ -4,9 +4,8 @@ import os
 
 from qgis.core import QgsProcessingException
 
-from ..plugin import outputs, rasters
+from ..plugin import opening, outputs, rasters
 from ..plugin.files import partial_path, put_in_place
-from ..plugin.looks import style_output
 from ..plugin.pictures import drawing_to_png
 from ..plugin.report import versions
 from ..plugin.text import tr
@@ -16,6 +15,10 @@ from .numeric.errors import CancelledError, InputError
 
 class Job(Inputs):
     """One run; what it wrote is taken back when the run fails or is cancelled."""
+
+    def __init__(self, *run):
+        super().__init__(*run)
+        self._step = opening.next_step()
 
     def discard(self):
         """Take back what was written; name what cannot be removed, for it may be confidential."""
@@ -128,7 +131,9 @@ class Job(Inputs):
         if target not in self._written:
             self._written.append(target)
         self.results[name] = target
-        style_output(target, kind, look, aliases or {}, self.context)
+        outputs_in_order = [one.name() for one in self.algorithm.destinationParameterDefinitions()]
+        place = (self._step, -outputs_in_order.index(name))
+        opening.style_output(target, kind, look, aliases or {}, place, self.context)
 
     def write_report(self, report, method, cautions, name="REPORT"):
         """Finish a report with method, parameters, versions and cautions, and write it.

@@ -16,6 +16,7 @@ from qgis.core import (
 
 from ..plugin import practice_looks as looks
 from ..plugin.geopackage import Table, write_geopackage
+from ..plugin.opening import open_with
 from ..plugin.outputs import Column
 from ..plugin.reference_system import chosen_crs
 from ..plugin.text import number, tr
@@ -306,6 +307,12 @@ def _rate(zones):
 
 
 def _open_when_done(path, tables, context):
-    for table in tables:
+    for place, table in enumerate(tables):
+        target = f"{path}|layername={table.name}"
         details = QgsProcessingContext.LayerDetails(table.title, context.project(), table.name)
-        context.addLayerToLoadOnCompletion(f"{path}|layername={table.name}", details)
+        context.addLayerToLoadOnCompletion(target, details)
+        open_with(target, _as_stored, lambda layer, place=place: place, context)
+
+
+def _as_stored(layer):
+    layer.loadDefaultStyle()

@@ -3,7 +3,6 @@
 A look is a callable that takes a loaded layer and sets its renderer.
 """
 
-import os
 from itertools import cycle
 
 import numpy as np
@@ -14,19 +13,14 @@ from qgis.core import (
     QgsFillSymbol,
     QgsGraduatedSymbolRenderer,
     QgsLineSymbol,
-    QgsMapLayer,
     QgsMarkerSymbol,
     QgsMultiBandColorRenderer,
     QgsPalettedRasterRenderer,
-    QgsProcessingLayerPostProcessorInterface,
-    QgsProcessingUtils,
-    QgsRasterLayer,
     QgsRasterShader,
     QgsRendererCategory,
     QgsRendererRange,
     QgsSingleBandPseudoColorRenderer,
     QgsSingleSymbolRenderer,
-    QgsVectorLayer,
     QgsWkbTypes,
 )
 from qgis.PyQt.QtGui import QColor
@@ -44,10 +38,6 @@ MARKERS = ("circle", "square", "triangle", "diamond", "pentagon", "cross_fill", 
 MISSING = "#ecebe6"
 # What cannot be told from noise.
 NOISE = "#b9b6b0"
-
-DATA_ENDINGS = (".tif", ".tiff", ".img", ".gpkg", ".shp", ".geojson", ".fgb", ".csv", ".sqlite")
-
-_kept = {}
 
 
 def verdict_words():
@@ -301,82 +291,3 @@ def picture(layer):
     renderer = QgsMultiBandColorRenderer(layer.dataProvider(), 1, 2, 3)
     renderer.setAlphaBand(4)
     layer.setRenderer(renderer)
-
-
-class _Styler(QgsProcessingLayerPostProcessorInterface):
-    """Styles a layer when the host has loaded it."""
-
-    def __init__(self, target, apply):
-        super().__init__()
-        self._target = target
-        self._apply = apply
-
-    def postProcessLayer(self, layer, context, feedback):
-        self._apply(layer)
-        layer.triggerRepaint()
-        _kept.pop(self._target, None)
-
-
-def _shares_its_style_file(target):
-    """Whether another data set beside the target would open with the target's style file."""
-    stem, ending = os.path.splitext(target)
-    return any(os.path.exists(stem + other) for other in DATA_ENDINGS if other != ending.lower())
-
-
-def style_output(target, kind, look, aliases, context):
-    """Make an output open with its look and field aliases, whichever way it is opened.
-
-    A file of one layer gets a style file beside it, which the host reads by itself; a layer that
-    the host loads when the run ends is styled then.
-
-    Parameters
-    ----------
-    target : str
-        Path or id of the output.
-    kind : str
-        ``raster`` or ``vector``.
-    look : callable or None
-    aliases : dict of str to str
-    context : QgsProcessingContext
-    """
-    if look is None and not aliases:
-        return
-
-    def name_fields(layer):
-        for name, alias in aliases.items():
-            index = layer.fields().indexFromName(name)
-            if index >= 0:
-                layer.setFieldAlias(index, alias)
-
-    def apply(layer):
-        name_fields(layer)
-        if look is not None:
-            look(layer)
-
-    if os.path.isfile(target):
-        raster = kind == "raster"
-        layer = (QgsRasterLayer if raster else QgsVectorLayer)(
-            target, "output", "gdal" if raster else "ogr"
-        )
-        if layer.isValid():
-            apply(layer)
-            kinds = QgsMapLayer.StyleCategory.Symbology
-            if not raster and layer.labelsEnabled():
-                kinds |= QgsMapLayer.StyleCategory.Labeling
-            if aliases:
-                kinds |= QgsMapLayer.StyleCategory.Fields
-            if not _shares_its_style_file(target):
-                layer.saveNamedStyle(os.path.splitext(target)[0] + ".qml", kinds)
-        del layer
-        # opening a raster made the host note statistics of its values beside the file
-        if os.path.exists(target + ".aux.xml"):
-            os.remove(target + ".aux.xml")
-    else:
-        held = QgsProcessingUtils.mapLayerFromString(target, context)
-        if held is None:
-            return
-        name_fields(held)
-    if context.willLoadLayerOnCompletion(target):
-        # the host keeps no reference of its own
-        _kept[target] = _Styler(target, apply)
-        context.layerToLoadOnCompletionDetails(target).setPostProcessor(_kept[target])

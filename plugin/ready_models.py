@@ -5,7 +5,7 @@ from pathlib import Path
 from qgis.core import Qgis, QgsMessageLog, QgsProcessingModelAlgorithm
 from qgis.PyQt.QtGui import QIcon
 
-from . import looks, model_looks
+from . import looks, model_looks, opening
 from .text import tr
 
 FOLDER = Path(__file__).resolve().parent / "models"
@@ -74,7 +74,8 @@ class ReadyModel(QgsProcessingModelAlgorithm):
         results = super().processAlgorithm(parameters, context, feedback)
         for output, (kind, look) in _looks().get(self.name(), {}).items():
             if results.get(output):
-                looks.style_output(results[output], kind, look, {}, context)
+                place = (opening.next_step(),)
+                opening.style_output(results[output], kind, look, {}, place, context)
         return results
 
 
