@@ -14,6 +14,7 @@ from .zoning_pages import (
     source_words,
     statistic_words,
     summaries,
+    verdict_cautions,
 )
 
 
@@ -299,6 +300,7 @@ def caution_words(study):
             "A place that holds does so against cells of the sizes and shape tried here; official "
             "areas may be cut in ways that no regular tiling resembles."
         ),
+        *verdict_cautions(),
         tr(
             "Values of small cells may point to single persons. Neither this page nor the raster "
             "is made for release; use the tools of the group Safe release for what is published."

@@ -13,6 +13,7 @@ from .zoning_pages import (
     source_words,
     statistic_words,
     summaries,
+    verdict_cautions,
 )
 from .zoning_units import builder_words
 
@@ -370,6 +371,7 @@ def caution_words(study):
             "A unit that holds does so against random zonings of these base units at these numbers "
             "of zones; how the base units themselves were drawn is not put to the test."
         ),
+        *verdict_cautions(),
         tr(
             "Simulated zones follow no river, road or history. An official zoning that stands out "
             "among them may have good reasons to."

@@ -38,6 +38,23 @@ def source_words():
     }
 
 
+def verdict_cautions():
+    """What a verdict place by place does not say, for the reports of both tools."""
+    return [
+        tr(
+            "A verdict is about one place, not about the map. On maps of pure noise one place in "
+            "a hundred or fewer is called settled on average, but one map in three has some such "
+            "place, and a few have one of 5 % of the people. A lone small place is a reason to "
+            "look, not a finding."
+        ),
+        tr(
+            "Counting noise takes events as independent. Where the same people or households have "
+            "several, chance is larger than it is taken for, and places are called settled too "
+            "often: count people, or keep one event of each."
+        ),
+    ]
+
+
 def summaries(statistics, factor):
     """Rows (statistic, lowest, q05, q50, q95, highest) of the scenarios of one scale.
 
@@ -192,12 +209,14 @@ def allocation_words(found):
             percent(high / events),
         ),
         tr(
-            "Where lines run thus decides over {} events out of {}. Places chosen by the value "
-            "averaged over all zonings reach {}, {} events {} than the middling zoning; places "
-            "drawn at random would reach {}."
+            "Between them lie {} events out of {}. Up to about {} would lie there by luck, if all "
+            "zonings chose equally good places; only what is beyond that is owed to where lines "
+            "run. Places chosen by the value averaged over all zonings reach {}, {} events {} than "
+            "the middling zoning; places drawn at random would reach {}."
         ).format(
             number(round(high - low)),
             number(events),
+            number(round(found.by_luck)),
             percent(found.averaged / events),
             number(abs(round(found.averaged - middle))),
             tr("more") if found.averaged >= middle else tr("fewer"),

@@ -95,6 +95,18 @@ def test_held_out_choice_on_pure_noise_gains_nothing():
     assert abs(share.mean() - 0.2) < 4 * share.std() / np.sqrt(4000)
 
 
+def test_luck_alone_spreads_zonings_of_equally_good_places_as_stated():
+    # 400 zones of 25 people each and one risk everywhere: whatever 40 zones are chosen, they are
+    # as good as any others, and nine tenths of such choices spread by luck alone.
+    rng = np.random.default_rng(41)
+    people = np.full(400, 25.0)
+    counts = rng.poisson(0.1 * people).astype(float)
+    reached = [allocation.events_reached(rng.random(400), people, counts, 0.1) for _ in range(4000)]
+    found = allocation.Allocation(0.1, counts.sum(), np.array(reached), 0.0, None, 0.0)
+    low, _, high = found.quantiles()
+    assert found.by_luck == pytest.approx(high - low, rel=0.1)
+
+
 def test_summary_places_the_official_zoning_among_the_scenarios():
     made = allocation.Allocation(0.2, 100.0, np.array([20.0, 30, 30, 40]), 41.0, 30.0, 60.0)
     assert made.official_place() == 0.5
