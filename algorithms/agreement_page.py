@@ -43,6 +43,11 @@ CAUTIONS = [
         "may still go if the share of a core is changed."
     ),
     tr(
+        "Surfaces without an edge correction all fade towards the border of their area, and meet "
+        "in its middle for that reason: of unrelated even patterns one pair in four then passes as "
+        "meeting more than chance. Make densities with a boundary and corrected edges."
+    ),
+    tr(
         "The p-values are for one pair at a time; among many pairs some are small by chance. On "
         "layers that vary very slowly across the area the test rejects a little too often."
     ),
