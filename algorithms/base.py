@@ -23,7 +23,7 @@ from qgis.core import (
 )
 from qgis.PyQt.QtGui import QIcon
 
-from ..plugin.host import ANY_VECTOR, METRES, POINTS, POLYGONS, RASTERS
+from ..plugin.host import METRES, POINTS, POLYGONS, RASTERS, TABLE
 from ..plugin.text import said, tr
 from .job import Job
 from .numeric.errors import CancelledError, InputError
@@ -111,6 +111,7 @@ class SteadfieldAlgorithm(QgsProcessingAlgorithm):
     def processAlgorithm(self, parameters, context, feedback):
         job = Job(self, parameters, context, feedback)
         try:
+            job.check_tables()
             self.work(job)
             job.progress(1.0)
         except CancelledError as error:
@@ -319,9 +320,7 @@ class SteadfieldAlgorithm(QgsProcessingAlgorithm):
     def add_table(self, name, label, help="", optional=False):
         """Add a table output, a vector output without geometry."""
         self.add(
-            QgsProcessingParameterFeatureSink(
-                name, label, ANY_VECTOR, None, optional, not optional
-            ),
+            QgsProcessingParameterFeatureSink(name, label, TABLE, None, optional, not optional),
             help,
         )
 

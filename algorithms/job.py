@@ -6,6 +6,7 @@ from qgis.core import QgsProcessingException
 
 from ..plugin import opening, outputs, rasters
 from ..plugin.files import partial_path, put_in_place
+from ..plugin.host import TABLE
 from ..plugin.pictures import drawing_to_png
 from ..plugin.report import versions
 from ..plugin.text import tr
@@ -39,6 +40,23 @@ class Job(Inputs):
             self.context.temporaryLayerStore().removeMapLayer(target)
         self._written = []
         self.results = {}
+
+    def check_tables(self):
+        """Refuse, before the work, a table that would be written as a shapefile.
+
+        The host would write its attributes, report a file that is not there and load nothing.
+        """
+        for definition in self.algorithm.destinationParameterDefinitions():
+            if definition.type() != "sink" or definition.dataType() != TABLE:
+                continue
+            path = outputs.asked_path(self.parameters.get(definition.name()), self.context)
+            if path.lower().endswith(".shp"):
+                raise InputError(
+                    tr(
+                        "{}: a table has no geometry and cannot be a shapefile; choose a name that "
+                        "ends in .csv, .xlsx or .gpkg; found {}."
+                    ).format(self.label(definition.name()), os.path.basename(path))
+                )
 
     def write_raster(self, name, grid, bands, look=None, **how):
         """Write a raster output and set how it opens; skipped where it is not wanted.

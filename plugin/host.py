@@ -16,7 +16,8 @@ else:
     METRES = QgsUnitTypes.DistanceUnit.DistanceMeters
 
 if Qgis.QGIS_VERSION_INT >= 33600:
-    ANY_VECTOR = Qgis.ProcessingSourceType.Vector
+    ANY_VECTOR = Qgis.ProcessingSourceType.VectorAnyGeometry
+    TABLE = Qgis.ProcessingSourceType.Vector
     POINTS = Qgis.ProcessingSourceType.VectorPoint
     LINES = Qgis.ProcessingSourceType.VectorLine
     POLYGONS = Qgis.ProcessingSourceType.VectorPolygon
@@ -24,6 +25,7 @@ if Qgis.QGIS_VERSION_INT >= 33600:
     SKIP_VALIDITY_CHECKS = Qgis.ProcessingFeatureSourceFlag.SkipGeometryValidityChecks
 else:
     ANY_VECTOR = QgsProcessing.SourceType.TypeVectorAnyGeometry
+    TABLE = QgsProcessing.SourceType.TypeVector
     POINTS = QgsProcessing.SourceType.TypeVectorPoint
     LINES = QgsProcessing.SourceType.TypeVectorLine
     POLYGONS = QgsProcessing.SourceType.TypeVectorPolygon

@@ -31,6 +31,8 @@ GEOMETRIES = {
     "none": QgsWkbTypes.Type.NoGeometry,
 }
 CHUNK = 20_000
+# names under which files number their rows themselves: a field of that name cannot be handed on
+ROW_NUMBERS = frozenset({"fid", "ogc_fid"})
 # formats that keep a layer in one file
 SINGLE_FILES = (".gpkg", ".geojson", ".fgb", ".csv")
 
@@ -55,6 +57,47 @@ class Column:
     kind: str
     values: object
     alias: str = ""
+
+
+def kept_columns(values, columns, ending):
+    """The fields of an input, to stand beside a tool's own.
+
+    Parameters
+    ----------
+    values : dict of str to (n,) array
+        As `layers.read` gives them.
+    columns : sequence of Column
+        The tool's own, whose names they must not take; names differ by more than their case.
+    ending : str
+        Put behind a name that is taken, as often as it takes.
+
+    Returns
+    -------
+    list of Column
+        In the order of ``values``.
+    """
+    own = {column.name.lower() for column in columns}
+    taken = own | {name.lower() for name in values}
+    kept = []
+    for name, column in values.items():
+        free = name
+        if name.lower() in own:
+            while free.lower() in taken:
+                free += ending
+            taken.add(free.lower())
+        kept.append(Column(free, kind_of(column), column))
+    return kept
+
+
+def kind_of(values):
+    """The kind of field that holds an array as `layers.read` gives it: int, float or text."""
+    if values.dtype.kind == "f":
+        return "float"
+    if values.dtype.kind in "iu":
+        return "int"
+    known = [value for value in values if value is not None]
+    whole = known and all(isinstance(value, (int, np.integer)) for value in known)
+    return "int" if whole else "text"
 
 
 def fields_of(columns):
@@ -127,6 +170,13 @@ def fill_sink(sink, fields, columns, geometry, progress):
             chunk = []
             progress(written / total)
     return not chunk or sink.addFeatures(chunk, QgsFeatureSink.Flag.FastInsert)
+
+
+def asked_path(value, context):
+    """The path or other destination that the value of a sink parameter asks for, as text."""
+    if isinstance(value, QgsProcessingOutputLayerDefinition):
+        value = value.sink.valueAsString(context.expressionContext())[0]
+    return value if isinstance(value, str) else ""
 
 
 class FileAside:

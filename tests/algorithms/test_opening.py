@@ -2,7 +2,12 @@
 
 import numpy as np
 import pytest
-from qgis.core import QgsProject, QgsVectorLayer
+from qgis.core import (
+    QgsProcessingException,
+    QgsProcessingOutputLayerDefinition,
+    QgsProject,
+    QgsVectorLayer,
+)
 
 TENTH = 2
 FROM_ABOVE = [
@@ -107,3 +112,20 @@ def test_fields_of_a_shapefile_stay_apart_and_keep_their_aliases(load, records, 
     assert aliases["standard_d"] == "Standard distance (m)"
     again = QgsVectorLayer(str(tmp_path / "centres.shp"), "again", "ogr")
     assert again.attributeAlias(again.fields().indexFromName("standard_d")).endswith("(m)")
+
+
+@pytest.mark.parametrize("wrap", [str, QgsProcessingOutputLayerDefinition])
+def test_a_table_as_a_shapefile_is_refused_before_the_work(run, records, tmp_path, wrap):
+    asked = {"RECORDS": records, "REPORT": "TEMPORARY_OUTPUT"}
+    asked["TABLE"] = wrap(str(tmp_path / "sizes.SHP"))
+    with pytest.raises(QgsProcessingException, match=r"\(TABLE\).*\.csv, \.xlsx.*found sizes\.SHP"):
+        run("cellsize", asked)
+    assert not list(tmp_path.iterdir())
+
+
+def test_a_table_can_be_a_spreadsheet(load, records, tmp_path, provider):
+    table = provider.algorithm("cellsize").parameterDefinition("TABLE")
+    assert ".xlsx" in table.createFileFilter()
+    path = str(tmp_path / "sizes.xlsx")
+    (layer,) = load("cellsize", RECORDS=records, TABLE=path, REPORT="TEMPORARY_OUTPUT")
+    assert layer.featureCount() > 3
