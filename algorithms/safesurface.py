@@ -1,6 +1,6 @@
 """Disclosure-safe density surface: no peak and no hole points at one address."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import shapely
@@ -11,16 +11,26 @@ from ..plugin.text import number, tr
 from .base import SteadfieldAlgorithm
 from .numeric import bandwidth as rules_of_thumb
 from .numeric import edges
+from .numeric.cell_size import two_digits
 from .numeric.disclosure import Rules, contributor_codes
 from .numeric.errors import InputError
 from .numeric.grid import covering
+from .numeric.microaggregation import Groups
 from .numeric.progress import part
-from .numeric.safe_surface import hidden_groups, kernel_widths, safe_surface
+from .numeric.safe_surface import (
+    STEP,
+    PointsAtAddressesError,
+    hidden_groups,
+    kernel_widths,
+    safe_surface,
+)
 from .safesurface_page import write_page
 
 MOST_PIXELS = 4_000_000
 # bandwidths beyond a group that a surface without a boundary reaches
 MARGIN = 3.0
+# how often a bandwidth that was left to the tool is widened before the run is refused
+MOST_WIDENINGS = 3
 
 
 @dataclass(frozen=True)
@@ -33,6 +43,7 @@ class Study:
     contributors: object
     boundary: object
     least: int
+    groups: Groups
     bandwidth: float
     grid: object
 
@@ -89,7 +100,8 @@ class SafeSurface(SteadfieldAlgorithm):
             tr("Least bandwidth"),
             tr(
                 "No kernel is narrower; where records are few it is as wide as their group. Empty: "
-                "by the normal-scale rule, rounded."
+                "by the normal-scale rule, rounded, and wider where the surface would point at "
+                "single addresses."
             ),
         )
         self.add_length(
@@ -111,14 +123,7 @@ class SafeSurface(SteadfieldAlgorithm):
         )
 
     def work(self, job):
-        study = prepare(job)
-        mask = None
-        if study.boundary is not None:
-            mask = edges.boundary_mask(study.boundary, study.grid)
-        found = safe_surface(
-            study.x, study.y, study.least, study.bandwidth, study.grid, np.random.default_rng(0),
-            study.weights, study.contributors, mask, part(job.progress, 0.15, 0.95),
-        )  # fmt: skip
+        study, found = withstand(job, prepare(job))
         density = found.density * 1e6 / job.working.metres**2
         unit = tr("per km²")
         look = looks.ramp(1, looks.root_stops(float(np.nanmax(density))), unit)
@@ -131,6 +136,45 @@ class SafeSurface(SteadfieldAlgorithm):
         job.give("ADDRESSES_ALONE", found.attack.addresses)
         job.give("ADDRESSES_FOUND", found.attack.found)
         write_page(self, job, study, found, density)
+
+
+def withstand(job, study):
+    """Make the surface; a bandwidth that the tool chose is widened until the attack fails.
+
+    Returns
+    -------
+    study : Study
+        With the bandwidth and the grid that were used.
+    found : numeric.safe_surface.SafeSurface
+    """
+    chosen = job.length("BANDWIDTH") == 0
+    start, end = 0.15, 0.55 if chosen else 0.95
+    for widenings in range(MOST_WIDENINGS + 1):
+        try:
+            return study, attacked_surface(study, part(job.progress, start, end))
+        except PointsAtAddressesError:
+            if not chosen or widenings == MOST_WIDENINGS:
+                raise
+        start, end = end, (end + 0.95) / 2
+        width = two_digits(study.bandwidth * STEP * job.working.metres) / job.working.metres
+        job.inform(
+            tr("The surface points at single addresses; the least bandwidth becomes {} m.").format(
+                number(width * job.working.metres)
+            )
+        )
+        grid = grid_of(job, width, study.groups, study.boundary)
+        study = replace(study, bandwidth=width, grid=grid)
+
+
+def attacked_surface(study, progress):
+    """The surface, once the attack on it has failed."""
+    mask = None
+    if study.boundary is not None:
+        mask = edges.boundary_mask(study.boundary, study.grid)
+    return safe_surface(
+        study.x, study.y, study.least, study.bandwidth, study.grid, np.random.default_rng(0),
+        study.weights, study.contributors, mask, progress,
+    )  # fmt: skip
 
 
 def prepare(job):
@@ -171,7 +215,7 @@ def prepare(job):
     groups = hidden_groups(x, y, least, weights, contributors, part(job.progress, 0.1, 0.15))
     width = bandwidth_of(job, x, y, weights)
     grid = grid_of(job, width, groups, boundary)
-    return Study(x, y, weights, contributors, boundary, least, width, grid)
+    return Study(x, y, weights, contributors, boundary, least, groups, width, grid)
 
 
 def bandwidth_of(job, x, y, weights):
@@ -180,7 +224,7 @@ def bandwidth_of(job, x, y, weights):
     if asked > 0:
         return asked
     metres = rules_of_thumb.normal_scale(x, y, weights) * job.working.metres
-    chosen = float(f"{metres:.1e}")
+    chosen = two_digits(metres)
     job.inform(tr("Least bandwidth chosen: {} m").format(number(chosen)))
     return chosen / job.working.metres
 

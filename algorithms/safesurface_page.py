@@ -95,7 +95,8 @@ def method_words(study):
         tr(
             "Attack: peaks and holes of the raster and of its Richardson-Lucy deconvolution at "
             "several bandwidths, compared with true addresses that lie by themselves; chance "
-            "by moving the peaks about."
+            "by moving the peaks about. A bandwidth left to the tool is widened in steps of the "
+            "square root of 2, up to three times, until the attack fails."
         ),
     ]
 

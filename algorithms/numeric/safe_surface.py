@@ -21,6 +21,10 @@ LEAST_KEPT = 0.1
 STEP = 2.0**0.5
 
 
+class PointsAtAddressesError(InputError):
+    """The attack on the finished surface found more single addresses than chance explains."""
+
+
 @dataclass(frozen=True)
 class SafeSurface:
     """The surface and what was found about it.
@@ -138,8 +142,10 @@ def safe_surface(
 
     Raises
     ------
+    PointsAtAddressesError
+        If the attack finds more single addresses than chance explains.
     InputError
-        If the attack finds more single addresses than chance explains, or nothing is left.
+        If nothing is left.
     """
     groups = hidden_groups(x, y, least, weights, contributors, part(progress, 0.0, 0.2))
     widths = kernel_widths(bandwidth, groups)
@@ -173,10 +179,10 @@ def safe_surface(
         part(progress, 0.55, 1.0),
     )  # fmt: skip
     if result.succeeded:
-        raise InputError(
+        raise PointsAtAddressesError(
             "The finished surface points at {} of {} addresses that lie by themselves, "
             "against {:.1f} by chance; nothing is released. Choose a larger BANDWIDTH or "
-            "LEAST_COUNT.",
+            "LEAST_COUNT, and name the CONTRIBUTOR where one stands behind several records.",
             result.found,
             result.addresses,
             result.by_chance,

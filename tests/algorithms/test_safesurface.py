@@ -175,3 +175,47 @@ def test_a_cancelled_run_leaves_nothing(made, tmp_path):
     with pytest.raises(QgsProcessingException):
         made(cancel_at=0.3)
     assert not list(tmp_path.iterdir())
+
+
+@pytest.fixture
+def attack_succeeds_below(monkeypatch):
+    """Let the attack succeed on every surface of a narrower bandwidth than given."""
+    from steadfield.algorithms import safesurface
+    from steadfield.algorithms.numeric.safe_surface import PointsAtAddressesError
+
+    made_of = safesurface.safe_surface
+
+    def set_limit(limit):
+        def guarded(x, y, least, bandwidth, *rest):
+            if bandwidth < limit:
+                raise PointsAtAddressesError("points at single addresses")
+            return made_of(x, y, least, bandwidth, *rest)
+
+        monkeypatch.setattr(safesurface, "safe_surface", guarded)
+
+    return set_limit
+
+
+def test_a_bandwidth_left_to_the_tool_is_widened_until_the_attack_fails(
+    made, attack_succeeds_below
+):
+    plain, _ = made(BANDWIDTH=None, CELL_SIZE=None)
+    attack_succeeds_below(1.9 * plain["BANDWIDTH_USED"])
+    wider, watcher = made(BANDWIDTH=None, CELL_SIZE=None)
+    # two steps of the square root of 2, each rounded to two digits
+    assert wider["BANDWIDTH_USED"] == pytest.approx(2 * plain["BANDWIDTH_USED"], rel=0.05)
+    assert wider["CELL_SIZE_USED"] == pytest.approx(wider["BANDWIDTH_USED"] / 3, rel=0.05)
+    assert sum("points at single addresses" in words for words in watcher.informed) == 2
+    assert watcher.shares == sorted(watcher.shares)
+
+
+def test_a_surface_that_no_widening_saves_is_refused(made, attack_succeeds_below):
+    attack_succeeds_below(np.inf)
+    with pytest.raises(QgsProcessingException, match="points at single addresses"):
+        made(BANDWIDTH=None, CELL_SIZE=None)
+
+
+def test_a_bandwidth_that_was_asked_for_is_never_widened(made, attack_succeeds_below):
+    attack_succeeds_below(200)
+    with pytest.raises(QgsProcessingException, match="points at single addresses"):
+        made(BANDWIDTH=150)
