@@ -49,7 +49,10 @@ class AdaptiveDensity(SteadfieldAlgorithm):
         self.add_raster(
             "ERROR",
             tr("Relative standard error"),
-            tr("Standard error of the density over the density: 0.3 is give or take 30 %."),
+            tr(
+                "Standard error of the density over the density: 0.3 is give or take 30 %, in two "
+                "of three cases."
+            ),
             optional=True,
         )
         self.add_raster(
@@ -120,7 +123,10 @@ class AdaptiveDensity(SteadfieldAlgorithm):
         self.add_number(
             "MOST_ERROR",
             tr("Largest relative standard error"),
-            tr("0.3 asks for about 11 effective records, 0.5 for 4."),
+            tr(
+                "0.3 asks for about 11 effective records with one bandwidth for all, 0.5 for 4; "
+                "for up to twice as many where bandwidths adapt."
+            ),
             default=0.3,
             least=0.01,
             most=1.0,
@@ -141,6 +147,7 @@ class AdaptiveDensity(SteadfieldAlgorithm):
             study.kernel,
             mask,
             study.edge,
+            study.adaptation.inflation,
             part(job.progress, 0.4, 0.85),
         )
         steady = without_noise(found, job.real("MOST_ERROR"))

@@ -242,10 +242,12 @@ def method_words(job, study):
         ).format(number(study.pilot * job.working.metres), rule, number(job.real("ADAPT"))),
         tr(
             "The standard error is that of a Poisson pattern, the root of the sum of squared "
-            "weighted kernels; the effective records are the square of the sum over the sum of "
-            "squares (Kish 1965). Kernels are summed within 0.01 % of the peak of the exact sum by "
-            "non-uniform Fourier transforms on a ladder of bandwidths (Greengard & Lee 2004, SIAM "
-            "Rev. 46:443; Davies & Baddeley 2018, Stat. Comput. 28:937), or exactly."
+            "weighted kernels, raised by what chance does to the bandwidths themselves where these "
+            "follow the density (first order). The effective records are the square of the sum "
+            "over the sum of squares (Kish 1965). Kernels are summed within 0.01 % of the peak of "
+            "the exact sum by non-uniform Fourier transforms on a ladder of bandwidths (Greengard "
+            "& Lee 2004, SIAM Rev. 46:443; Davies & Baddeley 2018, Stat. Comput. 28:937), or "
+            "exactly."
         ),
     ]
     corrections = {
@@ -273,8 +275,10 @@ def caution_words(study):
             "records. Compare with a background before drawing conclusions."
         ),
         tr(
-            "The error says what chance does to the number of records at this bandwidth. It does "
-            "not say that the bandwidth is right, nor that the records are complete."
+            "The error says what chance does to the smoothed density at this bandwidth. It does "
+            "not say that the bandwidth is right, nor that the records are complete. One standard "
+            "error holds in two of three cases; for 19 of 20 multiply and divide by exp(2 × error) "
+            "instead, which holds a little less often where few records stand behind a place."
         ),
         tr(
             "The surface is not safe for release as it is: a lonely record shows as a hill around "

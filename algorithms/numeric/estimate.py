@@ -20,7 +20,9 @@ class Estimate:
     density : (rows, columns) array
         Sum of weighted kernels, corrected at the edges, per unit of the CRS squared.
     squares : (rows, columns) array
-        Its variance under Poisson sampling, per unit to the fourth.
+        Its variance under Poisson sampling with the bandwidths given, per unit to the fourth.
+    inflation : (rows, columns) array or 1.0
+        Factor by which the variance is larger because the bandwidths follow the records.
     mask : (rows, columns) array or None
         Share of each pixel inside the boundary.
     inside : (rows, columns) bool array
@@ -31,6 +33,7 @@ class Estimate:
 
     density: np.ndarray
     squares: np.ndarray
+    inflation: np.ndarray
     mask: np.ndarray
     inside: np.ndarray
     mass: float
@@ -42,13 +45,19 @@ class Estimate:
 
     @property
     def relative_error(self):
-        """Standard error over density, see surface.relative_standard_error."""
-        return surface.relative_standard_error(self.density, self.squares)
+        """Standard error over density, (rows, columns) array; NaN where nothing reaches.
+
+        That of surface.relative_standard_error times the root of the inflation, so with adaptive
+        bandwidths above the effective records to the power of -1/2.
+        """
+        plain = surface.relative_standard_error(self.density, self.squares)
+        return plain * np.sqrt(self.inflation)
 
 
 def estimate(
-    x, y, weights, bandwidths, grid, kernel="gaussian", mask=None, edge="none", progress=silent
-):
+    x, y, weights, bandwidths, grid, kernel="gaussian", mask=None, edge="none", inflation=1.0,
+    progress=silent,
+):  # fmt: skip
     """Density surface with its error, corrected at the boundary.
 
     Parameters
@@ -63,6 +72,8 @@ def estimate(
         By record: record i weighs w_i / q_i, which keeps the total (Diggle 1985, Appl. Stat.
         34:138). By place: the sum is divided by q at the pixel, which keeps a uniform pattern flat
         up to the border (Jones 1993, Stat. Comput. 3:135). Both need a mask.
+    inflation : (n,) array or float
+        Of the variance around each record, from adaptation.adapt_bandwidths.
     progress : callable
 
     Returns
@@ -73,23 +84,40 @@ def estimate(
         raise InputError("EDGE must be none, record or place; found {!r}.", edge)
     edge = "none" if mask is None else edge
     weights = np.broadcast_to(np.asarray(weights, float), np.shape(x))
-    steps = {"none": (0.0, 0.35), "record": (0.3, 0.5), "place": (0.0, 0.25)}[edge]
+    # shares of the work: factors, density, squares, inflation, shares at places
+    begins = {"none": (0.0, 0.3), "record": (0.3, 0.5), "place": (0.0, 0.2)}[edge]
+    ends = {"none": (0.8, 1.0), "record": (0.85, 1.0), "place": (0.5, 0.65)}[edge]
     if edge == "record":
-        report = part(progress, 0.0, steps[0])
+        report = part(progress, 0.0, begins[0])
         weights = weights / edges.record_factors(x, y, bandwidths, mask, grid, kernel, report)
     records = (x, y, weights, bandwidths)
-    density = surface.adaptive_surface(*records, grid, kernel, part(progress, *steps))
-    report = part(progress, steps[1], 0.6 if edge == "place" else 1.0)
+    density = surface.adaptive_surface(*records, grid, kernel, part(progress, *begins))
+    report = part(progress, begins[1], ends[0])
     squares = surface.sampling_variance(*records, density, grid, kernel, report)
+    inflation = _at_places(inflation, records, density, grid, kernel, part(progress, *ends))
     if mask is None:
         mass = float(density.sum()) * grid.cell_area
-        return Estimate(density, squares, None, np.ones(grid.shape, bool), mass)
+        return Estimate(density, squares, inflation, None, np.ones(grid.shape, bool), mass)
     if edge == "place":
-        share = _share_at_places(records, density, mask, grid, kernel, part(progress, 0.6, 1.0))
+        share = _share_at_places(records, density, mask, grid, kernel, part(progress, ends[1], 1.0))
         density = density / share
         squares = squares / np.square(share)
     mass = float((density * mask).sum()) * grid.cell_area
-    return Estimate(density, squares, mask, mask >= 0.5, mass)
+    return Estimate(density, squares, inflation, mask, mask >= 0.5, mass)
+
+
+def _at_places(inflation, records, density, grid, kernel, progress):
+    """Mean inflation over the records that make up the surface, at every pixel."""
+    x, y, weights, bandwidths = records
+    inflation = np.broadcast_to(np.asarray(inflation, float), np.shape(x))
+    least, most = float(inflation.min()), float(inflation.max())
+    if least == most:
+        return most
+    moments = surface.adaptive_surface(
+        x, y, weights * inflation, bandwidths, grid, kernel, progress
+    )
+    mean = np.divide(moments, density, out=np.full(grid.shape, most), where=density > 0)
+    return np.clip(mean, least, most, out=mean)
 
 
 def _share_at_places(records, density, mask, grid, kernel, progress):

@@ -183,6 +183,7 @@ def test_error_and_support_say_how_many_records_stand_behind(density, point_laye
     results, _ = density(
         RECORDS=point_layer([4_300_000.0] * 16, [3_200_000.0] * 16),
         BANDWIDTH=100,
+        ADAPT=0,
         CELL_SIZE=20,
         ERROR=str(tmp_path / "error.tif"),
         SUPPORT=str(tmp_path / "support.tif"),
@@ -199,6 +200,7 @@ def test_noisy_pixels_are_dropped_or_marked(density, point_layer, tmp_path, nois
     results, _ = density(
         RECORDS=point_layer(x, y),
         BANDWIDTH=150,
+        ADAPT=0,
         CELL_SIZE=50,
         NOISE=noise,
         MOST_ERROR=0.3,

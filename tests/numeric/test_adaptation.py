@@ -49,6 +49,35 @@ def test_bandwidths_follow_the_power_law_of_the_direct_pilot(adapt):
     assert middle == pytest.approx(45.0, rel=1e-9)
 
 
+@pytest.mark.parametrize("ratio", [0.4, 1.0, 3.0])
+@pytest.mark.parametrize("adapt", [0.5, 1.0])
+def test_inflation_is_the_integrated_square_of_what_one_more_record_changes(ratio, adapt):
+    # K_h - a h^2 lap K_s with a pilot of bandwidth 1, squared and summed on a fine lattice; the
+    # Laplacian of a Gaussian of bandwidth s is K_s (r^2 - 2 s^2) / s^4
+    across = np.arange(-12, 12, 0.05) * max(ratio, 1.0)
+    squared = across**2 + across[:, None] ** 2
+    wide = ratio**2 + 1.0
+    own = np.exp(-squared / (2 * ratio**2)) / (2 * np.pi * ratio**2)
+    change = np.exp(-squared / (2 * wide)) / (2 * np.pi * wide) * (squared - 2 * wide) / wide**2
+    expected = np.sum((own - adapt * ratio**2 * change) ** 2) / np.sum(own**2)
+    assert adaptation.variance_inflation(np.array([ratio]), adapt, 0.0) == pytest.approx(
+        expected, rel=1e-6
+    )
+    # a lone record's bandwidth follows nothing but itself
+    assert adaptation.variance_inflation(np.array([ratio]), adapt, 1.0) == pytest.approx(1.0)
+
+
+def test_bandwidths_held_by_trim_or_neighbours_do_not_inflate_the_variance():
+    x, y, _ = sharp_and_broad(5, 600)
+    records = x, y, np.ones(600), 60.0, 0.8
+    free = adaptation.adapt_bandwidths(*records, trim=50.0)
+    assert free.inflation.max() > 1.3 and free.inflation.min() >= 1.0
+    held = adaptation.adapt_bandwidths(*records, trim=1.0)
+    assert np.all(held.inflation == 1.0)
+    raised = adaptation.adapt_bandwidths(*records, least_bandwidth=1e4)
+    assert np.all(raised.inflation == 1.0)
+
+
 def test_trim_holds_bandwidths_and_counts_those_held():
     x, y, _ = sharp_and_broad(4, 1000)
     free = adaptation.adapt_bandwidths(x, y, 1.0, 30.0, 1.0, trim=1e9)
