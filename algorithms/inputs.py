@@ -6,6 +6,7 @@ from qgis.core import QgsVectorLayer
 
 from ..plugin import alignment, layers, reference_system
 from ..plugin.host import field_names, is_null
+from ..plugin.outputs import ROW_NUMBERS
 from ..plugin.text import number, tr
 from .numeric.cell_size import two_digits
 from .numeric.errors import InputError
@@ -119,8 +120,15 @@ class Inputs(Settings):
             )
         return found
 
-    def table(self, name):
+    def table(self, name, choices=()):
         """A point layer as it is stored, nothing left out: for checks of the data themselves.
+
+        Parameters
+        ----------
+        name : str
+            Parameter of the layer.
+        choices : sequence of str
+            Parameters of fields of the layer.
 
         Returns
         -------
@@ -128,18 +136,22 @@ class Inputs(Settings):
         geometry : (n,) object array of shapely geometries, None where there is none
         values : dict of str to (n,) array
             Every field but the row number of a file.
+        chosen : dict of str to (n,) array or None
+            The chosen field by parameter, though it be the row number; None where none is chosen.
         """
         layer, source = self._source(name)
         if source.featureCount() == 0:
             raise InputError(tr("{}: the layer has no features.").format(self.label(name)))
-        numbered = {"fid", "ogc_fid"}
-        if layer is not None:
-            numbered |= {layer.fields().at(i).name() for i in layer.primaryKeyAttributes()}
-        fields = [field.name() for field in source.fields() if field.name() not in numbered]
-        geometry, values, _ = layers.read_table(layer, source, fields)
+        keys = [] if layer is None else layer.primaryKeyAttributes()
+        numbered = ROW_NUMBERS | {layer.fields().at(key).name().lower() for key in keys}
+        fields = [field.name() for field in source.fields() if field.name().lower() not in numbered]
+        wanted = {choice: self.field(choice) for choice in choices}
+        read = list(dict.fromkeys([*fields, *filter(None, wanted.values())]))
         with self.naming(name):
+            geometry, values, _ = layers.read_table(layer, source, read)
             layers.check_kind(geometry, layers.POINT_KINDS, tr("points"))
-        return source, geometry, values
+        chosen = {choice: values.get(field) for choice, field in wanted.items()}
+        return source, geometry, {field: values[field] for field in fields}, chosen
 
     def field(self, name):
         """Name of a chosen field, None where none is chosen."""

@@ -7,7 +7,7 @@ from qgis.core import QgsCsException, QgsProcessingParameterFeatureSink, QgsRect
 from ..plugin import reference_system
 from ..plugin.layers import as_floats
 from ..plugin.looks import categories
-from ..plugin.outputs import Column
+from ..plugin.outputs import Column, kept_columns
 from ..plugin.text import said, tr
 from .base import SteadfieldAlgorithm
 from .numeric import field_faults, record_faults, record_stacks
@@ -98,11 +98,14 @@ class RecordCheck(SteadfieldAlgorithm):
         )
 
     def work(self, job):
-        source, geometry, values = job.table("RECORDS")
+        source, geometry, values, chosen = job.table("RECORDS", ("KEY", "WEIGHT", "GROUP"))
         records, feature = _raw_records(job, source, geometry)
         values = {name: column[feature] for name, column in values.items()}
+        chosen = {
+            name: None if column is None else column[feature] for name, column in chosen.items()
+        }
         boundary = job.boundary()
-        checks, sizes, step = self._checks(job, source, records, values, boundary)
+        checks, sizes, step = self._checks(job, source, records, values, chosen, boundary)
         faults = [check for check in checks if check.severity == FAULT]
         concerned = np.zeros(len(records.x), bool)
         for check in faults:
@@ -111,8 +114,7 @@ class RecordCheck(SteadfieldAlgorithm):
             if check.severity != FINE:
                 job.inform(f"{SEVERITIES[check.severity]}: {said(check.words)}")
         _write_flagged(job, checks, records, sizes, values)
-        groups = values[job.field("GROUP")] if job.field("GROUP") else None
-        write_page(job, checks, records, sizes, groups, concerned)
+        write_page(job, checks, records, sizes, chosen["GROUP"], concerned)
         job.give("RECORDS_READ", len(records.x))
         job.give("RECORDS_PLACED", int(records.placed.sum()))
         job.give("RECORDS_CONCERNED", int(concerned.sum()))
@@ -120,13 +122,13 @@ class RecordCheck(SteadfieldAlgorithm):
         job.give("FULLEST_SPOT", int(sizes.max()))
         job.give("ROUNDED_TO", step)
 
-    def _checks(self, job, source, records, values, boundary):
+    def _checks(self, job, source, records, values, chosen, boundary):
         checks = record_faults.check_geometry(records)
         checks.append(record_faults.check_number(records))
         job.progress(0.2)
         checks.append(field_faults.check_duplicates(records, _content(values, len(records.x))))
-        if job.field("KEY"):
-            checks.append(field_faults.check_keys(values[job.field("KEY")]))
+        if chosen["KEY"] is not None:
+            checks.append(field_faults.check_keys(chosen["KEY"]))
         job.progress(0.3)
         stacked, sizes = record_stacks.check_stacks(records, job.whole("LARGEST_STACK"))
         checks.append(stacked)
@@ -138,11 +140,10 @@ class RecordCheck(SteadfieldAlgorithm):
             told = part(job.progress, 0.6, 0.8)
             checks.append(record_faults.check_boundary(records, boundary, told))
         checks.append(record_faults.check_far(records))
-        if job.field("WEIGHT"):
-            checks += field_faults.check_weights(as_floats(values[job.field("WEIGHT")]))
-        if job.field("GROUP"):
-            name = job.field("GROUP")
-            checks.append(field_faults.check_nulls(name, values[name]))
+        if chosen["WEIGHT"] is not None:
+            checks += field_faults.check_weights(as_floats(chosen["WEIGHT"]))
+        if chosen["GROUP"] is not None:
+            checks.append(field_faults.check_nulls(job.field("GROUP"), chosen["GROUP"]))
         checks.append(_distortion(job, source, records))
         job.progress(0.85)
         return checks, sizes, step
@@ -240,23 +241,11 @@ def _write_flagged(job, checks, records, sizes, values):
         Column("faults", "text", words[rows], tr("All faults")),
         Column("on_spot", "int", sizes[rows], tr("Records on the same spot")),
     ]
-    taken = {column.name for column in columns}
-    for name, column in values.items():
-        free = name if name.lower() not in taken else f"{name}_stored"
-        columns.append(Column(free, _kind(column), column[rows], name))
+    flagged = {name: column[rows] for name, column in values.items()}
+    columns += kept_columns(flagged, columns, "_stored")
     places = shapely.points(records.x[rows], records.y[rows])
     places[~records.placed[rows]] = None
     keys = list(dict.fromkeys(main))
     label = {str(check.key): said(check.key) for check in serious}
     classes = [(key, COLOURS[i % len(COLOURS)], label[key]) for i, key in enumerate(keys)]
     job.write_layer("FLAGGED", columns, places, "point", categories("fault", classes))
-
-
-def _kind(column):
-    if column.dtype.kind == "f":
-        return "float"
-    if column.dtype.kind in "iu":
-        return "int"
-    known = [value for value in column if value is not None]
-    whole = known and all(isinstance(value, (int, np.integer)) for value in known)
-    return "int" if whole else "text"

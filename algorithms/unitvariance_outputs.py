@@ -3,7 +3,7 @@
 import numpy as np
 import shapely
 
-from ..plugin.outputs import Column
+from ..plugin.outputs import ROW_NUMBERS, Column, kept_columns
 from ..plugin.text import percent, tr
 from ..plugin.zoning_looks import extreme_zones
 from .numeric.errors import InputError
@@ -62,24 +62,9 @@ def unit_columns(study):
         found.append(
             Column("straddles", "int", study.straddling.astype(int), tr("1: across official lines"))
         )
-    return [*own_columns(study.units, {column.name for column in found}), *found]
-
-
-def own_columns(units, taken):
-    """The layer's own fields; one whose name is taken gets ``_in`` behind it."""
-    columns = []
-    for name, values in units.values.items():
-        if name.lower() in ("fid", "ogc_fid"):
-            continue
-        if values.dtype.kind == "f":
-            kind = "float"
-        elif values.dtype.kind in "iu" or all(v is None or isinstance(v, int) for v in values):
-            kind = "int"
-        else:
-            kind = "text"
-        shown = name if name.lower() not in taken else f"{name}_in"
-        columns.append(Column(shown, kind, values))
-    return columns
+    stored = study.units.values.items()
+    stored = {name: column for name, column in stored if name.lower() not in ROW_NUMBERS}
+    return [*kept_columns(stored, found, "_in"), *found]
 
 
 def table_of(study):

@@ -175,3 +175,25 @@ def test_middle_points_of_units_are_recognised(check, district, point_layer):
     results = check(point_layer(shapely.get_x(middle), shapely.get_y(middle)))
     assert results["FAULTS"] >= 1
     assert "middle points of areas" in Path(results["REPORT"]).read_text(encoding="utf-8")
+
+
+def test_the_row_numbers_of_a_file_can_be_the_key_and_are_not_handed_on(
+    check, falls, save_layer, open_output
+):
+    def mark(x, y, columns):
+        columns["fault"] = columns["fall"]
+        columns["Fault_stored"] = columns["month"]
+
+    lost = falls(changed=mark, lost=[3])
+    results = check(save_layer(lost), KEY="fid")
+    layer = open_output(results, "FLAGGED")
+    feature = next(layer.getFeatures())
+    assert (feature["fault"], feature["fault_stored_stored"]) == ("empty geometry", 3)
+    assert results["RECORDS_CONCERNED"] == layer.featureCount() == 1
+    page = Path(results["REPORT"]).read_text(encoding="utf-8")
+    assert "Every record has a number of its own." in page
+
+
+def test_a_field_that_the_layer_lacks_is_named(check, falls):
+    with pytest.raises(QgsProcessingException, match=r"RECORDS.*no field postcode"):
+        check(falls(), KEY="postcode")

@@ -330,3 +330,16 @@ def test_layers_open_styled_and_with_aliases(run, given, tmp_path):
         ]
         assert sum(fits) == sum(1 for _ in layer.getFeatures(f"extreme = '{which}'")) > 0
         assert max(fits) < sum(fits)
+
+
+def test_units_keep_their_fields_though_the_tool_has_written_them_before(run, given, tmp_path):
+    marks = np.arange(64)
+    earlier = {"verdict": marks, "Verdict_in": [f"T{u}" for u in marks], "FID": marks // 2}
+    path = tmp_path / "units.gpkg"
+    run("unitvariance", given(parameters={"UNITS_OUT": str(path)}, **earlier))
+    written = QgsVectorLayer(str(path), "units", "ogr")
+    assert written.featureCount() == 64
+    rows = sorted(written.getFeatures(), key=lambda feature: feature["code"])
+    assert [row["verdict_in_in"] for row in rows] == marks.tolist()
+    assert [row["Verdict_in"] for row in rows] == [f"T{u}" for u in marks]
+    assert {row["verdict"] for row in rows} <= {-1, 0, 1}
