@@ -2,6 +2,7 @@
 
 from pathlib import Path
 
+import numpy as np
 from qgis.core import (
     QgsProcessingAlgorithm,
     QgsProcessingException,
@@ -112,7 +113,10 @@ class SteadfieldAlgorithm(QgsProcessingAlgorithm):
         job = Job(self, parameters, context, feedback)
         try:
             job.check_tables()
-            self.work(job)
+            # sound results of the geometry library can leave this flag of the processor set; the
+            # host would put a warning with a traceback into its log
+            with np.errstate(invalid="ignore"):
+                self.work(job)
             job.progress(1.0)
         except CancelledError as error:
             job.discard()

@@ -230,3 +230,16 @@ def test_a_style_file_is_not_shared_by_two_outputs_of_one_stem(count, tmp_path, 
     count(PLACES=str(tmp_path / f"counts.{ending}"))
     style = (tmp_path / "counts.qml").read_text(encoding="utf-8")
     assert "singlebandpseudocolor" in style
+
+
+@pytest.mark.filterwarnings("error")
+def test_a_processor_flag_of_the_geometry_library_puts_no_warning_into_the_log(count, monkeypatch):
+    work = Counting.work
+
+    def flagged(self, job):
+        # raises the flag for certain, which the library does only now and then
+        np.sqrt(np.array([-1.0]))
+        work(self, job)
+
+    monkeypatch.setattr(Counting, "work", flagged)
+    count(REPORT=None)
