@@ -8,6 +8,7 @@ result to the bit.
 import math
 import time
 from collections import deque
+from concurrent.futures import ThreadPoolExecutor
 from concurrent.futures import TimeoutError as WaitTimeoutError
 from dataclasses import dataclass
 
@@ -72,7 +73,7 @@ def plan_batches(units, replicates, seed, efforts=None):
 
 
 def run_batches(function, shared, batches, executor=None, progress=silent):
-    """Yield ``function(shared, batch)`` of every batch, in order.
+    """Yield ``function(shared, batch, progress)`` of every batch, in order.
 
     At most a few batches more than there are workers are under way at once, so memory does not
     grow with their number. A batch whose worker was lost is worked out again, here.
@@ -80,7 +81,7 @@ def run_batches(function, shared, batches, executor=None, progress=silent):
     Parameters
     ----------
     function : callable
-        Importable by name, so that it can be sent to a worker.
+        Importable by name, so that it can be sent to a worker, which calls it without progress.
     shared : object
         What all batches need; pickled for workers outside this process.
     batches : sequence of Batch
@@ -103,11 +104,11 @@ def run_batches(function, shared, batches, executor=None, progress=silent):
         return
     progress(0.0)
     start = time.perf_counter()
-    first = function(shared, batches[0])
+    first = function(shared, batches[0], part(progress, 0.0, 1 / len(batches)))
     seconds = time.perf_counter() - start
     yield first
     rest, progress = batches[1:], part(progress, 1 / len(batches), 1.0)
-    chosen = executor(seconds * len(rest))
+    chosen = _choose(executor, seconds * len(rest), progress)
     if chosen is None:
         yield from _run_here(function, shared, rest, progress)
         return
@@ -119,10 +120,35 @@ def run_batches(function, shared, batches, executor=None, progress=silent):
         chosen.shutdown(wait=finished)
 
 
+def _choose(choose, seconds, progress):
+    """Ask for an executor, which may take a while, and look for cancellation meanwhile."""
+    asker = ThreadPoolExecutor(1)
+    asked = asker.submit(choose, seconds)
+    asker.shutdown(wait=False)
+    try:
+        while True:
+            progress(0.0)
+            try:
+                return asked.result(timeout=WAIT)
+            except (WaitTimeoutError, TimeoutError):
+                if asked.done():
+                    raise
+    except BaseException:
+        asked.add_done_callback(_send_home)
+        raise
+
+
+def _send_home(asked):
+    """Shut down an executor that nobody waits for any more."""
+    if asked.exception() is None and asked.result() is not None:
+        asked.result().shutdown(wait=False)
+
+
 def _run_here(function, shared, batches, progress):
     for done, batch in enumerate(batches):
-        progress(done / len(batches))
-        yield function(shared, batch)
+        stretch = part(progress, done / len(batches), (done + 1) / len(batches))
+        stretch(0.0)
+        yield function(shared, batch, stretch)
     progress(1.0)
 
 
@@ -138,8 +164,8 @@ def _run_elsewhere(function, shared, batches, executor, progress):
                     break
                 under_way.append((batch, _submit(executor, function, shared, batch)))
             batch, future = under_way.popleft()
-            share = done / len(batches)
-            yield _result(future, function, shared, batch, lambda share=share: progress(share))
+            stretch = part(progress, done / len(batches), (done + 1) / len(batches))
+            yield _result(future, function, shared, batch, stretch)
         progress(1.0)
     finally:
         for _, future in under_way:
@@ -160,10 +186,10 @@ def _submit(executor, function, shared, batch):
         return None
 
 
-def _result(future, function, shared, batch, look):
+def _result(future, function, shared, batch, progress):
     """Wait for a batch and look for cancellation meanwhile; what was lost is done here."""
     while future is not None:
-        look()
+        progress(0.0)
         try:
             return future.result(timeout=WAIT)
         except (InputError, CancelledError):
@@ -175,5 +201,5 @@ def _result(future, function, shared, batch, look):
             Exception
         ):  # the worker, not the work, failed: an error of the work comes again below
             break
-    look()
-    return function(shared, batch)
+    progress(0.0)
+    return function(shared, batch, progress)

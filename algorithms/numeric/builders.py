@@ -5,10 +5,12 @@ from typing import Optional
 
 import numpy as np
 
+from .balancing import balanced
 from .errors import InputError
 from .growth import grown
+from .progress import part as part_of
 from .progress import silent
-from .treezones import balanced, tree_cut
+from .treezones import tree_cut
 
 GROWN = "grown"
 TREE_CUT = "tree-cut"
@@ -49,7 +51,7 @@ class Recipe:
             raise InputError("ZONE_COUNTS must be 1 or more; found {}.", self.zone_count)
 
 
-def build(graph, totals, recipe, replicates, generator):
+def build(graph, totals, recipe, replicates, generator, progress=silent):
     """Make zonings by a recipe.
 
     Parameters
@@ -60,6 +62,7 @@ def build(graph, totals, recipe, replicates, generator):
     recipe : Recipe
     replicates : int
     generator : numpy.random.Generator
+    progress : callable
 
     Returns
     -------
@@ -67,10 +70,11 @@ def build(graph, totals, recipe, replicates, generator):
         Zone of every unit; each zone is contiguous and every unit is in one.
     """
     if recipe.builder == GROWN:
-        return grown(graph, recipe.zone_count, replicates, generator)
+        return grown(graph, recipe.zone_count, replicates, generator, progress)
     if recipe.builder == TREE_CUT:
-        return tree_cut(graph, totals, recipe.least_total, replicates, generator)
-    return balanced(graph, totals, recipe.zone_count, recipe.tolerance, replicates, generator)
+        return tree_cut(graph, totals, recipe.least_total, replicates, generator, progress)
+    zone_count, tolerance = recipe.zone_count, recipe.tolerance
+    return balanced(graph, totals, zone_count, tolerance, replicates, generator, progress)
 
 
 def least_total_for(graph, totals, zone_count, generator, progress=silent):
@@ -99,9 +103,9 @@ def least_total_for(graph, totals, zone_count, generator, progress=silent):
     seed = int(generator.integers(2**63))
     pilot = max(3, min(PILOT, 100_000 // graph.units))
     for step in range(STEPS):
-        progress(step / STEPS)
+        stretch = part_of(progress, step / STEPS, (step + 1) / STEPS)
         middle = (low + high) / 2
-        labels = tree_cut(graph, totals, middle, pilot, np.random.default_rng(seed))
+        labels = tree_cut(graph, totals, middle, pilot, np.random.default_rng(seed), stretch)
         if (labels.max(axis=1) + 1).mean() > zone_count:
             low = middle
         else:

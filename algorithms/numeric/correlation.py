@@ -160,11 +160,11 @@ class CorrelationWork:
     recipes: tuple
 
 
-def correlation_batch(work, batch):
+def correlation_batch(work, batch, progress=silent):
     """The scale of a batch and the measures of its zonings; runs in a worker."""
     made = work.relation
     recipe = work.recipes[batch.scale]
-    labels = build(made.graph, made.y_totals, recipe, batch.replicates, batch.generator())
+    labels = build(made.graph, made.y_totals, recipe, batch.replicates, batch.generator(), progress)
     return batch.scale, made.measures(labels)
 
 

@@ -14,6 +14,7 @@ from scipy import sparse
 from scipy.sparse.csgraph import dijkstra, reverse_cuthill_mckee
 
 from .errors import InputError
+from .progress import part, silent
 
 SWEEP_LIMIT = 2500  # units up to which sweeping over many zonings at once beats the heap
 SWEEP_VALUES = 2_000_000  # arrival and passage times held at once
@@ -22,7 +23,7 @@ TIME_BITS = 32  # binary digits of a passage time after the point
 FAR = 2**62
 
 
-def grown(graph, zone_count, replicates, generator):
+def grown(graph, zone_count, replicates, generator, progress=silent):
     """Random contiguous zones by first-passage growth.
 
     One seed falls in every connected part of the graph and the rest anywhere; with a connected
@@ -34,6 +35,7 @@ def grown(graph, zone_count, replicates, generator):
     zone_count : int
     replicates : int
     generator : numpy.random.Generator
+    progress : callable
 
     Returns
     -------
@@ -56,10 +58,12 @@ def grown(graph, zone_count, replicates, generator):
     parts = graph.components()
     for start in range(0, replicates, step):
         stop = min(start + step, replicates)
+        stretch = part(progress, start / replicates, stop / replicates)
+        stretch(0.0)
         seeds = _seeds(parts, zone_count, stop - start, generator)
         shape = (len(graph.pairs), stop - start)
         times = generator.standard_exponential(shape, dtype=np.float32)
-        labels[start:stop] = grow(plan, seeds, times)
+        labels[start:stop] = grow(plan, seeds, times, stretch)
     return labels
 
 
@@ -82,7 +86,7 @@ def check_zone_count(graph, zone_count):
         )
 
 
-def grow_by_sweeps(plan, seeds, times):
+def grow_by_sweeps(plan, seeds, times, progress=silent):
     """First-passage growth of many zonings at once, by relaxing every pair in turn.
 
     Arrival times are whole numbers with the zone in their lowest digits, so that one minimum
@@ -95,6 +99,7 @@ def grow_by_sweeps(plan, seeds, times):
         As :func:`_sweep_plan` returns it.
     seeds : (replicates, zones) int array
     times : (pairs, replicates) float32 array
+    progress : callable
 
     Returns
     -------
@@ -111,6 +116,7 @@ def grow_by_sweeps(plan, seeds, times):
     settled = np.empty_like(arrival)
     sweeps = 0
     while len(active):
+        progress(1 - len(active) / replicates)
         before = arrival.copy() if sweeps else None
         _sweep(arrival, passage, pairs)
         sweeps += 1
@@ -124,7 +130,7 @@ def grow_by_sweeps(plan, seeds, times):
     return (settled[rank] & (2**digits - 1)).T.astype(np.int32)
 
 
-def grow_by_heap(plan, seeds, times):
+def grow_by_heap(plan, seeds, times, progress=silent):
     """First-passage growth, one shortest-path search from all seeds a zoning.
 
     Parameters
@@ -133,6 +139,7 @@ def grow_by_heap(plan, seeds, times):
         As :func:`_heap_plan` returns it.
     seeds : (replicates, zones) int array
     times : (pairs, replicates) float array
+    progress : callable
 
     Returns
     -------
@@ -142,6 +149,7 @@ def grow_by_heap(plan, seeds, times):
     labels = np.empty((len(seeds), units), np.int32)
     zone = np.empty(units, np.int32)
     for row, own in enumerate(seeds):
+        progress(row / len(seeds))
         graph = sparse.csr_matrix(
             (times[pair, row].astype(float), columns, starts), shape=(units, units)
         )

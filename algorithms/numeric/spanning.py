@@ -78,7 +78,7 @@ class Forest:
         return spread
 
 
-def random_forest(nodes, pairs, generator):
+def random_forest(nodes, pairs, generator, part=None):
     """A minimum spanning forest of random costs, each tree rooted at a random node.
 
     Parameters
@@ -87,6 +87,8 @@ def random_forest(nodes, pairs, generator):
     pairs : (m, 2) int array
         The edges; none twice.
     generator : numpy.random.Generator
+    part : (nodes,) int array, optional
+        The connected part of each node, by numbers from 0, where it is known.
 
     Returns
     -------
@@ -97,7 +99,11 @@ def random_forest(nodes, pairs, generator):
     graph = sparse.csr_matrix((costs, tuple(pairs.T)), shape=(nodes, nodes))
     tree = minimum_spanning_tree(graph).tocoo()
     edges = np.c_[tree.row, tree.col].astype(np.int64)
-    return rooted(nodes, edges, _random_roots(nodes, edges, generator))
+    if part is None:
+        flags = np.ones(len(edges))
+        graph = sparse.csr_matrix((flags, tuple(edges.T)), shape=(nodes, nodes))
+        part = connected_components(graph, directed=False)[1]
+    return rooted(nodes, edges, _random_roots(part, generator))
 
 
 def rooted(nodes, edges, roots):
@@ -141,11 +147,9 @@ def copies(graph, replicates):
     return (graph.pairs[None] + offset).reshape(-1, 2)
 
 
-def _random_roots(nodes, edges, generator):
-    """One node of every tree, each as likely as another of its tree."""
-    graph = sparse.csr_matrix((np.ones(len(edges)), tuple(edges.T)), shape=(nodes, nodes))
-    parts, part = connected_components(graph, directed=False)
-    mixed = generator.permutation(nodes)
-    roots = np.empty(parts, np.int64)
+def _random_roots(part, generator):
+    """One node of every connected part, each as likely as another of its part."""
+    mixed = generator.permutation(len(part))
+    roots = np.full(part.max() + 1, -1)
     roots[part[mixed]] = mixed  # of several writes to one place the last stays
-    return roots
+    return roots[roots >= 0]

@@ -27,6 +27,7 @@ RANK_BINS = 50
 MISSING = 255
 PILOT_VALUES = 100_000
 PILOT_ZONINGS = 20
+BUILDING = 0.6  # part of the work of a batch that is making its zones
 
 
 def recipes(
@@ -105,13 +106,14 @@ class BatchResult:
     halves: Optional[tuple]
 
 
-def simulate_batch(work, batch):
+def simulate_batch(work, batch, progress=silent):
     """Make the zonings of a batch and sum them up; runs in a worker.
 
     Parameters
     ----------
     work : Work
     batch : Batch
+    progress : callable
 
     Returns
     -------
@@ -119,7 +121,11 @@ def simulate_batch(work, batch):
     """
     setting = work.problem
     recipe = work.recipes[batch.scale]
-    labels = build(setting.graph, setting.totals, recipe, batch.replicates, batch.generator())
+    labels = build(
+        setting.graph, setting.totals, recipe, batch.replicates, batch.generator(),
+        part(progress, 0.0, BUILDING),
+    )  # fmt: skip
+    progress(BUILDING)
     block = describe(setting, labels)
     zones = block.values.shape[1]
     place = labels + (np.arange(batch.replicates, dtype=np.int64) * zones)[:, None]
@@ -127,6 +133,7 @@ def simulate_batch(work, batch):
     def on_units(of_zones):
         return of_zones.ravel()[place]
 
+    progress(BUILDING + 0.1)
     counting, above, excess = judgements(setting, block)
     tally = ThresholdTally(setting.graph.units)
     tally.add_many(on_units(above), on_units(excess))
@@ -136,11 +143,13 @@ def simulate_batch(work, batch):
             RunningMoments.of(on_units(values))
             for values in (block.half_values, block.other_values)
         )
+    progress(BUILDING + 0.2)
+    moments = [RunningMoments.of(on_units(values)) for values in (block.values, counting)]
+    progress(BUILDING + 0.3)
     rank_edges = np.linspace(0, 1, RANK_BINS + 1)
     return BatchResult(
         batch.scale,
-        RunningMoments.of(on_units(block.values)),
-        RunningMoments.of(on_units(counting)),
+        *moments,
         tally,
         on_units(_codes(block.values, work.value_edges)),
         on_units(_codes(zone_ranks(block.values, labels), rank_edges)),
@@ -312,10 +321,11 @@ def _value_edges(problem, recipes, generator, progress):
     own = problem.counts[used] / problem.totals[used]
     pilot = []
     for place, recipe in enumerate(recipes):
-        progress(place / len(recipes))
+        stretch = part(progress, place / len(recipes), (place + 1) / len(recipes))
+        stretch(0.0)
         many = PILOT_VALUES // (problem.graph.units * EFFORTS[recipe.builder])
         many = int(np.clip(many, 1, PILOT_ZONINGS))
-        labels = build(problem.graph, problem.totals, recipe, many, generator)
+        labels = build(problem.graph, problem.totals, recipe, many, generator, stretch)
         values = describe(problem, labels).values
         on_units = np.take_along_axis(values, labels.astype(np.int64), axis=1)
         pilot.append(on_units[~np.isnan(on_units)])

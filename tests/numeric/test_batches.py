@@ -6,6 +6,7 @@ import signal
 import subprocess
 import sys
 import threading
+import time
 import zipfile
 from concurrent.futures import Executor, Future, ThreadPoolExecutor
 
@@ -17,6 +18,7 @@ from steadfield.algorithms.numeric.batches import plan_batches, run_batches
 from steadfield.algorithms.numeric.contiguity import from_pairs
 from steadfield.algorithms.numeric.correlation import relation, simulate_correlation
 from steadfield.algorithms.numeric.errors import CancelledError, InputError
+from steadfield.algorithms.numeric.progress import part, silent
 from steadfield.algorithms.numeric.scenarios import problem
 from steadfield.algorithms.numeric.zones import recipes, simulate
 
@@ -126,11 +128,11 @@ def test_lost_tasks_are_worked_out_here(alone):
     assert bits(simulated(Forgetful())) == alone
 
 
-def double(shared, batch):
+def double(shared, batch, progress=silent):
     return shared * batch.replicates
 
 
-def fails(shared, batch):
+def fails(shared, batch, progress=silent):
     raise InputError("COUNT: not like this")
 
 
@@ -155,6 +157,89 @@ def test_cancelling_stops_within_a_batch(threads):
     assert len(done) == 4
     if executor:
         executor.shutdown()
+
+
+def waits(shared, batch, progress=silent):
+    """A batch of half a minute that looks for cancellation, as the ones that make zones do."""
+    for step in range(3000):
+        progress(step / 3000)
+        time.sleep(0.01)
+
+
+class Refusing(Executor):
+    """Takes nothing any more, as a pool does that was shut down."""
+
+    def submit(self, function, /, *arguments):
+        raise RuntimeError("shut down")
+
+
+class CancelAfter:
+    """A progress callable that asks to stop after some seconds and notes how long that takes."""
+
+    def __init__(self, seconds):
+        self.shares = []
+        self.stop = time.monotonic() + seconds
+
+    def __call__(self, share):
+        self.shares.append(share)
+        if time.monotonic() > self.stop:
+            raise CancelledError
+
+    def delay(self):
+        return time.monotonic() - self.stop
+
+
+@pytest.mark.parametrize("place", ["here", "first batch", "lost"])
+def test_cancelling_stops_midway_in_a_batch_that_runs_here(place):
+    batches = plan_batches(10**6, [3], np.random.SeedSequence(0))
+    cancel = CancelAfter(0.3)
+    executor = {"here": None, "first batch": lambda seconds: None, "lost": Refusing()}[place]
+    with pytest.raises(CancelledError):
+        list(run_batches(waits, 1, batches, executor, cancel))
+    assert cancel.delay() < 0.5
+    assert max(cancel.shares) > 0 and sorted(cancel.shares) == cancel.shares
+
+
+def test_cancelling_stops_while_workers_are_chosen_and_sends_them_home():
+    batches = plan_batches(10**6, [3], np.random.SeedSequence(0))
+    sent_home = threading.Event()
+
+    class Late(ThreadPoolExecutor):
+        def shutdown(self, wait=True, *, cancel_futures=False):
+            sent_home.set()
+            super().shutdown(wait)
+
+    def choose(seconds):
+        time.sleep(1.0)
+        return Late(1)
+
+    cancel = CancelAfter(0.3)
+    with pytest.raises(CancelledError):
+        list(run_batches(double, 1, batches, choose, cancel))
+    assert cancel.delay() < 0.5
+    assert sent_home.wait(5)
+
+
+class Sleep:
+    """Takes a worker half a minute to unpack."""
+
+    def __reduce__(self):
+        return time.sleep, (30,)
+
+
+def test_cancelling_ends_worker_processes_midway_in_a_batch():
+    executors = []
+
+    def choose(seconds):
+        executors.append(workers.PipeExecutor(workers.real_python(), 1))
+        return executors[0]
+
+    batches = plan_batches(10**6, [3], np.random.SeedSequence(0))
+    cancel = CancelAfter(1.0)
+    with pytest.raises(CancelledError):
+        list(run_batches(part, Sleep(), batches, choose, cancel))  # part: a worker can import it
+    assert cancel.delay() < 0.5
+    assert all(process.poll() is not None for process in executors[0].processes)
 
 
 def test_few_batches_are_under_way_at_once():

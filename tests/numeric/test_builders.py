@@ -8,6 +8,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy.stats import chisquare
 from steadfield.algorithms.numeric import growth
+from steadfield.algorithms.numeric.balancing import balanced
 from steadfield.algorithms.numeric.builders import (
     BALANCED,
     GROWN,
@@ -19,7 +20,7 @@ from steadfield.algorithms.numeric.builders import (
 from steadfield.algorithms.numeric.contiguity import from_pairs
 from steadfield.algorithms.numeric.errors import InputError
 from steadfield.algorithms.numeric.growth import grown
-from steadfield.algorithms.numeric.treezones import balanced, short_parts, tree_cut
+from steadfield.algorithms.numeric.treezones import short_parts, tree_cut
 
 
 def board(rows, columns):
@@ -332,9 +333,32 @@ def test_separate_parts_get_balanced_zones_by_their_total():
     ],
 )
 def test_zones_that_cannot_be_made_are_refused_in_words(make, words, monkeypatch):
-    monkeypatch.setattr("steadfield.algorithms.numeric.treezones.FRESH_STARTS", 3)
+    monkeypatch.setattr("steadfield.algorithms.numeric.balancing.FRESH_STARTS", 3)
     with pytest.raises(InputError, match=words):
         make(board(5, 6), np.random.default_rng(0))
+
+
+def test_regions_without_a_cut_are_joined_again_until_narrow_zones_are_found():
+    # six units a zone, the largest more than twice the smallest: many cuts lead nowhere
+    generator = np.random.default_rng(11)
+    graph, totals = board(20, 20), generator.integers(6, 15, 400).astype(float)
+    labels = balanced(graph, totals, 66, 0.2, 4, generator)
+    assert_contiguous(graph, labels)
+    ideal = totals.sum() / 66
+    for row in labels:
+        assert (np.abs(np.bincount(row, totals) - ideal) <= 0.2 * ideal * (1 + 1e-6)).all()
+
+
+@pytest.mark.parametrize("builder", [GROWN, TREE_CUT, BALANCED])
+@pytest.mark.parametrize("side", [30, 90])
+def test_progress_rises_and_is_called_often_while_zonings_are_made(builder, side):
+    graph = board(side, side)
+    recipe = Recipe(builder, 40, least_total=side**2 / 60, tolerance=0.3)
+    many = {30: 400, 90: 60}[side] if builder != BALANCED else 6
+    shares = []
+    build(graph, np.ones(side**2), recipe, many, np.random.default_rng(1), shares.append)
+    assert sorted(shares) == shares and shares[0] >= 0 and shares[-1] < 1
+    assert len(set(shares)) >= 4
 
 
 def test_one_zone_and_a_zone_a_unit_are_made():

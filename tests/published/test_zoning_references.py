@@ -8,9 +8,9 @@ import networkx
 import numpy as np
 import pytest
 import shapely
+from steadfield.algorithms.numeric.balancing import balanced
 from steadfield.algorithms.numeric.contiguity import contiguity, from_pairs
 from steadfield.algorithms.numeric.scenarios import describe, problem
-from steadfield.algorithms.numeric.treezones import balanced
 from steadfield.algorithms.numeric.zones import recipes, simulate
 
 
