@@ -21,7 +21,7 @@ MOST_MEMORY = 4e9
 # Values, ranks, cores of each layer and the sums over them, in bytes a pixel.
 BYTES_PER_LAYER, BYTES_PER_PIXEL = 16, 100
 LEAST_PIXELS = 4
-HELD_STEPS = (0, 0.25, 0.5, 0.75, 0.95, 1)
+HELD_STEPS = (0, 25, 50, 75, 95, 100)
 
 
 @dataclass(frozen=True)
@@ -242,7 +242,8 @@ def write_agreement(job, grid, findings):
         return np.where(findings.known, values, np.nan).astype(np.float32)
 
     count = len(findings.names)
-    stops = looks.spread(looks.SEQUENCE, 0, count)
+    last = len(looks.SEQUENCE) - 1
+    stops = [(met, looks.SEQUENCE[round(met * last / count)]) for met in range(count + 1)]
     job.write_raster(
         "AGREEMENT",
         grid,
@@ -253,7 +254,7 @@ def write_agreement(job, grid, findings):
             Band("composite", band(agreement.composite(findings.ranked, findings.weights)),
                  tr("rank")),
         ],
-        looks.ramp(1, stops, tr("cores"), clear_below=0.0),
+        looks.ramp(1, stops, tr("of {} cores").format(count), clear_first=True),
     )  # fmt: skip
 
 
@@ -300,5 +301,5 @@ def write_zones(job, findings):
 
 def zones_look(layer):
     """Zones by how often they hold, with the map below showing."""
-    looks.steps("held", HELD_STEPS, unit=tr("of weightings"), width=0.3)(layer)
+    looks.steps('100 * "held"', HELD_STEPS, unit=tr("% of weightings"), width=0.3)(layer)
     layer.setOpacity(0.75)

@@ -64,7 +64,7 @@ def root_stops(peak):
     return [((peak or 1.0) * (step / last) ** 2, colour) for step, colour in enumerate(SEQUENCE)]
 
 
-def ramp(band, stops, unit, clear_below=None):
+def ramp(band, stops, unit, clear_first=False):
     """Look: one band in a continuous ramp.
 
     Parameters
@@ -75,17 +75,18 @@ def ramp(band, stops, unit, clear_below=None):
         Rising values and their colours.
     unit : str
         Written behind each value in the legend.
-    clear_below : float or None
-        Values up to this one are see-through.
+    clear_first : bool
+        Whether the first colour is see-through.
     """
 
     def look(layer):
         items = []
-        if clear_below is not None:
-            items.append(QgsColorRampShader.ColorRampItem(clear_below, QColor(0, 0, 0, 0), ""))
         for value, colour in stops:
+            shade = QColor(colour)
+            if clear_first and not items:
+                shade.setAlpha(0)
             label = f"{number(value)} {unit}".strip()
-            items.append(QgsColorRampShader.ColorRampItem(value, QColor(colour), label))
+            items.append(QgsColorRampShader.ColorRampItem(value, shade, label))
         shading = QgsColorRampShader(stops[0][0], stops[-1][0])
         shading.setColorRampType(QgsColorRampShader.Type.Interpolated)
         shading.setColorRampItemList(items)

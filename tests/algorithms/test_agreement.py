@@ -7,7 +7,7 @@ import numpy as np
 import pytest
 import shapely
 from osgeo import gdal, ogr
-from qgis.core import QgsProcessingException
+from qgis.core import QgsProcessingException, QgsRasterLayer, QgsRenderContext, QgsVectorLayer
 
 sys.path.insert(0, str(Path(__file__).parent))
 from raster_layers import read_bands, save_raster
@@ -206,3 +206,21 @@ def test_cancelled_run_leaves_no_file(agree, layers, tmp_path, share):
     with pytest.raises(QgsProcessingException, match="Cancelled"):
         agree(layers, cancel_at=share)
     assert sorted(tmp_path.iterdir()) == before
+
+
+def test_legends_count_whole_cores_and_percent_of_weightings(agree, layers):
+    results, _ = agree(layers)
+    raster = QgsRasterLayer(results["AGREEMENT"], "agreement")
+    raster.loadDefaultStyle()
+    items = raster.renderer().shader().rasterShaderFunction().colorRampItemList()
+    assert [item.label for item in items] == [f"{met} of 3 cores" for met in range(4)]
+    assert [item.color.alpha() for item in items] == [0, 255, 255, 255]
+    zones = QgsVectorLayer(results["ZONES"], "zones", "ogr")
+    words = [one.label() for one in zones.renderer().legendSymbolItems()]
+    assert words[-1] == "95 – 100 % of weightings"
+    zone = next(zones.getFeatures())
+    context = QgsRenderContext()
+    context.expressionContext().setFeature(zone)
+    zones.renderer().startRender(context, zones.fields())
+    assert zones.renderer().symbolForFeature(zone, context) is not None
+    zones.renderer().stopRender(context)
