@@ -210,13 +210,16 @@ METHOD = (
 
 CAUTIONS = (
     tr(
-        "The rules seek the bandwidth that brings a surface with one bandwidth everywhere closest "
-        "to the density behind the records. A question about large districts may call for a wider "
-        "one, a question about streets for a narrower one."
+        "The four rules seek the bandwidth that brings a surface with one bandwidth everywhere "
+        "closest to the density behind the records. A question about large districts may call for "
+        "a wider one, a question about streets for a narrower one."
     ),
     tr(
-        "An adaptive surface takes the advised value as its overall bandwidth; it then narrows "
-        "where records crowd."
+        "The advised value is meant as the overall bandwidth of an adaptive surface (adaptation "
+        "0.5), which then narrows where records crowd: in simulated patterns of one to four "
+        "clusters its squared error was 1.04 to 1.6 times the least possible. A surface with one "
+        "bandwidth everywhere should take the least-squares value: the advised one is too wide for "
+        "it where some clusters are much tighter than others (1.02 to 5.3 times)."
     ),
     tr(
         "Cross-validation takes records as independent. Several records of one person or one "
