@@ -67,6 +67,13 @@ def prepare(job):
             ("BACKGROUND", "BACKGROUND_WEIGHT", background),
         )
     ]
+    if all(np.array_equal(one, other) for one, other in zip(*groups)):
+        raise InputError(
+            tr(
+                "{}: the background is the records themselves, so the ratio is 1 everywhere; "
+                "choose what the records come from, such as residents, or another weight."
+            ).format(job.label("BACKGROUND"))
+        )
     pooled = contrast.pool(*groups, weights_mean=meaning_of_weights(job, groups))
     bandwidth, chosen = overall_bandwidth(job, pooled)
     grid = output_grid(job, pooled, bandwidth, boundary)

@@ -223,3 +223,15 @@ def test_a_cancelled_run_writes_nothing(compare, tmp_path, share):
     with pytest.raises(QgsProcessingException, match="Cancelled"):
         compare(cancel_at=share)
     assert not (tmp_path / "ratio.tif").exists()
+
+
+def test_records_are_not_compared_with_themselves_but_with_their_weights(compare, point_layer):
+    """The dialog offers the layer at hand for both."""
+    draw = np.random.default_rng(7)
+    layer = point_layer(*places()[1], falls=draw.poisson(0.3, 2500), residents=[3] * 2500)
+    with pytest.raises(QgsProcessingException, match=r"BACKGROUND.*choose what the records come"):
+        compare(records=layer, background=layer)
+    results, _ = compare(
+        records=layer, background=layer, WEIGHT="falls", BACKGROUND_WEIGHT="residents"
+    )
+    assert results["HIGHEST_RATIO"] > 1
