@@ -32,6 +32,8 @@ TOTALS = {
 }
 # mean number of contributors that a hexagon holds when the size is chosen
 WANTED = 4
+# sizes that tell little of the records, yet none is far above the one wanted
+ROUND = np.array([1.0, 1.5, 2.0, 2.5, 3.0, 4.0, 5.0, 6.0, 8.0, 10.0])
 MOST_CELLS = 200_000
 
 
@@ -290,7 +292,7 @@ def size_of(job, x, y, area, plan):
     ground = area.area if area is not None else float(np.ptp(x)) * float(np.ptp(y))
     wanted = np.sqrt(ground * WANTED * plan.rules.least_count / len(x) * 2 / np.sqrt(3))
     metres = max(wanted * job.working.metres, 1.0)
-    steps = np.array([1.0, 2.0, 5.0, 10.0]) * 10.0 ** np.floor(np.log10(metres))
+    steps = ROUND * 10.0 ** np.floor(np.log10(metres))
     chosen = float(steps[steps >= metres * (1 - 1e-9)][0])
     job.inform(tr("Hexagon size chosen: {} m").format(number(chosen)))
     return chosen / job.working.metres, True

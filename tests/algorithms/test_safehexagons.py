@@ -350,13 +350,21 @@ def test_number_outputs_agree_with_the_file(made):
         assert results["HEXAGON_SIZE_USED"] == 250
 
 
-def test_a_seed_repeats_the_release_and_a_size_is_chosen_when_none_is_given(made):
-    one, two = (made(METHOD=1, HEXAGON_SIZE=0)[0] for _ in range(2))
+def test_a_seed_repeats_the_release(made):
+    one, two = (made(METHOD=1)[0] for _ in range(2))
     assert [f for f, _ in polygons_of(one["RELEASE"])] == [
         f for f, _ in polygons_of(two["RELEASE"])
     ]
-    size = one["HEXAGON_SIZE_USED"]
-    assert f"{size:g}"[0] in "125"
+
+
+@pytest.mark.parametrize("count", [150, 300, 500, 900])
+def test_a_size_that_is_chosen_is_round_and_little_above_four_times_the_least_count(made, count):
+    size = made(records=practice(0, count), HEXAGON_SIZE=0, METHOD=1)[0]["HEXAGON_SIZE_USED"]
+    assert float(f"{size:.1e}") == size
+    # area of a hexagon between whose parallel sides lies the size: sqrt(3) / 2 of its square
+    held = count * np.sqrt(3) / 2 * size**2 / district().area
+    assert held * (1 + 1e-9) >= 4 * LEAST
+    assert held < 1.5**2 * 4 * LEAST
 
 
 def test_the_report_is_marked_confidential_and_names_no_path(made, tmp_path):
