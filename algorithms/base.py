@@ -113,6 +113,7 @@ class SteadfieldAlgorithm(QgsProcessingAlgorithm):
         job = Job(self, parameters, context, feedback)
         try:
             job.check_tables()
+            job.check_fields()
             # sound results of the geometry library can leave this flag of the processor set; the
             # host would put a warning with a traceback into its log
             with np.errstate(invalid="ignore"):

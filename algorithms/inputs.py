@@ -160,6 +160,24 @@ class Inputs(Settings):
         chosen = field_names(self.algorithm, self.parameters, name, self.context)
         return chosen[0] if chosen else None
 
+    def check_fields(self):
+        """Refuse fields that their layer lacks; the host checks this in its dialogs only."""
+        for definition in self.algorithm.parameterDefinitions():
+            parent = definition.type() == "field" and definition.parentLayerParameterName()
+            chosen = self.field(definition.name()) if parent else None
+            if chosen is None:
+                continue
+            source = self.algorithm.parameterAsSource(self.parameters, parent, self.context)
+            if source is not None and chosen not in source.fields().names():
+                raise InputError(
+                    tr("{}: {} has no field {}; its fields are {}.").format(
+                        self.label(definition.name()),
+                        self.label(parent),
+                        chosen,
+                        ", ".join(source.fields().names()),
+                    )
+                )
+
     def records(self, name, weight=None, fields=()):
         """Point records in the working CRS.
 

@@ -393,3 +393,22 @@ def test_a_message_that_is_a_traceback_or_names_nothing_fails(bench):
         refused(sample, Outcome(trouble="Cell size (CELL_SIZE): too small"), "RECORDS")
     with pytest.raises(AssertionError):
         equal(sample, Outcome(numbers={"TOTAL": 2.0}), Outcome(numbers={"TOTAL": 1.0}))
+
+
+@pytest.mark.parametrize("algorithm", ALGORITHMS)
+def test_a_field_that_the_layer_lacks_is_named_with_its_parameter(bench, algorithm):
+    made = bench(algorithm)
+    registered = QgsApplication.processingRegistry().algorithmById(f"steadfield:{algorithm}")
+    for definition in registered.parameterDefinitions():
+        if definition.type() == "field" and definition.parentLayerParameterName():
+            name = definition.name()
+            if made.recipe.main and not fed(made, definition.parentLayerParameterName()):
+                continue
+            outcome = made.run("good", folder=made.folder / name, **{name: "lacking"})
+            assert outcome.trouble is not None, name
+            assert f"({name})" in outcome.trouble and "no field lacking" in outcome.trouble
+
+
+def fed(made, parameter):
+    """Whether the recipe has a layer for a parameter."""
+    return parameter in made.parameters("good")

@@ -192,8 +192,3 @@ def test_the_row_numbers_of_a_file_can_be_the_key_and_are_not_handed_on(
     assert results["RECORDS_CONCERNED"] == layer.featureCount() == 1
     page = Path(results["REPORT"]).read_text(encoding="utf-8")
     assert "Every record has a number of its own." in page
-
-
-def test_a_field_that_the_layer_lacks_is_named(check, falls):
-    with pytest.raises(QgsProcessingException, match=r"RECORDS.*no field postcode"):
-        check(falls(), KEY="postcode")
