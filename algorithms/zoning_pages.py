@@ -43,9 +43,9 @@ def verdict_cautions():
     return [
         tr(
             "A verdict is about one place, not about the map. On maps of pure noise one place in "
-            "a hundred or fewer is called settled on average, but up to one map in three has some such "
-            "place, and a few have one of 5 % of the people. A lone small place is a reason to "
-            "look, not a finding."
+            "a hundred or fewer is called settled on average, but up to one map in three has some "
+            "such place, and a few have one of 5 % of the people. A lone small place is a reason "
+            "to look, not a finding."
         ),
         tr(
             "Counting noise takes events as independent. Where the same people or households have "
