@@ -167,7 +167,7 @@ CAUTIONS = (
     tr("Shares depend on the bandwidth of the surface: a smoother surface has wider outlines."),
     tr(
         "The share is that of the surface, not of the records to come. In simulated towns outlines "
-        "of 50 % held 50 to 54 % of new records with an advised bandwidth, and up to 64 %, on 2.5 "
+        "of 50 % held 49 to 54 % of new records with an advised bandwidth, and up to 64 %, on 2.5 "
         "times the ground, with the normal-scale one; outlines of 90 % from 200 records held 82 to "
         "94 % of new records. The records that made the surface lie inside more often than new "
         "ones do."
