@@ -43,6 +43,7 @@ def test_squares_contain_their_points(angle):
     polygons = hexagons.square_polygons(column, row, 60.0, **frame)
     assert shapely.contains_xy(polygons, x, y).all()
     np.testing.assert_allclose(shapely.area(polygons), 3600, rtol=1e-9)
+    assert hexagons.cell_area(60.0, hexagons.SQUARE) == 3600
     centre_x, centre_y = hexagons.square_centres(column, row, 60.0, **frame)
     centroids = shapely.centroid(polygons)
     np.testing.assert_allclose(shapely.get_x(centroids), centre_x, atol=1e-9)

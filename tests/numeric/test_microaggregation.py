@@ -37,6 +37,8 @@ def test_every_group_has_enough_effective_contributors_by_a_loop(seed):
     groups = neighbour_groups(*places.T, least, weights, people)
     used = groups.of_record >= 0
     assert (used == ((people >= 0) & (weights > 0))).all()
+    groups_of = {p: len(set(groups.of_record[used & (people == p)])) for p in set(people[used])}
+    assert max(groups_of.values()) > 1
     for group in range(len(groups.x)):
         own = np.flatnonzero(groups.of_record == group)
         by_person = {}
@@ -46,6 +48,8 @@ def test_every_group_has_enough_effective_contributors_by_a_loop(seed):
         assert w.sum() ** 2 / (w**2).sum() >= least - 1e-9
         assert groups.contributors[group] == len(by_person) >= least
         assert groups.total[group] == pytest.approx(w.sum())
+        shared = np.array([groups_of[person] for person in by_person])
+        assert groups.squares[group] == pytest.approx((w**2 * shared).sum())
         centre = np.mean([places[records].mean(0) for records in by_person.values()], axis=0)
         assert (groups.x[group], groups.y[group]) == pytest.approx(tuple(centre))
         reach = np.hypot(*(places[own] - centre).T)

@@ -109,7 +109,7 @@ def test_pixels_that_meet_at_a_corner_are_two_regions():
         ([[1.0, 2.0]], [50.0], "Shares"),
         ([[1.0, 2.0]], [], "Shares"),
         ([[np.nan, 0.0]], [0.5], "no value above 0"),
-        ([[1.0, -2.0]], [0.5], "below 0"),
+        ([[1.0, -2.0]], [0.5], r"below 0 \(down to -2\)"),
         ([[1.0, np.inf]], [0.5], "infinite"),
     ],
 )

@@ -113,8 +113,10 @@ def test_what_cannot_be_laid_over_is_said():
         overlay([np.empty(0, object)])
     with pytest.raises(InputError, match="tolerance must be 0 or more; found -1"):
         overlay([boxes((0, 0, 1, 1))], -1)
-    with pytest.raises(InputError, match="1 zones without an area"):
-        overlay([np.array([shapely.Polygon([(0, 0), (1, 0), (2, 0)])], object)])
+    whole, flat = shapely.box(0, 0, 1, 1), shapely.Polygon([(0, 0), (1, 0), (2, 0)])
+    words = r"layer 2 holds 1 zones without an area \(the first is number 3\)"
+    with pytest.raises(InputError, match=words):
+        overlay([boxes((0, 0, 1, 1)), np.array([whole, whole, flat], object)])
 
 
 def test_cancelling_stops_the_overlay():

@@ -84,5 +84,6 @@ def test_nothing_beyond_tolerance_is_no_area():
 def test_levels_that_the_relabellings_cannot_reach_are_refused(raised):
     with pytest.raises(InputError, match="at least 199 relabellings"):
         tolerance_areas(*raised, [0.005])
-    with pytest.raises(InputError, match="below 50"):
-        tolerance_areas(*raised, [0.6])
+    for level in (0.5, 0.6):
+        with pytest.raises(InputError, match=f"below 50 %; found {100 * level:g} %"):
+            tolerance_areas(*raised, [level])
