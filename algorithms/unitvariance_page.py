@@ -4,6 +4,7 @@ import numpy as np
 
 from ..plugin.report import Report
 from ..plugin.text import listed, number, percent, tr
+from .numeric.official import share_as_extreme
 from .unitvariance_plots import FANNED, draw_fans, draw_maps, draw_source_maps, map_height
 from .zoning_pages import (
     VALUES,
@@ -229,9 +230,18 @@ def _official(report, study):
         )
         if place < 0.025 or place > 0.975:
             odd.append(words[row[0]])
+    counted = [names.index(row) for row in statistic_words() if row in names and row != "zones"]
+    together = share_as_extreme(beside[0].statistics[:, counted], run.official.statistics[counted])
     if odd:
-        said = tr("Against chance zonings of as many zones it stands out in: {}.").format(
-            listed(odd)
+        said = tr(
+            "Against chance zonings of as many zones it stands out in: {}. Of all zonings {} stand "
+            "as far out in some statistic, so that {}."
+        ).format(
+            listed(odd),
+            percent(together, 0),
+            tr("it is an unusual one as a whole")
+            if together <= 0.05
+            else tr("this may be chance: of many statistics one is often far out"),
         )
     else:
         said = tr(

@@ -5,6 +5,7 @@ from steadfield.algorithms.numeric.contiguity import contiguity
 from steadfield.algorithms.numeric.errors import InputError
 from steadfield.algorithms.numeric.official import (
     pieces_of,
+    share_as_extreme,
     zones_from_codes,
     zones_from_polygons,
 )
@@ -68,3 +69,33 @@ def test_units_in_no_official_zone_count_for_nothing_there():
     run = simulate(made, plan, 20, 1, official=labels)
     assert run.official.zone_count == 3
     assert np.isfinite(run.official.places).all()
+
+
+def test_share_as_extreme_is_uniform_for_a_zoning_like_the_others():
+    # eight statistics, some of them nearly the same: one by one, a zoning like the others stands
+    # outside the middle 95 % of some of them far oftener than 1 time in 20
+    rng = np.random.default_rng(61)
+    shares, apart = [], []
+    for _ in range(600):
+        base = rng.normal(size=(100, 4))
+        values = np.column_stack([base, base + 0.3 * rng.normal(size=(100, 4))])
+        values[rng.random(100) < 0.05, 3] = np.nan
+        shares.append(share_as_extreme(values[1:], values[0]))
+        places = (values[1:] < values[0]).mean(axis=0)
+        apart.append(np.any((places < 0.025) | (places > 0.975)))
+    # 600 draws: 5 % is known to 0.9 %, 50 % to 2 %
+    assert np.mean(np.array(shares) <= 0.05) == pytest.approx(0.05, abs=0.03)
+    assert np.mean(np.array(shares) <= 0.5) == pytest.approx(0.5, abs=0.07)
+    assert np.mean(apart) > 0.2
+
+
+def test_share_as_extreme_of_a_few_zonings_by_hand():
+    # first statistic: 0, 1, 2, 3, 9 with mean 3 and variance (9 + 4 + 1 + 0 + 36) / 5 = 10; second:
+    # 1, 5, 3, 3, 3 with mean 3 and variance 8 / 5. Farthest, squared, in variances: official
+    # 36 / 10, the others 9 / 10 and 4 / 1.6 = 2.5, the larger of 4 / 10 and 2.5, 1 / 10, and 0
+    simulated = np.array([[0.0, 1.0], [1.0, 5.0], [2.0, 3.0], [3.0, 3.0]])
+    assert share_as_extreme(simulated, np.array([9.0, 3.0])) == pytest.approx(1 / 5)
+    # 1 / 10 off, where the others lie 36, 9, 4 and 0 tenths off
+    assert share_as_extreme(np.array([[9.0], [0.0], [1.0], [3.0]]), np.array([2.0])) == 4 / 5
+    assert share_as_extreme(np.ones((4, 1)), np.ones(1)) == 1.0
+    assert np.isnan(share_as_extreme(simulated, np.full(2, np.nan)))
