@@ -92,9 +92,12 @@ def test_flats_are_no_fault_until_the_user_says_how_many_may_live_at_one_door(di
 def test_middle_points_of_areas_are_recognised(district):
     # Every fall moved to the middle of its base unit: 90 spots for about 600 records.
     middle = shapely.centroid(district.units.polygons[district.fall_unit])
-    check, _ = record_stacks.check_stacks(raw(shapely.get_x(middle), shapely.get_y(middle)))
+    x, y = np.append(shapely.get_x(middle), 0.0), np.append(shapely.get_y(middle), 0.0)
+    check, _ = record_stacks.check_stacks(raw(x, y))
     assert check.severity == FAULT
     assert "areas" in check.advice
+    _, spot, records = np.unique(x + 1j * y, return_inverse=True, return_counts=True)
+    assert check.found.tolist() == (records[spot.reshape(-1)] > 1).tolist() and not check.found[-1]
 
 
 def test_stack_sizes_count_the_records_on_each_spot():
