@@ -8,7 +8,6 @@ result to the bit.
 import math
 import time
 from collections import deque
-from concurrent.futures import ThreadPoolExecutor
 from concurrent.futures import TimeoutError as WaitTimeoutError
 from dataclasses import dataclass
 
@@ -16,6 +15,7 @@ import numpy as np
 
 from .errors import CancelledError, InputError
 from .progress import part, silent
+from .workers import call_watched
 
 UNITS_A_BATCH = 400_000  # units times zonings: about a third of a second of one core
 LARGEST_BATCH = 4096
@@ -108,7 +108,7 @@ def run_batches(function, shared, batches, executor=None, progress=silent):
     seconds = time.perf_counter() - start
     yield first
     rest, progress = batches[1:], part(progress, 1 / len(batches), 1.0)
-    chosen = _choose(executor, seconds * len(rest), progress)
+    chosen = call_watched(lambda: executor(seconds * len(rest)), lambda: progress(0.0), _send_home)
     if chosen is None:
         yield from _run_here(function, shared, rest, progress)
         return
@@ -120,28 +120,9 @@ def run_batches(function, shared, batches, executor=None, progress=silent):
         chosen.shutdown(wait=finished)
 
 
-def _choose(choose, seconds, progress):
-    """Ask for an executor, which may take a while, and look for cancellation meanwhile."""
-    asker = ThreadPoolExecutor(1)
-    asked = asker.submit(choose, seconds)
-    asker.shutdown(wait=False)
-    try:
-        while True:
-            progress(0.0)
-            try:
-                return asked.result(timeout=WAIT)
-            except (WaitTimeoutError, TimeoutError):
-                if asked.done():
-                    raise
-    except BaseException:
-        asked.add_done_callback(_send_home)
-        raise
-
-
-def _send_home(asked):
-    """Shut down an executor that nobody waits for any more."""
-    if asked.exception() is None and asked.result() is not None:
-        asked.result().shutdown(wait=False)
+def _send_home(executor):
+    if executor is not None:
+        executor.shutdown(wait=False)
 
 
 def _run_here(function, shared, batches, progress):

@@ -16,7 +16,8 @@ from .errors import InputError
 from .intervals import PublishedCounts, reconcile
 from .joint import whole_table
 from .overlay import atom_of_records, overlay
-from .progress import part, silent
+from .programmes import Watched, at_once
+from .progress import Remembered, part, silent
 from .remainders import disclosing, search
 from .wording import derivation
 from .words import Words
@@ -161,16 +162,24 @@ def audit(tables, least_count, tolerance=0.0, records=None, effort=EFFORT, progr
         A least count below 2, tables without zones, or counts that do not fit their zones.
     """
     _check(tables, least_count)
+    if progress is silent:
+        return _audit(tables, least_count, tolerance, records, effort, progress, at_once)
+    progress = Remembered(progress)
+    with Watched(progress.again) as solve:
+        return _audit(tables, least_count, tolerance, records, effort, progress, solve)
+
+
+def _audit(tables, least_count, tolerance, records, effort, progress, solve):
     laid = overlay([table.zones for table in tables], tolerance, part(progress, 0.0, 0.3))
     counts, atom_of, step_of = _statements(tables, laid)
     true_counts = _true_counts(tables, laid, atom_of, records)
-    searched, table, contradictions = _consistent(counts, tables, true_counts)
+    searched, table, contradictions = _consistent(counts, tables, true_counts, solve)
     progress(0.4)
     source = _sources(tables)
     findings, undecided, method = search(
-        searched, source, least_count, table, effort, part(progress, 0.4, 0.9)
+        searched, source, least_count, table, effort, part(progress, 0.4, 0.9), solve
     )
-    findings, doubtful = disclosing(counts, searched, findings, least_count)
+    findings, doubtful = disclosing(counts, searched, findings, least_count, solve)
     risks = [
         _risk(finding, tables, laid, counts, atom_of, step_of, true_counts) for finding in findings
     ]
@@ -268,11 +277,11 @@ def _true_counts(tables, laid, atom_of, records):
     return per_atom[atom_of].astype(float)
 
 
-def _consistent(counts, tables, true_counts):
+def _consistent(counts, tables, true_counts, solve):
     """Statements without contradiction, a whole table that agrees with them, and the quarrels."""
     if true_counts is not None and counts.holds(true_counts):
         return counts, true_counts, []
-    searched, table, loosened = reconcile(counts)
+    searched, table, loosened = reconcile(counts, solve)
     names = row_names(tables)
     words = [
         Words("{} would have to differ by {:.0f}", names[row], loosened[row])
@@ -281,7 +290,7 @@ def _consistent(counts, tables, true_counts):
     ]
     whole = np.round(table)
     if true_counts is not None:
-        nearest = whole_table(searched, true_counts)
+        nearest = whole_table(searched, true_counts, solve)
         whole = whole if nearest is None else nearest
     return searched, whole if searched.holds(whole) else None, words
 

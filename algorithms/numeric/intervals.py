@@ -7,6 +7,7 @@ from scipy import sparse
 from scipy.optimize import linprog
 
 from .errors import InputError
+from .programmes import at_once
 
 WHOLE = 1e-6
 
@@ -49,19 +50,22 @@ class Extreme:
     Attributes
     ----------
     value : float
-        Whole number; infinite when nothing limits it.
+        Whole number; infinite when nothing limits it, or when a largest one is not known.
     counts : (atoms,) float array or None
-        A table that reaches it; None when infinite.
+        A table that reaches it; None when infinite or not known.
     multipliers : (rows,) float array
         How often each row enters the derivation: the values of the dual programme.
     whole : bool
         Whether ``counts`` are whole numbers, so that the end is proven for whole numbers too.
+    decided : bool
+        False when the programme was left unsolved: ``value`` then is the widest end there is.
     """
 
     value: float
     counts: np.ndarray
     multipliers: np.ndarray
     whole: bool
+    decided: bool = True
 
 
 def exact(values):
@@ -217,7 +221,7 @@ def restricted(counts, atoms, given=None):
     return PublishedCounts(columns[rows], lower, upper), rows
 
 
-def extreme(counts, region, largest=True, whole=False):
+def extreme(counts, region, largest=True, whole=False, solve=at_once):
     """Largest or smallest number of records a union of atoms can hold (HiGHS through scipy).
 
     Parameters
@@ -228,17 +232,22 @@ def extreme(counts, region, largest=True, whole=False):
     largest : bool
     whole : bool
         Demand whole numbers (branch and bound; needs scipy 1.9, ignored before).
+    solve : callable
+        See `programmes`.
 
     Returns
     -------
     Extreme
         None when the statements contradict each other.
     """
-    result = _programme(counts, np.where(region, -1.0 if largest else 1.0, 0.0), whole)
+    result = _programme(counts, np.where(region, -1.0 if largest else 1.0, 0.0), whole, solve)
     if result.status == 2:
         return None
     if result.status == 3:
         return Extreme(np.inf, None, np.zeros(counts.rows), True)
+    if result.status != 0:
+        widest = np.inf if largest else 0.0
+        return Extreme(widest, None, np.zeros(counts.rows), False, decided=False)
     table = np.round(result.x)
     is_whole = np.abs(result.x - table).max(initial=0.0) < WHOLE and counts.holds(table)
     value = float(result.x[region].sum())
@@ -253,11 +262,17 @@ def interval(counts, region):
     return tuple(end.value for end in ends)
 
 
-def reconcile(counts):
+def reconcile(counts, solve=at_once):
     """A table that agrees with the statements, after the least loosening if none does.
 
     Loosening is measured as the sum of what is added to the bounds of all rows; it is zero when
     the statements do not contradict each other.
+
+    Parameters
+    ----------
+    counts : PublishedCounts
+    solve : callable
+        See `programmes`.
 
     Returns
     -------
@@ -272,19 +287,21 @@ def reconcile(counts):
     both = sparse.hstack([counts.membership, sparse.identity(rows), -sparse.identity(rows)])
     slack = PublishedCounts(sparse.csr_matrix(both), counts.lower, counts.upper)
     cost = np.concatenate([np.zeros(atoms), np.ones(2 * rows)])
-    result = _programme(slack, cost, False)
+    result = _programme(slack, cost, False, solve, must=True)
     under, over = np.split(result.x[atoms:], 2)
     under, over = np.ceil(under - WHOLE), np.ceil(over - WHOLE)
     loosened = replace(counts, lower=np.maximum(counts.lower - under, 0), upper=counts.upper + over)
     return loosened, result.x[:atoms], np.maximum(under, over)
 
 
-def _programme(counts, cost, whole):
+def _programme(counts, cost, whole, solve, must=False):
     fixed, above, below = _kinds(counts)
     matrix = counts.membership.astype(float)
     options = {"integrality": np.ones(matrix.shape[1])} if whole else {}
-    return linprog(
-        cost,
+    return solve(
+        linprog,
+        must,
+        c=cost,
         A_ub=sparse.vstack([matrix[above], -matrix[below]]) if (above | below).any() else None,
         b_ub=np.concatenate([counts.upper[above], -counts.lower[below]])
         if (above | below).any()

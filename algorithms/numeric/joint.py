@@ -12,6 +12,7 @@ import numpy as np
 from scipy import optimize, sparse
 
 from .intervals import WHOLE, PublishedCounts, extreme, restricted, tighten
+from .programmes import at_once
 from .progress import part, silent
 
 SHORT_ROW = 60
@@ -41,7 +42,9 @@ class Small:
     multipliers: np.ndarray
 
 
-def small_atoms(counts, least_count, table=None, effort=20_000, progress=silent, wanted=None):
+def small_atoms(
+    counts, least_count, table=None, effort=20_000, progress=silent, wanted=None, solve=at_once
+):
     """All atoms that no agreeing table fills with the least count.
 
     Parameters
@@ -56,6 +59,8 @@ def small_atoms(counts, least_count, table=None, effort=20_000, progress=silent,
     progress : callable
     wanted : (atoms,) bool array or None
         The atoms in question; all by default.
+    solve : callable
+        See `programmes`.
 
     Returns
     -------
@@ -69,16 +74,19 @@ def small_atoms(counts, least_count, table=None, effort=20_000, progress=silent,
         fewer = PublishedCounts(
             counts.membership[telling], counts.lower[telling], counts.upper[telling]
         )
-        found, undecided = small_atoms(fewer, least_count, table, effort, progress, ~enough)
+        found, undecided = small_atoms(
+            fewer, least_count, table, effort, progress, ~enough, solve
+        )  # fmt: skip
         return [_with_all_rows(small, telling, counts.rows) for small in found], undecided
     if table is None:
-        table = whole_table(counts, even_guess(counts))
+        table = whole_table(counts, even_guess(counts), solve)
     if table is not None:
         enough |= np.asarray(table) >= least_count
     if table is None:
-        return _decided(counts, least_count, enough, effort, progress)
-    spent = _fill_all(counts, least_count, table, enough, effort, part(progress, 0.0, 0.5))
-    return _decided(counts, least_count, enough, effort - spent, part(progress, 0.5, 1.0), table)
+        return _decided(counts, least_count, enough, effort, progress, solve)
+    spent = _fill_all(counts, least_count, table, enough, effort, part(progress, 0.0, 0.5), solve)
+    rest = part(progress, 0.5, 1.0)
+    return _decided(counts, least_count, enough, effort - spent, rest, solve, table)
 
 
 def _with_all_rows(small, rows, number):
@@ -88,7 +96,7 @@ def _with_all_rows(small, rows, number):
     return replace(small, multipliers=multipliers)
 
 
-def _fill_all(counts, least_count, table, enough, effort, progress):
+def _fill_all(counts, least_count, table, enough, effort, progress, solve):
     """Mark in ``enough`` what programmes over small neighbourhoods can fill."""
     columns = counts.membership.tocsc()
     short = np.diff(counts.membership.indptr) <= SHORT_ROW
@@ -102,7 +110,7 @@ def _fill_all(counts, least_count, table, enough, effort, progress):
         if spent > effort or (tried >= TRIALS and filled < 0.5 * tried):
             break
         near = _company(counts.membership, columns, atom, short, FILLED_TOGETHER)
-        spent += _fill(counts, near, atom, least_count, table, enough)
+        spent += _fill(counts, near, atom, least_count, table, enough, solve)
         tried, filled = tried + 1, filled + enough[atom]
     return spent
 
@@ -122,7 +130,7 @@ def _company(membership, columns, atom, short, size):
     return near
 
 
-def _decided(counts, least_count, enough, effort, progress, table=None):
+def _decided(counts, least_count, enough, effort, progress, solve, table=None):
     """Small atoms and undecided ones among those not known to hold enough."""
     columns = counts.membership.tocsc()
     found, undecided, spent = [], [], 0
@@ -135,18 +143,18 @@ def _decided(counts, least_count, enough, effort, progress, table=None):
             continue
         verdict = None
         for near in _growing(counts.membership, columns, atom):
-            verdict, cost = _bounded(counts, near, atom, least_count)
+            verdict, cost = _bounded(counts, near, atom, least_count, solve)
             spent += cost
             if verdict is not None:
                 break
             if table is not None:
-                spent += _fill_one(counts, near, atom, least_count, table, enough)
+                spent += _fill_one(counts, near, atom, least_count, table, enough, solve)
                 if enough[atom]:
                     break
         if enough[atom]:
             continue
         if verdict is None:
-            verdict, cost = _decide(counts, columns, atom, least_count, table)
+            verdict, cost = _decide(counts, columns, atom, least_count, table, solve)
             spent += cost
         if isinstance(verdict, Small):
             found.append(verdict)
@@ -155,19 +163,19 @@ def _decided(counts, least_count, enough, effort, progress, table=None):
     return found, np.array(undecided, int)
 
 
-def whole_table(counts, guess):
+def whole_table(counts, guess, solve=at_once):
     """The table of whole numbers nearest to a guess that agrees with the statements.
 
     Near in the sum of absolute differences. None if none was found.
     """
-    near_table = _nearest(counts, guess)
+    near_table = _nearest(counts, guess, solve)
     if near_table is None:
         return None
     table = np.round(near_table)
     return table if counts.holds(table) else None
 
 
-def _nearest(counts, guess):
+def _nearest(counts, guess, solve):
     """The table nearest to a guess, not always whole; None when no table agrees."""
     atoms = counts.atoms
     matrix = counts.membership.astype(float)
@@ -184,7 +192,7 @@ def _nearest(counts, guess):
         "bounds": np.c_[np.zeros(2 * atoms), np.r_[np.full(atoms, np.inf), guess]],
         "method": "highs",
     }
-    result = optimize.linprog(**problem)
+    result = solve(optimize.linprog, **problem)
     if result.status != 0:
         return None
     more, fewer = np.split(result.x, 2)
@@ -230,7 +238,7 @@ def _growing(membership, columns, atom):
         reached = wider
 
 
-def _fill(counts, near, atom, least_count, table, enough):
+def _fill(counts, near, atom, least_count, table, enough, solve):
     """Put the least count into as many atoms of a neighbourhood as possible, one above all.
 
     The rest of the ground stays as in ``table``. Marks in ``enough`` what was reached and returns
@@ -251,8 +259,9 @@ def _fill(counts, near, atom, least_count, table, enough):
         sparse.hstack([-matrix[~fixed], blank[~fixed]]),
         sparse.hstack([-cap, cap]),
     ]
-    result = optimize.linprog(
-        np.concatenate([np.zeros(number), -wish]),
+    result = solve(
+        optimize.linprog,
+        c=np.concatenate([np.zeros(number), -wish]),
         A_ub=sparse.vstack(inequalities),
         b_ub=np.concatenate([local.upper[loose], -local.lower[~fixed], np.zeros(number)]),
         A_eq=sparse.hstack([matrix, blank]).tocsr()[fixed] if fixed.any() else None,
@@ -269,15 +278,15 @@ def _fill(counts, near, atom, least_count, table, enough):
     return _cost(number)
 
 
-def _fill_one(counts, near, atom, least_count, table, enough):
+def _fill_one(counts, near, atom, least_count, table, enough, solve):
     """Put the least count into one atom with as few other changes to ``table`` as possible."""
     local, _ = restricted(counts, near, table)
-    if _filled(local, np.flatnonzero(near == atom), least_count, table[near]):
+    if _filled(local, np.flatnonzero(near == atom), least_count, table[near], solve):
         enough[atom] = True
     return _cost(len(near))
 
 
-def _filled(counts, atom, least_count, table):
+def _filled(counts, atom, least_count, table, solve):
     """Whether few changes to a table, in whole numbers, put the least count into one atom."""
     row = sparse.csr_matrix((np.ones(1), (np.zeros(1, int), atom)), (1, counts.atoms))
     demanded = PublishedCounts(
@@ -285,14 +294,14 @@ def _filled(counts, atom, least_count, table):
         np.append(counts.lower, least_count),
         np.append(counts.upper, np.inf),
     )
-    near_table = _nearest(demanded, table)
+    near_table = _nearest(demanded, table, solve)
     if near_table is None:
         return False
     whole = np.round(near_table)
-    return demanded.holds(whole) or _whole_in_corridor(demanded, table, near_table)
+    return demanded.holds(whole) or _whole_in_corridor(demanded, table, near_table, solve)
 
 
-def _whole_in_corridor(demanded, table, near_table):
+def _whole_in_corridor(demanded, table, near_table, solve):
     """Whether whole numbers do where a programme moved records in fractions, and close by."""
     moved = np.flatnonzero(np.abs(near_table - table) > WHOLE)
     short = np.diff(demanded.membership.indptr) <= SHORT_ROW
@@ -301,14 +310,14 @@ def _whole_in_corridor(demanded, table, near_table):
     if len(corridor) > CORRIDOR or not hasattr(optimize, "milp"):
         return False
     local, _ = restricted(demanded, corridor, table)
-    result = _branch(local, np.zeros(local.atoms))
+    result = _branch(local, np.zeros(local.atoms), solve)
     return result.x is not None and local.holds(np.round(result.x))
 
 
-def _bounded(counts, near, atom, least_count):
+def _bounded(counts, near, atom, least_count, solve):
     """Small, if the rows of a neighbourhood alone show it, and the effort it took."""
     nearby, rows = restricted(counts, near)
-    most = extreme(nearby, near == atom)
+    most = extreme(nearby, near == atom, solve=solve)
     if most.value >= least_count:
         return None, _cost(len(near))
     multipliers = np.zeros(counts.rows)
@@ -316,16 +325,18 @@ def _bounded(counts, near, atom, least_count):
     return Small(atom, most.value, multipliers), _cost(len(near))
 
 
-def _decide(counts, columns, atom, least_count, table):
+def _decide(counts, columns, atom, least_count, table, solve):
     """Small, True (not small) or None (undecided) by all that is connected, and the effort."""
     near = _near(counts.membership, columns, atom, counts.rows, np.ones(counts.rows, bool))
     nearby, rows = restricted(counts, near)
     spent = _cost(len(near))
     if table is not None and _filled(
-        nearby, np.flatnonzero(near == atom), least_count, table[near]
-    ):
+        nearby, np.flatnonzero(near == atom), least_count, table[near], solve
+    ):  # fmt: skip
         return True, spent
-    most = extreme(nearby, near == atom)
+    most = extreme(nearby, near == atom, solve=solve)
+    if not most.decided:
+        return None, 2 * spent
     if most.value < least_count:
         multipliers = np.zeros(counts.rows)
         multipliers[rows] = most.multipliers
@@ -334,14 +345,15 @@ def _decide(counts, columns, atom, least_count, table):
         return True, 2 * spent
     if len(near) > BRANCHING:
         return None, 2 * spent
-    return _by_whole_numbers(nearby, near == atom, least_count, atom, counts.rows), 10 * spent
+    verdict = _by_whole_numbers(nearby, near == atom, least_count, atom, counts.rows, solve)
+    return verdict, 10 * spent
 
 
-def _by_whole_numbers(part, region, least_count, atom, rows):
+def _by_whole_numbers(part, region, least_count, atom, rows, solve):
     """Branch and bound for one atom whose linear programme ends between whole numbers."""
     if not hasattr(optimize, "milp"):
         return None
-    result = _branch(part, np.where(region, -1.0, 0.0))
+    result = _branch(part, np.where(region, -1.0, 0.0), solve)
     if result.x is not None:
         table = np.round(result.x)
         if part.holds(table) and table[region].sum() >= least_count:
@@ -351,9 +363,10 @@ def _by_whole_numbers(part, region, least_count, atom, rows):
     return Small(atom, float(np.round(-result.fun)), np.zeros(rows))
 
 
-def _branch(counts, cost):
-    return optimize.milp(
-        cost,
+def _branch(counts, cost, solve):
+    return solve(
+        optimize.milp,
+        c=cost,
         integrality=np.ones(counts.atoms),
         constraints=optimize.LinearConstraint(
             counts.membership.astype(float), counts.lower, counts.upper

@@ -9,6 +9,21 @@ def silent(share):
     """Report nothing and never cancel."""
 
 
+class Remembered:
+    """A progress callable that can be called again with the share it was told last."""
+
+    def __init__(self, progress):
+        self._progress = progress
+        self._share = 0.0
+
+    def __call__(self, share):
+        self._share = share
+        self._progress(share)
+
+    def again(self):
+        self._progress(self._share)
+
+
 def part(progress, start, stop):
     """Return a progress callable whose 0 to 1 is the stretch start to stop of another.
 

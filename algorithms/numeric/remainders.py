@@ -7,6 +7,7 @@ import numpy as np
 from .crossings import Network, two_families
 from .intervals import PublishedCounts, extreme, reconcile
 from .joint import covered_atoms, small_atoms
+from .programmes import at_once
 from .progress import part, silent
 
 COMBINATIONS = 500
@@ -43,7 +44,7 @@ class Finding:
         return "range" if self.lower >= 1 else "at most"
 
 
-def search(counts, source, least_count, table, effort, progress=silent):
+def search(counts, source, least_count, table, effort, progress=silent, solve=at_once):
     """For every unknown that cannot hold the least count, the remainder that limits it.
 
     Parameters
@@ -58,6 +59,8 @@ def search(counts, source, least_count, table, effort, progress=silent):
     effort : int
         Most linear programmes, see `joint.small_atoms`.
     progress : callable
+    solve : callable
+        See `programmes`.
 
     Returns
     -------
@@ -71,11 +74,17 @@ def search(counts, source, least_count, table, effort, progress=silent):
     if family is not None and table is not None:
         network = Network(counts, family, table)
         return network_findings(counts, network, least_count, progress), np.empty(0, int), "network"
-    findings = _pairs(counts, source, least_count, table, part(progress, 0.0, 0.4))
-    together, undecided = _together(
-        counts, least_count, table, effort, findings, part(progress, 0.4, 1.0)
+    findings = _pairs(counts, source, least_count, table, part(progress, 0.0, 0.4), solve)
+    together, undecided, unsolved = _together(
+        counts, least_count, table, effort, findings, part(progress, 0.4, 0.8), solve
     )
-    refined = [_refined(counts, finding) for finding in findings]
+    refined = []
+    for turn, finding in enumerate(findings):
+        progress(0.8 + 0.2 * turn / len(findings))
+        narrowed, solved = _refined(counts, finding, solve)
+        refined.append(narrowed)
+        unsolved |= frozenset() if solved else finding.unknowns
+    undecided = np.union1d(undecided, sorted(unsolved)).astype(int)
     return refined + together, undecided, "programmes"
 
 
@@ -103,7 +112,7 @@ def network_findings(counts, network, least_count, progress=silent):
     return findings
 
 
-def _pairs(counts, source, least_count, table, progress):
+def _pairs(counts, source, least_count, table, progress, solve):
     """What any two tables give away; with more tables in play, true but not all."""
     numbers = np.unique(source)
     pairs = [(a, b) for a in numbers for b in numbers if a < b]
@@ -117,7 +126,7 @@ def _pairs(counts, source, least_count, table, progress):
         family = two_families(sub.membership)
         start = None if table is None else table[atoms]
         if family is not None and start is None:
-            start = np.round(reconcile(sub)[1])
+            start = np.round(reconcile(sub, solve)[1])
         stretch = part(progress, turn / len(pairs), (turn + 1) / len(pairs))
         if family is None or not sub.holds(start):
             continue
@@ -134,16 +143,24 @@ def _pairs(counts, source, least_count, table, progress):
     return findings
 
 
-def _together(counts, least_count, table, effort, known, progress):
-    """What all tables give away together, beyond what two of them already disclose."""
+def _together(counts, least_count, table, effort, known, progress, solve):
+    """What all tables give away together, beyond what two of them already disclose.
+
+    Returns
+    -------
+    findings : list of Finding
+    undecided : int array
+    unsolved : frozenset of int
+        Unknowns of findings whose interval is not known to be the narrowest.
+    """
     certain = np.zeros(counts.atoms, bool)
     for finding in known:
         if finding.lower >= 1 or finding.upper == 0:
             certain[list(finding.unknowns)] = True
     small, undecided = small_atoms(
-        counts, least_count, table, effort, part(progress, 0.0, 0.8), ~certain
+        counts, least_count, table, effort, part(progress, 0.0, 0.8), ~certain, solve
     )
-    findings = []
+    findings, unsolved = [], frozenset()
     for turn, one in enumerate(small):
         progress(0.8 + 0.2 * turn / len(small))
         unknowns = covered_atoms(counts, one.multipliers)
@@ -153,30 +170,32 @@ def _together(counts, least_count, table, effort, known, progress):
         plain = np.allclose(np.abs(one.multipliers[rows]), 1)
         added = rows[one.multipliers[rows] > 0] if plain else ()
         subtracted = rows[one.multipliers[rows] < 0] if plain else ()
-        lower, upper = _interval(counts, unknowns, one.upper)
+        lower, upper, solved = _interval(counts, unknowns, one.upper, solve)
         findings.append(
             Finding(
                 frozenset(unknowns.tolist()), lower, upper,
                 tuple(map(int, added)), tuple(map(int, subtracted)),
             )
         )  # fmt: skip
-    return findings, undecided
+        unsolved |= frozenset() if solved else findings[-1].unknowns
+    return findings, undecided, unsolved
 
 
-def _refined(counts, finding):
-    """A finding of two tables with the interval that all tables leave."""
+def _refined(counts, finding, solve):
+    """A finding of two tables with the interval that all tables leave, and if that is known."""
     if finding.lower == finding.upper:
-        return finding
-    lower, upper = _interval(counts, sorted(finding.unknowns), finding.upper)
-    return replace(finding, lower=max(lower, finding.lower), upper=upper)
+        return finding, True
+    lower, upper, solved = _interval(counts, sorted(finding.unknowns), finding.upper, solve)
+    return replace(finding, lower=max(lower, finding.lower), upper=upper), solved
 
 
-def _interval(counts, unknowns, upper):
-    """Interval of a union whose largest count is at most ``upper``."""
+def _interval(counts, unknowns, upper, solve):
+    """Interval of a union whose largest count is at most ``upper``, and if it is the narrowest."""
     region = np.zeros(counts.atoms, bool)
     region[unknowns] = True
-    most, least = extreme(counts, region), extreme(counts, region, largest=False)
-    return least.value, min(upper, most.value)
+    most = extreme(counts, region, solve=solve)
+    least = extreme(counts, region, largest=False, solve=solve)
+    return least.value, min(upper, most.value), most.decided and least.decided
 
 
 def _unknowns_of(counts, row):
@@ -184,7 +203,7 @@ def _unknowns_of(counts, row):
     return frozenset(matrix.indices[matrix.indptr[row] : matrix.indptr[row + 1]].tolist())
 
 
-def disclosing(stated, searched, findings, least_count):
+def disclosing(stated, searched, findings, least_count, solve=at_once):
     """Findings that tell more than a published count says of itself.
 
     A count that is stated to lie in an interval from 0 (a rounded 0), or in the whole of
@@ -199,12 +218,14 @@ def disclosing(stated, searched, findings, least_count):
         As published, and as searched (loosened where they contradict each other).
     findings : list of Finding
     least_count : int
+    solve : callable
+        See `programmes`.
 
     Returns
     -------
     findings : list of Finding
     doubtful : int array
-        Unknowns for which combinations of small cells were too many to try.
+        Unknowns for which combinations of small cells were too many, or too hard, to try.
     """
     empty = frozenset().union(*(f.unknowns for f in findings if f.upper == 0))
     columns = stated.membership.tocsc()
@@ -217,7 +238,7 @@ def disclosing(stated, searched, findings, least_count):
     risks = _without_consequences(list(judged.values()))
     small = frozenset().union(*(f.unknowns for f in findings)) - empty
     quiet = small - frozenset().union(*(f.unknowns for f in risks if f.lower >= 1))
-    forced, doubtful = _forced(stated, searched, quiet, least_count)
+    forced, doubtful = _forced(stated, searched, quiet, least_count, solve)
     for finding in forced:
         if not _is_stated(stated, columns, finding, least_count, empty):
             risks.append(finding)
@@ -283,7 +304,7 @@ def _without_consequences(risks):
     return kept
 
 
-def _forced(stated, searched, quiet, least_count):
+def _forced(stated, searched, quiet, least_count, solve):
     """Unions of cells stated to be small that together must hold someone, yet few.
 
     All unions that must hold someone contain a smallest such union; those are enumerated by
@@ -299,15 +320,22 @@ def _forced(stated, searched, quiet, least_count):
         left_out = waiting.pop()
         region = np.zeros(counts.atoms, bool)
         region[[unknown for unknown in quiet if unknown not in left_out]] = True
-        union, cost = _smallest_forced(counts, region)
+        union, cost, solved = _smallest_forced(counts, region, solve)
         spent += cost
+        if not solved:
+            return findings, quiet
         if union is None:
             continue
         if spent > COMBINATIONS:
             return findings, quiet
-        most = extreme(searched, np.isin(np.arange(counts.atoms), union))
+        own_ground = np.isin(np.arange(counts.atoms), union)
+        most = extreme(searched, own_ground, solve=solve)
+        if not most.decided:
+            return findings, quiet
         if most.value < least_count:
-            least = extreme(searched, np.isin(np.arange(counts.atoms), union), largest=False)
+            least = extreme(searched, own_ground, largest=False, solve=solve)
+            if not least.decided:
+                return findings, quiet
             findings.append(Finding(frozenset(union.tolist()), least.value, most.value))
         for unknown in union.tolist():
             fewer = left_out | {unknown}
@@ -317,19 +345,33 @@ def _forced(stated, searched, quiet, least_count):
     return findings, np.empty(0, int)
 
 
-def _smallest_forced(counts, region):
-    """A union within a region that must hold someone and has no part that must."""
-    least = extreme(counts, region, largest=False)
+def _smallest_forced(counts, region, solve):
+    """A union within a region that must hold someone and has no part that must.
+
+    Returns
+    -------
+    union : int array or None
+    spent : int
+        Programmes solved.
+    solved : bool
+        False when a programme was left unsolved, so that nothing follows.
+    """
+    least = extreme(counts, region, largest=False, solve=solve)
     if least.value < 1:
-        return None, 1
+        return None, 1, least.decided
     union = np.flatnonzero(region & (counts.membership.T @ -least.multipliers > 1e-6))
     spent = 1
     if len(union) > SHRINKABLE:
-        return union, spent
+        return union, spent, True
     for unknown in union.tolist():
         fewer = np.zeros(counts.atoms, bool)
         fewer[union[union != unknown]] = True
         spent += 1
-        if fewer.any() and extreme(counts, fewer, largest=False).value >= 1:
+        if not fewer.any():
+            continue
+        least = extreme(counts, fewer, largest=False, solve=solve)
+        if not least.decided:
+            return None, spent, False
+        if least.value >= 1:
             union = union[union != unknown]
-    return union, spent
+    return union, spent, True

@@ -20,7 +20,8 @@ import subprocess
 import sys
 import threading
 import zipfile
-from concurrent.futures import Executor, Future
+from concurrent.futures import Executor, Future, ThreadPoolExecutor
+from concurrent.futures import TimeoutError as WaitTimeoutError
 from contextlib import suppress
 from pathlib import Path
 from queue import SimpleQueue
@@ -32,6 +33,7 @@ MOST_WORKERS = 8
 START_SECONDS = 1.5  # until a worker has imported what it needs; 0.7 with warm disks
 PROBE_SECONDS = 20
 SCHEDULER_SECONDS = 10.0
+BETWEEN_LOOKS = 0.1
 
 # Runs by itself in another Python. The core comes from the archive, so that a worker never
 # computes with another version than the one that asks; a process that runs the asking copy itself
@@ -156,6 +158,41 @@ def local_workers(seconds):
         return PipeExecutor(python, workers)
     except OSError:
         return None
+
+
+def call_watched(function, look, let_go):
+    """Call a function that takes a while and look for cancellation meanwhile.
+
+    Parameters
+    ----------
+    function : callable
+        Takes nothing; runs on a thread of its own.
+    look : callable
+        Takes nothing; raises ``CancelledError`` when the user asked to stop.
+    let_go : callable
+        Is told the function's result when nobody waits for it any more.
+
+    Returns
+    -------
+    object
+        What the function returns.
+    """
+    asker = ThreadPoolExecutor(1)
+    asked = asker.submit(function)
+    asker.shutdown(wait=False)
+    try:
+        while True:
+            look()
+            try:
+                return asked.result(timeout=BETWEEN_LOOKS)
+            except (WaitTimeoutError, TimeoutError):
+                if asked.done():
+                    raise
+    except BaseException:
+        asked.add_done_callback(
+            lambda done: let_go(done.result()) if done.exception() is None else None
+        )
+        raise
 
 
 class PipeExecutor(Executor):
