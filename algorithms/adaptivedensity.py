@@ -199,7 +199,7 @@ def write_companions(job, study, found):
             "ERROR",
             study.grid,
             [Band("relative_standard_error", error, tr("of the density"))],
-            looks.ramp(1, looks.spread(looks.SEQUENCE, 0.0, 1.0), ""),
+            looks.ramp(1, looks.spread(looks.SEQUENCE, 0.0, 1.0), tr("of the density")),
         )
     if job.wanted("SUPPORT"):
         support = np.where(found.inside, found.effective, np.nan)

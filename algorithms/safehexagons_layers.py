@@ -70,9 +70,9 @@ def write_release(job, study, made, shown, shapes):
     if study.plan.method == NOISE and study.plan.seed is not None:
         words = [tr("rehearsal: not for release")] * len(shown)
         columns.append(Column("note", "text", words, tr("Note")))
-    field, values, unit = "count", count, ""
+    field, values, unit = "count", count, "" if job.field("WEIGHT") else tr("records")
     if share is not None:
-        field, values = "share", share
+        field, values, unit = "share", share, tr("of the count")
     elif study.plan.method == MERGE:
         # zones differ in size, so their counts cannot be compared by colour
         field, values, unit = "per_km2", count / kilometres, tr("per km²")

@@ -11,7 +11,8 @@ def published_counts(layer):
     """Look: counts in groups of equally many distinct values; withheld ones in grey."""
     counts = [feature["count"] for feature in layer.getFeatures()]
     known = np.array([count for count in counts if isinstance(count, (int, float))], float)
-    looks.groups_or_missing("count", looks.groups_of(known), tr("withheld"))(layer)
+    groups = looks.groups_of(known)
+    looks.groups_or_missing("count", groups, tr("withheld"), unit=tr("records"))(layer)
 
 
 def published_density(layer):

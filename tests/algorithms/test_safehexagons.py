@@ -7,7 +7,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 import shapely
-from qgis.core import QgsProcessingException
+from qgis.core import QgsProcessingException, QgsVectorLayer
 
 sys.path.insert(0, str(Path(__file__).parent.parent))
 import attacker
@@ -460,3 +460,18 @@ def test_a_cancelled_run_leaves_nothing(made, tmp_path):
     with pytest.raises(QgsProcessingException):
         made(METHOD=1, regions=True, cancel_at=0.2)
     assert not list(tmp_path.iterdir())
+
+
+@pytest.mark.parametrize(
+    ("parameters", "unit"),
+    [
+        ({}, "records"),
+        ({"NUMERATOR": "severe"}, "of the count"),
+        ({"METHOD": 1}, "per km²"),
+    ],
+)
+def test_the_legend_says_what_is_counted(made, parameters, unit):
+    layer = QgsVectorLayer(made(**parameters)[0]["RELEASE"], "release", "ogr")
+    missing, *groups = [one.label() for one in layer.renderer().legendSymbolItems()]
+    assert missing == "withheld"
+    assert groups and all(words.endswith(f" {unit}") for words in groups)
