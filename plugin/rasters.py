@@ -200,7 +200,7 @@ def label_polygons(labels, grid):
     raster.SetGeoTransform(_transform_of(grid))
     band = raster.GetRasterBand(1)
     band.WriteArray(labels.astype(np.int32))
-    source = ogr.GetDriverByName("Memory").CreateDataSource("")
+    source = _features_in_memory()
     table = source.CreateLayer("labels")
     table.CreateField(ogr.FieldDefn("label", ogr.OFTInteger))
     gdal.Polygonize(band, band, table, 0)
@@ -211,6 +211,11 @@ def label_polygons(labels, grid):
     outlines = np.empty(len(parts), object)
     outlines[:] = [shapely.multipolygons(found) for found in parts]
     return outlines
+
+
+def _features_in_memory():
+    """A vector data set in memory; newer raster libraries keep it with their rasters."""
+    return (ogr.GetDriverByName("Memory") or ogr.GetDriverByName("MEM")).CreateDataSource("")
 
 
 def count_on_pixels(geometry, grid):
@@ -236,7 +241,7 @@ def count_on_pixels(geometry, grid):
     for chosen, options in ((lines, ["ALL_TOUCHED=TRUE"]), (~lines, [])):
         if not chosen.any():
             continue
-        source = ogr.GetDriverByName("Memory").CreateDataSource("")
+        source = _features_in_memory()
         table = source.CreateLayer("features", plane)
         for wkb in shapely.to_wkb(geometry[chosen]):
             feature = ogr.Feature(table.GetLayerDefn())
