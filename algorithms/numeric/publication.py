@@ -1,6 +1,6 @@
 """The table behind a release: cells, regions and totals as sums of atoms, and what to protect."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 
 import numpy as np
 from scipy import sparse
@@ -38,6 +38,20 @@ class Behind:
         """(parts, cells) array of totals; one part without a numerator."""
         return np.array([part.total for part in self.parts or (self.whole,)])
 
+    def spread(self, cells, cell_count):
+        """The same among all cells of a tiling, of which these hold records."""
+
+        def among_all(own):
+            every = np.zeros(cell_count, own.dtype)
+            every[cells] = own
+            return every
+
+        def all_of(part):
+            return Contributions(*(among_all(getattr(part, one.name)) for one in fields(part)))
+
+        parts = tuple(all_of(part) for part in self.parts)
+        return Behind(all_of(self.whole), parts, among_all(self.unsafe))
+
 
 @dataclass(frozen=True)
 class Table:
@@ -54,6 +68,8 @@ class Table:
         Cell and region numbers of the first and the second stretch of the sums.
     grand : bool
         Whether the last sum is the grand total.
+    behind : Behind
+        Of the cells that hold records.
     """
 
     sums: Sums
@@ -63,6 +79,7 @@ class Table:
     cells: np.ndarray
     regions: np.ndarray
     grand: bool
+    behind: Behind
 
     def spread(self, per_sum, cell_count, empty):
         """Bring a value per sum to all cells of the tiling, `empty` where no record lies."""
@@ -183,6 +200,7 @@ def table_of(
         occupied,
         present,
         grand_total,
+        behinds[0],
     )
 
 

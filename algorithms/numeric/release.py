@@ -58,12 +58,12 @@ def release(records, q, r, region_count, plan, progress=silent, apart=None):
         zones, failed = _merged(records, q, r, plan, rng, part(progress, 0.0, 0.4), apart)
         progress = part(progress, 0.4, 1.0)
     count = int(zones.max(initial=-1)) + 1
-    behind = records.behind(zones, count, plan.rules)
     of_record = np.where(records.cells >= 0, zones[records.cells], -1)
     table = table_of(
         of_record, count, plan.rules, records.weights, records.contributors, records.numerator,
         records.regions, plan.region_totals, plan.grand_total,
     )  # fmt: skip
+    behind = table.behind.spread(table.cells, count)
     rounded = plan.method in (ROUND, CONTROLLED)
     unsafe = _not_protected_by_rounding(table, plan) if rounded else table.unsafe
     published, complementary = ~unsafe, np.zeros(len(unsafe), bool)

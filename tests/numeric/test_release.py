@@ -2,6 +2,7 @@
 
 import itertools
 import sys
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -52,6 +53,29 @@ def test_every_published_zone_meets_the_rule_when_the_records_are_counted_again(
         true = (zones == zone).sum()
         if np.isfinite(value):
             assert value == true >= LEAST
+
+
+@pytest.mark.parametrize("totals", [False, True])
+@pytest.mark.parametrize("method", ["withhold", "merge", "round"])
+def test_the_custodian_is_told_who_stands_behind_every_zone(method, totals):
+    records, count, regions = practice(3)
+    rng = np.random.default_rng(5)
+    households, weights = (
+        rng.integers(0, 40, len(records.cells)),
+        rng.exponential(1, len(records.cells)),
+    )
+    records = replace(records, contributors=households, weights=weights)
+    made = run(records, count, regions, method=method, region_totals=totals, grand_total=totals)
+    zones = made.zones[records.cells]
+    for zone in range(len(made.count())):
+        mine = zones == zone
+        by_household = np.sort(np.bincount(households[mine], weights[mine]))[::-1]
+        assert made.behind.whole.records[zone] == mine.sum()
+        assert made.behind.whole.contributors[zone] == len(set(households[mine]))
+        assert made.behind.whole.total[zone] == pytest.approx(weights[mine].sum())
+        largest = by_household[0] if mine.any() else 0.0
+        assert made.behind.whole.largest[zone] == pytest.approx(largest)
+        assert made.unsafe[zone] == (0 < len(set(households[mine])) < LEAST)
 
 
 @pytest.mark.parametrize("seed", range(6))
