@@ -55,31 +55,55 @@ class Proofs:
         self.targets = targets
         self.values = target_values(sums, targets)
         self.slack = TOLERANCE * np.maximum(self.values, 1.0)
-        self._tables, self._moved, self._owner = [], [], []
+        count = sums.members.shape[0]
+        self._of_all, self._of_one = _Tables(count), _Tables(count)
 
     def add(self, table, owner=-1):
         """Keep a table of deviations; `owner` is the only target it counts for, -1 for all."""
-        self._tables.append((self.sums.members @ table.T).T)
+        changed = np.abs(self.sums.members @ table.T).max(axis=1) > TOLERANCE
         moved = np.zeros(len(self.values))
         for part, deviation in zip(self.targets.parts.T, table):
             moved += part * (self.targets.members @ deviation)
-        self._moved.append(moved)
-        self._owner.append(owner)
+        if owner < 0:
+            self._of_all.add(changed, moved)
+        else:
+            self._of_one.add(changed, (owner, moved[owner]))
 
     def reach(self, published, direction):
         """How far each target deviates in the tables that agree with what is published."""
         best = np.zeros(len(self.values))
-        for sums, moved, owner in zip(self._tables, self._moved, self._owner):
-            if np.abs(sums[:, published]).max(initial=0.0) > TOLERANCE:
-                continue
-            if owner < 0:
-                np.maximum(best, direction * moved, out=best)
-            else:
-                best[owner] = max(best[owner], direction * moved[owner])
+        for moved in self._of_all.agreeing(published):
+            np.maximum(best, direction * moved, out=best)
+        own = self._of_one.agreeing(published)
+        if len(own):
+            owner, moved = np.transpose(own)
+            np.maximum.at(best, owner.astype(np.int64), direction * moved)
         return best
 
 
-def unprotected(sums, targets, published, progress=silent, proofs=None, among=None, any_one=False):
+class _Tables:
+    """What tables show, and the sums they change as one bit each, for a quick comparison."""
+
+    def __init__(self, sums):
+        self._shown = []
+        self._changed = np.empty((64, -(-sums // 8)), np.uint8)
+
+    def add(self, changed, shown):
+        many = len(self._shown)
+        if many == len(self._changed):
+            self._changed = np.concatenate([self._changed, np.empty_like(self._changed)])
+        self._changed[many] = np.packbits(changed)
+        self._shown.append(shown)
+
+    def agreeing(self, published):
+        """What those tables show that change no published sum."""
+        if not self._shown:
+            return []
+        bits = self._changed[: len(self._shown)] & np.packbits(published)
+        return [self._shown[place] for place in np.flatnonzero(~bits.any(axis=1))]
+
+
+def unprotected(sums, targets, published, progress=silent, proofs=None, among=None):
     """Targets that an outsider can place more narrowly than their protection range.
 
     Parameters
@@ -92,8 +116,6 @@ def unprotected(sums, targets, published, progress=silent, proofs=None, among=No
         Filled, and used again by the next call.
     among : (targets,) bool array or None
         Check only these.
-    any_one : bool
-        Stop at the first one that is found.
 
     Returns
     -------
@@ -101,40 +123,114 @@ def unprotected(sums, targets, published, progress=silent, proofs=None, among=No
         Unprotected towards the lower, and towards the upper end of the range.
     """
     proofs = Proofs(sums, targets) if proofs is None else proofs
-    active = targets.active(published) & (True if among is None else among)
-    programmes = Deviations(sums, published)
-    exchange = exchange_reach(sums, targets, published, active)
-    failing = []
-    for direction, within in zip((-1, 1), exchange):
+    sides = _sides(proofs, published, among)
+    _prove_by_exchange(proofs, published, sides)
+    for side in sides:
+        side.prove_together(progress)
+        side.prove_each(side.open_ones(), progress)
+    return tuple(side.short() for side in sides)
+
+
+def any_unprotected(proofs, published, suspects, progress=silent):
+    """Whether `unprotected` would find a target; stops at the first one.
+
+    Parameters
+    ----------
+    proofs : Proofs
+    published : (sums,) bool array
+    suspects : (targets,) bool array
+        Targets that are likely to be found, to be tried first.
+    progress : callable
+
+    Returns
+    -------
+    bool
+    """
+    sides = _sides(proofs, published)
+    for side in sides:
+        likely = side.open_ones()
+        if side.prove_each(likely[suspects[likely]], progress, stop=True):
+            return True
+    _prove_by_exchange(proofs, published, sides)
+    for side in sides:
+        side.prove_together(progress)
+        if side.prove_each(side.open_ones(), progress, stop=True):
+            return True
+    return False
+
+
+def _sides(proofs, published, among=None):
+    """The lower and the upper ends of the ranges."""
+    active = proofs.targets.active(published) & (True if among is None else among)
+    programmes = Deviations(proofs.sums, published)
+    return [_Side(proofs, programmes, active, direction) for direction in (-1, 1)]
+
+
+def _prove_by_exchange(proofs, published, sides):
+    unproven = np.zeros(len(proofs.values), bool)
+    for side in sides:
+        unproven[side.open_ones()] = True
+    within = exchange_reach(proofs.sums, proofs.targets, published, unproven)
+    for side, reach in zip(sides, within):
+        # what a programme decided is the most there is
+        np.maximum(side.reached, reach, out=side.reached, where=~side.decided)
+
+
+class _Side:
+    """How far the active targets are known to deviate towards one end of their ranges."""
+
+    def __init__(self, proofs, programmes, active, direction):
+        self.proofs, self.programmes, self.direction = proofs, programmes, direction
+        self.active = active
+        targets = proofs.targets
         end = targets.upper if direction > 0 else targets.lower
-        gap = direction * (end - proofs.values)
-        needed = gap - proofs.slack
-        reached = np.maximum(within, proofs.reach(published, direction))
+        self.gap = direction * (end - proofs.values)
+        self.needed = self.gap - proofs.slack
+        self.reached = proofs.reach(programmes.published, direction)
+        self.decided = ~active
+
+    def short(self):
+        """Targets not known to reach their end; once none is open, those that cannot."""
+        return self.active & (self.reached < self.needed)
+
+    def open_ones(self):
+        """Those that are neither proven nor decided by a programme of their own."""
+        return np.flatnonzero(self.short() & ~self.decided)
+
+    def prove_together(self, progress):
+        """Prove many targets by few tables, as long as each table proves something."""
         while True:
             progress(0.0)
-            open_ones = np.flatnonzero(active & (reached < needed))
-            if len(open_ones) < 2:
-                break
-            table = programmes.together(targets, open_ones, gap[open_ones], direction)
+            places = self.open_ones()
+            if len(places) < 2:
+                return
+            table = self.programmes.together(
+                self.proofs.targets, places, self.gap[places], self.direction
+            )
             if table is None:
-                break
-            proofs.add(table)
-            reached = np.maximum(reached, proofs.reach(published, direction))
-            if (reached[open_ones] < needed[open_ones]).all():
-                break
-        for place in open_ones:
+                return
+            self.proofs.add(table)
+            shown = self.proofs.reach(self.programmes.published, self.direction)
+            np.maximum(self.reached, shown, out=self.reached)
+            if len(self.open_ones()) == len(places):
+                return
+
+    def prove_each(self, places, progress, stop=False):
+        """Decide targets by a programme each; whether one fell short, the first with `stop`."""
+        targets = self.proofs.targets
+        found = False
+        for place in places:
             progress(0.0)
             members = targets.members[place].indices
             parts = np.flatnonzero(targets.parts[place])
-            reached[place], table = programmes.reach(members, parts, direction, gap[place])
+            reached, table = self.programmes.reach(members, parts, self.direction, self.gap[place])
+            self.reached[place], self.decided[place] = reached, True
             if table is not None:
-                proofs.add(table, place)
-            if any_one and reached[place] < needed[place]:
+                self.proofs.add(table, place)
+            found |= reached < self.needed[place]
+            if found and stop:
                 break
-        failing.append(active & (reached < needed))
-        if any_one and failing[-1].any():
-            break
-    return failing[0], failing[-1]
+        return found
 
 
 def complementary_withholding(sums, targets, withheld, cost, fixed, rng, progress=silent):
@@ -276,8 +372,7 @@ def _publish_what_is_not_needed(proofs, published, complementary, costs, rng, pr
         if rng.random() < KEEP_ANYWAY:
             continue
         published[candidate] = True
-        below, above = unprotected(
-            proofs.sums, proofs.targets, published, progress, proofs, any_one=True
-        )
-        if below.any() or above.any():
+        touched = proofs.sums.members[candidate]
+        suspects = np.asarray((proofs.targets.members @ touched.T).sum(axis=1)).ravel() > 0
+        if any_unprotected(proofs, published, suspects, progress):
             published[candidate] = False

@@ -11,7 +11,12 @@ from steadfield.algorithms.numeric.disclosure import Rules
 from steadfield.algorithms.numeric.errors import InputError
 from steadfield.algorithms.numeric.outsider import Sums, Targets, outsider_interval
 from steadfield.algorithms.numeric.publication import table_of
-from steadfield.algorithms.numeric.withholding import complementary_withholding, unprotected
+from steadfield.algorithms.numeric.withholding import (
+    Proofs,
+    any_unprotected,
+    complementary_withholding,
+    unprotected,
+)
 
 sys.path.insert(0, str(Path(__file__).parent.parent))
 import attacker
@@ -207,6 +212,26 @@ def test_the_choice_of_cells_is_not_determined_by_their_counts():
         result = withhold(table, np.random.default_rng(seed))
         chosen.update(np.flatnonzero(result.complementary).tolist())
     assert {1, 2, 3} <= chosen
+
+
+def test_the_quick_answer_agrees_with_the_full_check_whatever_was_proven_before():
+    rng = np.random.default_rng(23)
+    answers = []
+    for _ in range(25):
+        cells, cell_count, regions = practice_records(rng)
+        table = table_of(
+            cells, cell_count, Rules(10), regions=regions, region_totals=True, grand_total=True
+        )
+        proofs = Proofs(table.sums, table.targets)  # kept from one choice of sums to the next
+        published = withhold(table, rng).published
+        for row in rng.permutation(len(published))[:6]:
+            tried = published.copy()
+            tried[row] = ~tried[row]
+            below, above = unprotected(table.sums, table.targets, tried)  # from no proof at all
+            suspects = rng.random(len(below)) < 0.3
+            answers.append(bool(below.any() or above.any()))
+            assert any_unprotected(proofs, tried, suspects) == answers[-1]
+    assert 20 < sum(answers) < len(answers) - 20
 
 
 def cheapest_by_trial(table):
