@@ -11,6 +11,7 @@ MANTISSAS = (1.0, 2.0, 2.5, 3.0, 4.0, 5.0, 6.0, 7.5)
 LEAST_PLACES = 8
 LEAST_SHARE = 0.01
 EVIDENT = 6.0
+MOST = 0.5
 
 
 @dataclass(frozen=True)
@@ -108,6 +109,36 @@ def find_lattice(x, y, least_step, progress=silent):
         coarsest.on[inverse.ravel()],
         coarsest.share,
     )
+
+
+def lattice_spacing(x, y, nearest, least_step):
+    """Spacing of the lattice that most places lie on, 0 where they do not.
+
+    Where `find_lattice` sees none, the lattice may have been turned or bent by reprojection:
+    most places then have their nearest neighbour at nearly one distance, which at random hardly
+    two have. Such a lattice so sparsely used that this fails is not seen.
+
+    Parameters
+    ----------
+    x, y : (n,) arrays
+        Different places.
+    nearest : (m,) array
+        Distances from these places, or more of them, to the nearest other place.
+    least_step : float
+        Finer rounding does not matter; units of the coordinates.
+
+    Returns
+    -------
+    float
+    """
+    lattice = find_lattice(x, y, least_step)
+    if lattice is not None and lattice.share > MOST:
+        return lattice.step
+    if nearest.size < 20:
+        return 0.0
+    spacing = np.quantile(nearest, 0.05)
+    alike = np.abs(nearest - spacing) <= 0.02 * spacing
+    return float(np.median(nearest[alike])) if alike.mean() > MOST else 0.0
 
 
 def _tolerance(values, step):

@@ -109,15 +109,27 @@ class _LeaveOneOutSums:
         self.places = np.column_stack([x - x.min(), y - y.min()])
         self.weights = weights
         self.spectrum = spectrum
+        # few records are ever lonely, so neighbours are looked up when they are asked for
+        self._row = np.full(len(self.places), -1)
+        count = min(NEIGHBOURS + 1, len(self.places))
+        self._distances, self._indices = np.empty((0, count)), np.empty((0, count), np.int64)
 
     @cached_property
     def tree(self):
         return cKDTree(self.places)
 
-    @cached_property
-    def neighbours(self):
-        count = min(NEIGHBOURS + 1, len(self.places))
-        return self.tree.query(self.places, k=count, workers=-1)
+    def _neighbours(self, records):
+        """Distances and numbers of the nearest places of some records, themselves among them."""
+        new = records[self._row[records] < 0]
+        if len(new):
+            self._row[new] = len(self._distances) + np.arange(len(new))
+            found = self.tree.query(
+                self.places[new], k=np.arange(1, self._distances.shape[1] + 1), workers=-1
+            )
+            self._distances = np.concatenate([self._distances, found[0]])
+            self._indices = np.concatenate([self._indices, found[1]])
+        rows = self._row[records]
+        return self._distances[rows], self._indices[rows]
 
     def logs(self, bandwidth, progress):
         log_peak = -math.log(2 * math.pi * bandwidth**2)
@@ -146,7 +158,7 @@ class _LeaveOneOutSums:
         return logs
 
     def _lonely(self, records, bandwidth, progress):
-        distances, indices = (table[records] for table in self.neighbours)
+        distances, indices = self._neighbours(records)
         terms = np.log(self.weights)[indices] - 0.5 * (distances / bandwidth) ** 2
         terms[indices == records[:, None]] = -np.inf
         sums = _log_sum(terms)

@@ -43,7 +43,7 @@ def main():
     generator = np.random.default_rng(1)
     x, y = town(100_000, generator)
     weights = np.ones(x.size)
-    diagnosis = advice.diagnose(x, y, weights)
+    diagnosis = advice.diagnose(x, y, weights, bandwidth.normal_scale(x, y, weights))
     normal, widest = bandwidth.normal_scale(x, y), bandwidth.oversmoothed(x, y)
     bandwidths = advice.search_range(x, y, normal, widest, diagnosis)
     seconds = processor_seconds(lambda: crossvalidation.least_squares_scores(x, y, bandwidths))

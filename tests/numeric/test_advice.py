@@ -19,7 +19,7 @@ def turned(x, y, angle=0.3):
 
 def diagnosed(x, y):
     x, y, weights = bandwidth.checked_records(x, y)
-    return advice.diagnose(x, y, weights)
+    return advice.diagnose(x, y, weights, bandwidth.normal_scale(x, y, weights))
 
 
 def test_values_agree_with_their_own_rules():
@@ -138,6 +138,22 @@ def test_rounding_is_found_whatever_way_the_lattice_is_turned(angle):
     assert found.diagnosis.rounding == pytest.approx(100, rel=1e-6)
     assert any("rounded to a lattice of about 100 m" in words for words in found.warnings)
     assert found.bandwidths[0] >= 99.9
+
+
+def test_rounding_is_found_where_few_neighbours_are_one_step_apart():
+    # every place on whole kilometres, but most have no other one within a kilometre
+    x, y = np.random.default_rng(8).integers(0, 60, (2, 180)) * 1000.0
+    nearest = advice.nearest_distances(*np.unique(np.c_[x, y], axis=0).T)
+    assert np.mean(nearest == 1000) < 0.5
+    assert diagnosed(x, y).rounding == 1000
+    found = advice.advise(x, y)
+    assert found.bandwidths[0] >= 999.9
+
+
+def test_coordinates_of_which_fewer_than_half_are_rounded_do_not_bound_the_bandwidth():
+    x, y = round_cloud(600)
+    x[:200], y[:200] = np.round(x[:200] / 300) * 300, np.round(y[:200] / 300) * 300
+    assert diagnosed(x, y).rounding == 0.0
 
 
 def test_rounding_is_not_seen_in_random_places():
