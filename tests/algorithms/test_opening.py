@@ -3,11 +3,14 @@
 import numpy as np
 import pytest
 from qgis.core import (
+    QgsLayerTreeModel,
     QgsProcessingException,
     QgsProcessingOutputLayerDefinition,
     QgsProject,
     QgsVectorLayer,
 )
+from qgis.gui import QgsLayerTreeView
+from qgis.PyQt.QtCore import QModelIndex
 
 TENTH = 2
 FROM_ABOVE = [
@@ -35,11 +38,21 @@ def project(provider):
 
 
 @pytest.fixture
-def load(project):
+def load(project, monkeypatch):
     """Run an algorithm and load its results as its dialog does; returns them from above."""
     import processing
+    from processing.gui import Postprocessing
+
+    # newer hosts take nothing but a real view of the layers
+    view = QgsLayerTreeView()
+    view.setModel(QgsLayerTreeModel(project.layerTreeRoot(), view))
+    iface = getattr(Postprocessing, "iface", None)
+    if iface is not None:
+        monkeypatch.setattr(iface, "layerTreeView", lambda: view, raising=False)
 
     def runner(algorithm, **parameters):
+        # newer hosts put results above the layer that is chosen
+        view.setCurrentIndex(QModelIndex())
         processing.runAndLoadResults(f"steadfield:{algorithm}", parameters)
         return [node.layer() for node in project.layerTreeRoot().findLayers()]
 
