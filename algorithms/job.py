@@ -5,7 +5,7 @@ import os
 from qgis.core import QgsProcessingException
 
 from ..plugin import opening, outputs, rasters
-from ..plugin.files import partial_path, put_in_place
+from ..plugin.files import whole_file
 from ..plugin.host import TABLE
 from ..plugin.pictures import drawing_to_png
 from ..plugin.report import versions
@@ -180,18 +180,13 @@ class Job(Inputs):
         self.results[name] = path
 
     def _write_whole(self, name, path, content):
-        waiting = partial_path(path)
         try:
-            with open(waiting, "wb") as file:
+            with whole_file(path) as waiting, open(waiting, "wb") as file:
                 file.write(content)
-            put_in_place(waiting, path)
         except OSError as error:
             raise InputError(
                 tr("{}: the file cannot be written: {}").format(self.label(name), error.strerror)
             ) from error
-        finally:
-            if os.path.exists(waiting):
-                os.remove(waiting)
         self._written.append(path)
 
     def write_drawing(self, name, svg):

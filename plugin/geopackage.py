@@ -1,6 +1,5 @@
 """Several styled layers in one GeoPackage that appears only when it is whole."""
 
-import os
 from dataclasses import dataclass
 
 import numpy as np
@@ -9,7 +8,7 @@ from qgis.core import QgsVectorFileWriter, QgsVectorLayer, QgsWkbTypes
 
 from ..algorithms.numeric.errors import InputError
 from ..algorithms.numeric.progress import part
-from .files import partial_path, put_in_place
+from .files import whole_file
 from .outputs import as_multipolygons, fields_of, fill_sink
 from .text import tr
 
@@ -63,8 +62,7 @@ def write_geopackage(path, crs, tables, transform_context, progress):
     InputError
         A layer cannot be written.
     """
-    waiting = partial_path(path)
-    try:
+    with whole_file(path, ("-wal", "-shm", "-journal")) as waiting:
         ends = np.cumsum([0] + [len(table.geometry) for table in tables])
         ends = 0.9 * ends / max(ends[-1], 1)
         for number, table in enumerate(tables):
@@ -74,11 +72,6 @@ def write_geopackage(path, crs, tables, transform_context, progress):
         for number, table in enumerate(tables):
             _save_style(waiting, table)
             progress(0.9 + 0.1 * (number + 1) / len(tables))
-        put_in_place(waiting, path)
-    finally:
-        for left_over in (waiting, waiting + "-wal", waiting + "-shm", waiting + "-journal"):
-            if os.path.exists(left_over):
-                os.remove(left_over)
 
 
 def _write_table(path, crs, table, first, transform_context, progress):

@@ -11,7 +11,7 @@ from osgeo import gdal, ogr, osr
 from ..algorithms.numeric.errors import InputError
 from ..algorithms.numeric.grid import Grid
 from ..algorithms.numeric.progress import part
-from .files import partial_path, put_in_place
+from .files import whole_file
 from .text import tr
 
 NO_DATA = -9999.0
@@ -105,31 +105,27 @@ def write_picture(path, grid, crs, windows, levels_of, progress):
 def _write_whole(path, grid, crs, count, kind, options, fill):
     """Create a raster beside its place, have it filled, and put it there when it is whole."""
     driver = _driver_for(path)
-    waiting = partial_path(path)
     try:
-        dataset = _created(driver, waiting, grid, crs, count, kind, options)
-        try:
-            fill(dataset)
-            if dataset.FlushCache() not in (None, 0):
-                raise OSError(gdal.GetLastErrorMsg())
-        except BaseException as error:
-            # the library closes a file with its last reference, and frames of the error hold some
-            traceback.clear_frames(error.__traceback__)
-            raise
-        finally:
-            # not every system lets an open file be moved or removed
-            del dataset
-        put_in_place(waiting, path)
+        with whole_file(path, (".aux.xml",)) as waiting:
+            dataset = _created(driver, waiting, grid, crs, count, kind, options)
+            try:
+                fill(dataset)
+                if dataset.FlushCache() not in (None, 0):
+                    raise OSError(gdal.GetLastErrorMsg())
+            except BaseException as error:
+                # the library closes a file with its last reference, and frames of the error hold
+                # some
+                traceback.clear_frames(error.__traceback__)
+                raise
+            finally:
+                # not every system lets an open file be moved or removed
+                del dataset
     except (RuntimeError, OSError) as error:
         raise InputError(
             tr("The raster {} cannot be written: {}").format(
                 os.path.basename(path), getattr(error, "strerror", None) or error
             )
         ) from error
-    finally:
-        for left_over in (waiting, waiting + ".aux.xml"):
-            if os.path.exists(left_over):
-                os.remove(left_over)
 
 
 def _created(driver, path, grid, crs, count, kind, options):

@@ -41,16 +41,12 @@ class Behind:
     def spread(self, cells, cell_count):
         """The same among all cells of a tiling, of which these hold records."""
 
-        def among_all(own):
-            every = np.zeros(cell_count, own.dtype)
-            every[cells] = own
-            return every
-
         def all_of(part):
-            return Contributions(*(among_all(getattr(part, one.name)) for one in fields(part)))
+            columns = (getattr(part, one.name) for one in fields(part))
+            return Contributions(*(_among_all(own, cells, cell_count) for own in columns))
 
         parts = tuple(all_of(part) for part in self.parts)
-        return Behind(all_of(self.whole), parts, among_all(self.unsafe))
+        return Behind(all_of(self.whole), parts, _among_all(self.unsafe, cells, cell_count))
 
 
 @dataclass(frozen=True)
@@ -83,9 +79,13 @@ class Table:
 
     def spread(self, per_sum, cell_count, empty):
         """Bring a value per sum to all cells of the tiling, `empty` where no record lies."""
-        result = np.full(cell_count, empty)
-        result[self.cells] = per_sum[: len(self.cells)]
-        return result
+        return _among_all(per_sum[: len(self.cells)], self.cells, cell_count, empty)
+
+
+def _among_all(values, cells, cell_count, empty=0):
+    every = np.full(cell_count, empty, values.dtype)
+    every[cells] = values
+    return every
 
 
 def stand_behind(cells, cell_count, rules, weights=None, contributors=None, numerator=None):
