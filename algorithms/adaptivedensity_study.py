@@ -6,7 +6,7 @@ from dataclasses import dataclass
 import numpy as np
 import shapely
 
-from ..plugin.text import number, percent, said, tr
+from ..plugin.text import number, percent, tr
 from .numeric import bandwidth, edges, surface
 from .numeric.adaptation import adapt_bandwidths
 from .numeric.errors import InputError
@@ -135,10 +135,8 @@ def overall_bandwidth(job, x, y, weight):
     asked = job.length("BANDWIDTH")
     if asked > 0:
         return asked, False
-    try:
+    with job.naming("BANDWIDTH"):
         found = bandwidth.normal_scale(x, y, weight)
-    except InputError as error:
-        raise InputError(f"{job.label('BANDWIDTH')}: {said(error)}") from error
     job.inform(
         tr("Bandwidth chosen by the normal-scale rule: {} m").format(
             number(found * job.working.metres)

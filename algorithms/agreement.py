@@ -8,7 +8,7 @@ import numpy as np
 from ..plugin import alignment, looks
 from ..plugin.outputs import Column
 from ..plugin.rasters import Band, label_polygons
-from ..plugin.text import number, said, tr
+from ..plugin.text import number, tr
 from . import agreement_page
 from .base import SteadfieldAlgorithm
 from .numeric import agreement, ranks, shifts
@@ -214,10 +214,8 @@ def read_ranks(job, layers, grid, progress):
                     layer.name, number(np.count_nonzero(negative))
                 )
             )
-        try:
+        with job.naming("LAYERS", layer.name):
             ranked[position] = ranks.mass_rank(values[position])
-        except InputError as error:
-            raise InputError(f"{job.label('LAYERS')}: {layer.name}: {said(error)}") from error
     return values, ranked
 
 

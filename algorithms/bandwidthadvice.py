@@ -8,7 +8,6 @@ from ..plugin.text import number, said, tr
 from .bandwidthadvice_page import write_page
 from .base import SteadfieldAlgorithm
 from .numeric.advice import advise
-from .numeric.errors import InputError
 from .numeric.progress import part
 
 
@@ -48,7 +47,7 @@ class BandwidthAdvice(SteadfieldAlgorithm):
         metres = job.working.metres
         if boundary is not None and metres != 1.0:
             boundary = shapely.transform(boundary, lambda places: places * metres)
-        try:
+        with job.naming("RECORDS"):
             advice = advise(
                 records.x * metres,
                 records.y * metres,
@@ -56,8 +55,6 @@ class BandwidthAdvice(SteadfieldAlgorithm):
                 boundary,
                 part(job.progress, 0.1, 0.9),
             )
-        except InputError as error:
-            raise InputError(f"{job.label('RECORDS')}: {said(error)}") from error
         for words in advice.warnings:
             job.warn(words)
         give_numbers(job, advice)

@@ -6,7 +6,7 @@ from qgis.core import QgsProcessingParameterRasterLayer
 from ..plugin import alignment, looks
 from ..plugin.outputs import Column
 from ..plugin.rasters import label_polygons
-from ..plugin.text import listed, number, percent, said, tr
+from ..plugin.text import listed, number, percent, tr
 from .adaptivedensity_study import MEMORY_SHARE, machine_memory
 from .base import SteadfieldAlgorithm
 from .densityoutlines_page import write_page
@@ -85,10 +85,8 @@ class DensityOutlines(SteadfieldAlgorithm):
         shares = asked_shares(job)
         layer, grid, density = read_density(job, len(shares))
         job.progress(0.15)
-        try:
+        with job.naming("DENSITY"):
             levels = density_levels(density, shares)
-        except InputError as error:
-            raise InputError(f"{job.label('DENSITY')}: {said(error)}") from error
         regions = density_regions(density, levels, grid.cell, part(job.progress, 0.2, 0.5))
         inside = records_inside(job, grid, regions)
         kept = large_enough(job, levels, regions)

@@ -7,7 +7,7 @@ import numpy as np
 from ..plugin import looks
 from ..plugin.outputs import Column
 from ..plugin.rasters import Band, label_polygons
-from ..plugin.text import number, percent, said, tr
+from ..plugin.text import number, percent, tr
 from .base import SteadfieldAlgorithm
 from .densityratio_page import write_page
 from .densityratio_study import WEIGHTS_MEAN, prepare
@@ -192,10 +192,8 @@ def asked_levels(job):
             tr("{}: at least one percentage is expected; found none.").format(job.label("LEVELS"))
         )
     if count:
-        try:
+        with job.naming("LEVELS"):
             check_levels(levels, count)
-        except InputError as error:
-            raise InputError(f"{job.label('LEVELS')}: {said(error)}") from error
     return levels
 
 

@@ -6,7 +6,7 @@ from dataclasses import dataclass
 import numpy as np
 import shapely
 
-from ..plugin.text import number, said, tr
+from ..plugin.text import number, tr
 from .adaptivedensity_study import MEMORY_SHARE, machine_memory
 from .numeric import contrast, edges
 from .numeric.errors import InputError
@@ -124,10 +124,8 @@ def overall_bandwidth(job, pooled):
     asked = job.length("BANDWIDTH")
     if asked > 0:
         return asked, False
-    try:
+    with job.naming("BANDWIDTH"):
         found = contrast.common_bandwidth(pooled)
-    except InputError as error:
-        raise InputError(f"{job.label('BANDWIDTH')}: {said(error)}") from error
     job.inform(
         tr("Bandwidth chosen from the pooled points: {} m").format(
             number(found * job.working.metres)

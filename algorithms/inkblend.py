@@ -4,7 +4,7 @@ import numpy as np
 from qgis.core import QgsProcessingParameterFileDestination
 
 from ..plugin import alignment, looks
-from ..plugin.text import listed, number, said, tr
+from ..plugin.text import listed, number, tr
 from . import ink_pages
 from .base import SteadfieldAlgorithm
 from .numeric import ink, ranks
@@ -142,10 +142,8 @@ def chosen_inks(job, names):
     text = job.words("INKS")
     if not text:
         return ink.default_inks(len(names))
-    try:
+    with job.naming("INKS"):
         inks = ink.own_inks(text, len(names))
-    except InputError as error:
-        raise InputError(f"{job.label('INKS')}: {said(error)}") from error
     job.inform(tr("Inks at one lightness: {}").format(", ".join(to_hex(inks))))
     for words in ink.warnings_in_words(inks, names):
         job.warn(words)
@@ -191,10 +189,8 @@ def strength_tables(job, layers, windows, stretch, strengths, progress):
                     layer.name, number(ranks.negative_mass(masses))
                 )
             )
-        try:
+        with job.naming("LAYERS", layer.name):
             table = ranks.strength_table(masses, stretch)
-        except InputError as error:
-            raise InputError(f"{job.label('LAYERS')}: {layer.name}: {said(error)}") from error
         tables.append(table * np.float32(strength))
         steps.append(ranks.coarsest_rank_step(masses))
     return tables, steps

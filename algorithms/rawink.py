@@ -11,7 +11,7 @@ from qgis.core import (
 from ..plugin import alignment, layers, looks, rasters
 from ..plugin.host import ANY_VECTOR
 from ..plugin.reference_system import reproject
-from ..plugin.text import listed, number, said, tr
+from ..plugin.text import listed, number, tr
 from . import ink_pages
 from .base import SteadfieldAlgorithm
 from .inkblend import add_inks, add_legend, chosen_inks
@@ -228,10 +228,8 @@ def strengths_of(job, counts, names):
     """Strength of each layer, and how many features nearly fill a pixel of it."""
     strengths, full = [], []
     for one, name in zip(counts, names):
-        try:
+        with job.naming("LAYERS", name):
             chosen, most = rawink.ink_per_feature(one)
-        except InputError as error:
-            raise InputError(f"{job.label('LAYERS')}: {name}: {said(error)}") from error
         asked = job.real("INK_PER_FEATURE")
         if asked:
             chosen, most = asked, rawink.features_to_fill(asked)

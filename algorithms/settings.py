@@ -114,10 +114,8 @@ class Settings:
 
     def numbers(self, name):
         """Numbers from a text such as ``100, 200; 400``; empty list where none is given."""
-        try:
+        with self.naming(name):
             return numbers_in(self.words(name))
-        except InputError as error:
-            raise InputError(f"{self.label(name)}: {said(error)}") from error
 
     def seed(self):
         """The seed of this run: given, or drawn and then logged, reported and returned."""
